@@ -1,0 +1,411 @@
+"""Readings: place, quantity, value, standard deviation, group; and what a field would read.
+
+A reading is one row of a table: a place with one or several measured quantities.  Each
+quantity is one scalar *component*; the arrays ``component_*`` list all of them.
+"""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Sequence
+from dataclasses import dataclass
+from functools import cached_property
+from typing import TYPE_CHECKING, Any, Protocol
+
+import numpy as np
+
+from ..errors import ReadingError
+from .table import AXIS_DIRECTION, DIRECTION, PLACE, VALUES, Table, read_table
+
+if TYPE_CHECKING:
+    import pandas
+
+COMPONENT, SPEED, PRESSURE = 0, 1, 2
+
+
+class Quantity(Protocol):
+    """A measured quantity, for k readings at once."""
+
+    @property
+    def unit(self) -> str:
+        """SI unit of the value."""
+
+    def value(self, velocity: np.ndarray, pressure: np.ndarray) -> np.ndarray:
+        """(k,) what the instrument reads in a velocity (k, 3) and pressure (k,)."""
+
+    def direction(self, velocity: np.ndarray) -> np.ndarray:
+        """(k, 3) derivative of the value with respect to the velocity."""
+
+
+@dataclass(frozen=True, eq=False)
+class Component:
+    """Velocity component along given unit vectors (k, 3)."""
+
+    along: np.ndarray
+    unit: str = "m/s"
+
+    def value(self, velocity: np.ndarray, pressure: np.ndarray) -> np.ndarray:
+        """(k,) velocity along the direction [m/s]."""
+        return np.einsum("ij,ij->i", self.along, velocity)
+
+    def direction(self, velocity: np.ndarray) -> np.ndarray:
+        """(k, 3) the direction itself."""
+        return self.along
+
+
+@dataclass(frozen=True)
+class Speed:
+    """Magnitude of the velocity."""
+
+    unit: str = "m/s"
+
+    def value(self, velocity: np.ndarray, pressure: np.ndarray) -> np.ndarray:
+        """(k,) speed [m/s]."""
+        return np.linalg.norm(velocity, axis=1)
+
+    def direction(self, velocity: np.ndarray) -> np.ndarray:
+        """(k, 3) unit vector along the velocity, zero where the fluid rests."""
+        speed = np.linalg.norm(velocity, axis=1)[:, None]
+        return np.divide(velocity, speed, out=np.zeros_like(velocity), where=speed > 0)
+
+
+@dataclass(frozen=True)
+class Pressure:
+    """Static pressure."""
+
+    unit: str = "Pa"
+
+    def value(self, velocity: np.ndarray, pressure: np.ndarray) -> np.ndarray:
+        """(k,) pressure [Pa]."""
+        return np.asarray(pressure)
+
+    def direction(self, velocity: np.ndarray) -> np.ndarray:
+        """(k, 3) zeros: a pressure does not depend on the velocity at its own place."""
+        return np.zeros_like(velocity)
+
+
+@dataclass(frozen=True, eq=False, init=False)
+class Readings:
+    """A table of readings in SI.
+
+    Parameters
+    ----------
+    table : path or DataFrame
+        As for :func:`read_readings`.
+
+    Attributes
+    ----------
+    point : (n, 3) [m]
+    name, group : tuple of str, length n
+    time : (n,) [s], NaN where the reading is a mean
+    component_place : (m,) int32
+        Row of the place of each component.
+    component_quantity : (m,) int32
+        Position of its quantity in ``quantities``: 0 velocity component, 1 speed, 2 pressure.
+    component_direction : (m, 3)
+        Unit vector of a velocity component, NaN for speed and pressure.
+    component_value, component_std : (m,) [m/s or Pa]
+
+    Raises
+    ------
+    ReadingError
+        The table cannot be used.
+    """
+
+    point: np.ndarray
+    name: tuple[str, ...]
+    group: tuple[str, ...]
+    time: np.ndarray
+    component_place: np.ndarray
+    component_quantity: np.ndarray
+    component_direction: np.ndarray
+    component_value: np.ndarray
+    component_std: np.ndarray
+
+    def __init__(self, table: str | os.PathLike[str] | pandas.DataFrame) -> None:
+        _fill(self, **_components(read_table(table)))
+
+    def __len__(self) -> int:
+        return len(self.name)
+
+    def __str__(self) -> str:
+        from .sheet import readings_sheet
+        return readings_sheet(self)
+
+    def __repr__(self) -> str:
+        return (f"Readings({len(self)} places, {self.n_components} components; groups: "
+                f"{', '.join(self.groups)})")
+
+    @property
+    def n_components(self) -> int:
+        """Number m of scalar components."""
+        return len(self.component_value)
+
+    @property
+    def groups(self) -> tuple[str, ...]:
+        """Names of the groups in the order they appear."""
+        return tuple(dict.fromkeys(self.group))
+
+    @cached_property
+    def quantities(self) -> tuple[tuple[Quantity, np.ndarray], ...]:
+        """Component, Speed and Pressure, each with the components (k,) it stands for."""
+        which = [np.flatnonzero(self.component_quantity == code).astype(np.int32)
+                 for code in (COMPONENT, SPEED, PRESSURE)]
+        along = self.component_direction[which[COMPONENT]]
+        return tuple(zip((Component(along), Speed(), Pressure()), which, strict=True))
+
+    @cached_property
+    def component_label(self) -> tuple[str, ...]:
+        """Column name of each component: u, v, w, along, speed or p."""
+        labels = np.array(["along", "speed", "p"], dtype=object)[self.component_quantity]
+        for axis, unit_vector in AXIS_DIRECTION.items():
+            labels[np.all(self.component_direction == unit_vector, axis=1)] = axis
+        return tuple(labels)
+
+    def select(self, places: np.ndarray, *, components: np.ndarray | None = None) -> Readings:
+        """Readings at some places, optionally with some of their components only.
+
+        Parameters
+        ----------
+        places : (n,) bool
+        components : (m,) bool, optional
+            Places that lose all their components are dropped.
+        """
+        keep = np.asarray(places, dtype=bool)[self.component_place]
+        if components is not None:
+            keep = keep & components
+            held = np.zeros(len(self), dtype=bool)
+            held[self.component_place[keep]] = True
+            places = places & held
+        rows = np.flatnonzero(places)
+        number = np.full(len(self), -1)
+        number[rows] = np.arange(len(rows))
+        return _changed(self, point=self.point[rows], name=tuple(self.name[k] for k in rows),
+                        group=tuple(self.group[k] for k in rows), time=self.time[rows],
+                        component_place=number[self.component_place[keep]],
+                        component_quantity=self.component_quantity[keep],
+                        component_direction=self.component_direction[keep],
+                        component_value=self.component_value[keep],
+                        component_std=self.component_std[keep])
+
+    def split(self, *, withheld: str | Sequence[str]) -> tuple[Readings, Readings]:
+        """Used and withheld readings, by group.
+
+        Parameters
+        ----------
+        withheld : names of the groups to withhold
+
+        Raises
+        ------
+        ReadingError
+            A group that is not in the table, or no reading left on one side.
+        """
+        asked = [withheld] if isinstance(withheld, str) else list(withheld)
+        groups = "groups in the table: " + ", ".join(self.groups)
+        for group in asked:
+            if group not in self.groups:
+                raise ReadingError("A group to withhold is not in the table.",
+                                   where="split(withheld=...)", got=repr(group),
+                                   remedy=f"Choose among the {groups}.")
+        away = np.array([group in asked for group in self.group])
+        if away.all() or not away.any():
+            raise ReadingError("Both used and withheld readings are needed.",
+                               where="split(withheld=...)", got=f"withheld: {asked}",
+                               remedy=f"Withhold some but not all of the {groups}.")
+        return self.select(~away), self.select(away)
+
+    def velocity_only(self) -> Readings:
+        """The same readings without pressures."""
+        return self.select(np.ones(len(self), dtype=bool),
+                           components=self.component_quantity != PRESSURE)
+
+    def with_values(self, values: np.ndarray) -> Readings:
+        """The same readings with other values (m,) in SI; NaN stands for a lost value."""
+        values = np.array(values, dtype=np.float64)
+        if values.shape != self.component_value.shape or np.isinf(values).any():
+            raise ReadingError("New values do not fit the readings.", where="with_values",
+                               got=f"shape {values.shape}, {int(np.isinf(values).sum())} infinite",
+                               remedy=f"Give {self.n_components} finite values.")
+        return _changed(self, component_value=values)
+
+    def placed(self, *, rotation: Any = None, shift: Sequence[float] = (0.0, 0.0, 0.0),
+               scale: float = 1.0) -> Readings:
+        """Take rig axes to mesh axes: point = rotation (scale point) + shift.
+
+        Measured components turn with the axes: after a quarter turn about z a ``u`` is a
+        ``v``, after any other turn a component along the turned axis.
+
+        Parameters
+        ----------
+        rotation : (3, 3) or scipy.spatial.transform.Rotation, optional
+        shift : (3,) [m], in mesh axes
+        scale : float
+            Of lengths only; the velocities stay.
+
+        Raises
+        ------
+        ReadingError
+            The rotation is no rotation, or shift or scale cannot be used.
+        """
+        matrix, offset = _placing(rotation, shift, scale)
+        direction, sign = _named_axes(self.component_direction @ matrix.T)
+        return _changed(self, point=scale * self.point @ matrix.T + offset,
+                        component_direction=direction, component_value=sign * self.component_value)
+
+    def frame(self) -> pandas.DataFrame:
+        """One row per component, in SI: place, quantity, direction, value and std."""
+        import pandas as pd
+        row = self.component_place
+        label = self.component_label
+        columns: dict[str, Any] = {"name": [self.name[k] for k in row],
+                                   "group": [self.group[k] for k in row]}
+        columns |= {f"{axis} [m]": self.point[row, k] for k, axis in enumerate(PLACE)}
+        columns |= {"time [s]": self.time[row], "quantity": list(label)}
+        columns |= {axis: self.component_direction[:, k] for k, axis in enumerate(DIRECTION)}
+        columns |= {"value": self.component_value, "std": self.component_std,
+                    "unit": [VALUES[kind].unit for kind in label]}
+        return pd.DataFrame(columns)
+
+
+def read_readings(source: str | os.PathLike[str] | pandas.DataFrame) -> Readings:
+    """Readings of a CSV file or a DataFrame; units stand in the header.
+
+    Parameters
+    ----------
+    source : path or DataFrame
+        Columns ``x [mm], y [mm], z [mm]``; any of ``u, v, w, speed, along [m/s], p [Pa]``,
+        each with its standard deviation beside it (``u_std [m/s]``); ``nx, ny, nz`` with
+        ``along``; ``name``, ``group`` and ``time [s]`` as wanted.  An empty cell means that
+        nothing was measured.  Other units: see :mod:`fv3d.measured.units`.
+
+    Returns
+    -------
+    Readings
+
+    Raises
+    ------
+    ReadingError
+        The table cannot be used: what, which row and column, what was got, what to do.
+    """
+    return Readings(source)
+
+
+def predict(readings: Readings, velocity: np.ndarray, *, pressure: np.ndarray) -> np.ndarray:
+    """What the instruments would read in a given field.
+
+    Parameters
+    ----------
+    readings : Readings
+    velocity : (n, 3) [m/s], pressure : (n,) [Pa]
+        At the places of the readings.
+
+    Returns
+    -------
+    (m,) array [m/s or Pa], one per component
+    """
+    value = np.empty(readings.n_components)
+    for quantity, which in readings.quantities:
+        row = readings.component_place[which]
+        value[which] = quantity.value(velocity[row], pressure[row])
+    return value
+
+
+def linearised_direction(readings: Readings, velocity: np.ndarray) -> np.ndarray:
+    """(m, 3) derivative of each component with respect to the velocity (n, 3) at its place."""
+    direction = np.empty((readings.n_components, 3))
+    for quantity, which in readings.quantities:
+        direction[which] = quantity.direction(velocity[readings.component_place[which]])
+    return direction
+
+
+def observe(run: Any, readings: Readings) -> np.ndarray:
+    """(m,) what the instruments would read in a run [m/s or Pa].
+
+    Raises
+    ------
+    Fv3dError
+        A reading lies outside the mesh.
+    """
+    sample = run.sample(readings.point)
+    return predict(readings, sample.velocity, pressure=sample.pressure)
+
+
+def _fill(readings: Readings, **parts: Any) -> None:
+    for key, part in parts.items():
+        if isinstance(part, np.ndarray):
+            kind = np.int32 if key in ("component_place", "component_quantity") else np.float64
+            part = np.array(part, dtype=kind)
+            part.flags.writeable = False
+        object.__setattr__(readings, key, part)
+
+
+def _changed(readings: Readings, **parts: Any) -> Readings:
+    changed = object.__new__(Readings)
+    kept = {key: getattr(readings, key) for key in Readings.__dataclass_fields__}
+    _fill(changed, **(kept | parts))
+    return changed
+
+
+def _components(table: Table) -> dict[str, Any]:
+    """Flatten the columns of a table: place after place, within a place column after column."""
+    n = len(table.name)
+    numbers = table.numbers
+    columns = [column for column in VALUES if column in numbers]
+    value = np.stack([numbers[column] for column in columns], axis=1)
+    std = np.stack([numbers[f"{column}_std"] for column in columns], axis=1)
+    code = {"speed": SPEED, "p": PRESSURE}
+    kind = np.array([code.get(column, COMPONENT) for column in columns])
+    direction = np.full((n, len(columns), 3), np.nan)
+    for k, column in enumerate(columns):
+        if column in AXIS_DIRECTION:
+            direction[:, k] = AXIS_DIRECTION[column]
+        elif column == "along":
+            given = np.stack([numbers[axis] for axis in DIRECTION], axis=1)
+            with np.errstate(invalid="ignore"):
+                direction[:, k] = given / np.linalg.norm(given, axis=1)[:, None]
+    row, column_of = np.nonzero(~np.isnan(value))
+    turned, sign = _named_axes(direction[row, column_of])
+    return {"point": np.stack([numbers[axis] for axis in PLACE], axis=1),
+            "name": table.name, "group": table.group,
+            "time": numbers.get("time", np.full(n, np.nan)),
+            "component_place": row, "component_quantity": kind[column_of],
+            "component_direction": turned, "component_value": sign * value[row, column_of],
+            "component_std": std[row, column_of]}
+
+
+def _named_axes(direction: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Directions (m, 3) within rounding of plus or minus an axis become that axis; and the sign."""
+    direction = direction.copy()
+    sign = np.ones(len(direction))
+    for unit_vector in AXIS_DIRECTION.values():
+        share = direction @ np.array(unit_vector)
+        across = np.linalg.norm(direction - share[:, None] * np.array(unit_vector), axis=1)
+        near = across < 1e-12
+        direction[near] = unit_vector
+        sign[near & (share < 0)] = -1.0
+    return direction, sign
+
+
+def _placing(rotation: Any, shift: Any, scale: Any) -> tuple[np.ndarray, np.ndarray]:
+    if rotation is None:
+        rotation = np.eye(3)
+    matrix = rotation.as_matrix() if hasattr(rotation, "as_matrix") else rotation
+    try:
+        matrix = np.array(matrix, dtype=np.float64)
+        offset = np.array(shift, dtype=np.float64)
+        factor = float(scale)
+    except (TypeError, ValueError):
+        raise ReadingError("Rotation, shift and scale must be numbers.", where="placed",
+                           got=f"{rotation!r}, {shift!r}, {scale!r}",
+                           remedy="Give a 3 x 3 matrix, three lengths and a factor.") from None
+    if matrix.shape != (3, 3) or not np.allclose(matrix @ matrix.T, np.eye(3), atol=1e-6) \
+            or not np.linalg.det(matrix) > 0:
+        raise ReadingError("The rotation is no rotation.", where="placed(rotation=...)",
+                           got=np.round(matrix, 6).tolist(),
+                           remedy="Give an orthonormal right-handed 3 x 3 matrix; a mirrored axis "
+                                  "is turned round in the table.")
+    if offset.shape != (3,) or not np.isfinite(offset).all() or not 0 < factor < np.inf:
+        raise ReadingError("Shift or scale cannot be used.", where="placed",
+                           got=f"shift {np.asarray(shift).tolist()}, scale {factor:g}",
+                           remedy="Give three finite lengths [m] and a positive factor.")
+    return matrix, offset
