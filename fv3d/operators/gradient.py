@@ -1,0 +1,149 @@
+"""Cell gradients as weighted sums of differences: weights once per mesh, one kernel for all.
+
+A gradient method turns the mesh into weights ``W`` such that
+
+    gradient(cell) = sum over faces of W (other value - own value),
+
+where *other* is the neighbouring cell or the value on a boundary face.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+
+from ..mesh.mesh import Mesh
+from . import kernels
+
+
+@dataclass(frozen=True, eq=False)
+class BoundaryKnowledge:
+    """What is known of a field on each boundary face, (n_boundary,) booleans.
+
+    ``valued``: the boundary value is known and enters the gradient; ``flat``: only that the
+    normal derivative is zero; neither: nothing is known there, the face stays out.
+    """
+
+    valued: np.ndarray
+    flat: np.ndarray
+
+    @staticmethod
+    def everywhere(mesh: Mesh) -> BoundaryKnowledge:
+        """A value on every boundary face."""
+        return BoundaryKnowledge(np.ones(mesh.n_boundary, bool), np.zeros(mesh.n_boundary, bool))
+
+
+@dataclass(frozen=True, eq=False)
+class GradientOperator:
+    """Weights of one gradient method on one mesh.
+
+    Attributes
+    ----------
+    offsets : (n_cells + 1,) int32
+    other : (k,) int32
+        Cell across the face, or ``n_cells + b`` for boundary face ``b``.
+    weights : (k, 3) [1/m]
+    poor : (p,) int32
+        Cells whose own neighbours leave a direction undetermined.
+    missing : (p, 3, 3)
+        Projector on these directions, filled from the neighbours' gradients.
+    """
+
+    offsets: np.ndarray
+    other: np.ndarray
+    weights: np.ndarray
+    poor: np.ndarray
+    missing: np.ndarray
+
+    def __call__(self, cell_values: np.ndarray, boundary_values: np.ndarray) -> np.ndarray:
+        """Gradient of a scalar (n_cells,) -> (n_cells, 3) or vector (n_cells, k) -> (n_cells, k, 3).
+
+        For vectors ``[c, i, j]`` is the derivative of component ``i`` along axis ``j``.
+        """
+        scalar = cell_values.ndim == 1
+        cells = cell_values[:, None] if scalar else cell_values
+        edge = boundary_values[:, None] if scalar else boundary_values
+        out = np.empty((len(cells), cells.shape[1], 3))
+        kernels.weighted_gradient(self.offsets, self.other, self.weights,
+                                  np.ascontiguousarray(cells), np.ascontiguousarray(edge), out)
+        if self.poor.size:
+            self._complete(out)
+        return out[:, 0] if scalar else out
+
+    def _complete(self, out: np.ndarray) -> None:
+        n_cells = len(out)
+        is_poor = np.zeros(n_cells, bool)
+        is_poor[self.poor] = True
+        for cell, project in zip(self.poor, self.missing, strict=True):
+            around = self.other[self.offsets[cell]:self.offsets[cell + 1]]
+            around = around[around < n_cells]
+            rich = around[~is_poor[around]]
+            if rich.size:
+                out[cell] += out[rich].mean(axis=0) @ project
+
+
+class GradientMethod(Protocol):
+    """A way to turn a mesh into gradient weights."""
+
+    order: int
+
+    def weights(self, mesh: Mesh, known: BoundaryKnowledge) -> GradientOperator:
+        """Weights on this mesh."""
+        ...
+
+
+@dataclass(frozen=True)
+class LeastSquares:
+    """Least-squares gradient over face neighbours and boundary faces.
+
+    Differences are weighted by ``1 / distance**power``.  Exact on linear fields on any mesh.
+    Directions that no neighbour determines (corner tetrahedra, meshes one cell thick) are taken
+    from the neighbouring cells' gradients, or zero where these have none either.
+
+    Source: Barth, T. J. (1991), AIAA Paper 91-0721.
+    """
+
+    power: float = 2.0
+    order: int = 1
+
+    def weights(self, mesh: Mesh, known: BoundaryKnowledge) -> GradientOperator:
+        """Weights on this mesh, see :class:`GradientOperator`."""
+        offsets, faces, sign = mesh.cell_faces
+        cell = np.repeat(np.arange(mesh.n_cells), np.diff(offsets))
+        inside = faces < mesh.n_internal
+        other = np.where(sign > 0, 0, mesh.left[faces]).astype(np.int64)
+        ahead = inside & (sign > 0)
+        other[ahead] = mesh.right[faces[ahead]]
+        other[~inside] = mesh.n_cells + faces[~inside] - mesh.n_internal
+        arm = mesh.delta[faces] * sign[:, None]
+        importance = np.linalg.norm(arm, axis=1) ** -self.power
+        edge = np.flatnonzero(~inside)
+        b = faces[edge] - mesh.n_internal
+        used = np.ones(len(faces))
+        used[edge] = known.valued[b]
+        flat = edge[known.flat[b]]
+        normal = mesh.face_normal[faces[flat]]
+        across = normal * np.einsum("ij,ij->i", arm[flat], normal)[:, None]
+        matrix = np.zeros((mesh.n_cells, 3, 3))
+        for i in range(3):
+            for j in range(i, 3):
+                term = used * importance * arm[:, i] * arm[:, j]
+                term[flat] += importance[flat] * across[:, i] * across[:, j]
+                matrix[:, i, j] = matrix[:, j, i] = np.bincount(cell, term, mesh.n_cells)
+        inverse, poor, missing = _pseudo_inverse(matrix)
+        weights = np.einsum("kij,kj->ki", inverse[cell], arm) * (used * importance)[:, None]
+        return GradientOperator(offsets, other.astype(np.int32), np.ascontiguousarray(weights),
+                                poor.astype(np.int32), missing)
+
+
+def _pseudo_inverse(matrix: np.ndarray, *, cut: float = 1e-8) -> tuple[np.ndarray, ...]:
+    values, vectors = np.linalg.eigh(matrix)
+    present = values > cut * values[:, -1:]
+    scale = np.where(present, 1.0 / np.where(present, values, 1.0), 0.0)
+    inverse = np.einsum("cik,ck,cjk->cij", vectors, scale, vectors)
+    poor = np.flatnonzero(~present.all(axis=1))
+    absent = (~present[poor]).astype(float)
+    missing = np.einsum("cik,ck,cjk->cij", vectors[poor], absent, vectors[poor])
+    return inverse, poor, missing
