@@ -54,7 +54,8 @@ def join_blocks(blocks: Sequence[Block], *, tetra: bool = False,
         Blocks that do not fit together, or an inverted cell.
     """
     points, numbers = _merged_points(blocks)
-    hexes, boundaries = [], {}
+    hexes: list[np.ndarray] = []
+    boundaries: dict[str, list[np.ndarray]] = {}
     for block, number in zip(blocks, numbers):
         hexes.append(_oriented(points, _block_cells(number)))
         for side, name in block.sides.items():
@@ -99,7 +100,7 @@ def to_tetra(hexes: np.ndarray,
         chosen = np.flatnonzero(smallest == apex)
         opposite = [f for f in LOCAL_FACES["hexahedron"] if apex not in f]
         for k, local in enumerate(opposite):
-            pair = _two_triangles(hexes[np.ix_(chosen, local)])
+            pair = _two_triangles(hexes[chosen][:, list(local)])
             for half in range(2):
                 tets[chosen, 2 * k + half, :3] = pair[:, half, ::-1]
         tets[chosen, :, 3] = hexes[chosen, apex][:, None]
