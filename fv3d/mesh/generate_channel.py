@@ -9,7 +9,7 @@ import numpy as np
 
 from ..errors import MeshError
 from .blocks import Block, extrude, join_blocks, mesh_of_hexes, patch_between
-from .grading import Grading, Spacing, line
+from .grading import Grading, Spacing, from_ends, line
 from .mesh import Mesh
 
 _BULGE = 0.2
@@ -278,21 +278,10 @@ def _three_parts(low: float, high: float, end: float, first: float, coarsest: fl
             parts.append(np.empty(0))
             continue
         slope = slopes[1] if start == high else slopes[0]
-        grading = _from_ends(start, stop, ends, coarsest, slope)
+        grading = from_ends(start, stop, ends=ends, coarsest=coarsest, slope=slope)
         cells = grading.wanted_cells(start, stop) * refinement
         parts.append(grading.nodes(start, stop, cells))
     return parts
-
-
-def _from_ends(start: float, stop: float, ends: tuple[float | None, float | None],
-               coarsest: float, slope: float) -> Spacing:
-    """Sizes that grow from both ends (None: no wish there) up to the coarsest."""
-    place = np.linspace(start, stop, 1001)
-    size = np.full(len(place), coarsest)
-    for end, distance in zip(ends, (place - start, stop - place)):
-        if end is not None:
-            size = np.minimum(size, end + slope * distance)
-    return Spacing(tuple(place), tuple(size))
 
 
 def _box_without(nodes: list[np.ndarray], span: list[tuple[int, int]], tetra: bool) -> Mesh:

@@ -121,6 +121,20 @@ class Spacing:
         return place, np.concatenate([[0.0], np.cumsum(step)])
 
 
+def from_ends(start: float, stop: float, *, ends: tuple[float | None, float | None],
+              coarsest: float, slope: float) -> Spacing:
+    """Sizes that grow by ``slope`` of the distance from both ends up to the coarsest [m].
+
+    An end of None has no wish of its own.
+    """
+    place = np.linspace(start, stop, 1001)
+    size = np.full(len(place), coarsest)
+    for end, distance in zip(ends, (place - start, stop - place)):
+        if end is not None:
+            size = np.minimum(size, end + slope * distance)
+    return Spacing(tuple(place.tolist()), tuple(size.tolist()))
+
+
 def line(lower: float, upper: float, *, cells: int,
          grading: Grading | np.ndarray | None = None, where: str = "line") -> np.ndarray:
     """Nodes of one line of a mesh.
