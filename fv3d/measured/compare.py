@@ -221,8 +221,8 @@ class Comparison:
             group, quantity = here if here != before else ("", "")
             before = here
             kind = "" if not quantity else f"{quantity} [{row.unit}]"
-            lines.append(f"{group:<{wide}}  {kind:<{kinds}}  {row.competitor:<{name}}  {row.count:5d}"
-                         f"{_figure(row.bias):>10}{_figure(row.rms):>10}"
+            lines.append(f"{group:<{wide}}  {kind:<{kinds}}  {row.competitor:<{name}}"
+                         f"  {row.count:5d}{_figure(row.bias):>10}{_figure(row.rms):>10}"
                          f"{_figure(row.rms_std):>9}")
         if self.skipped:
             lines.append(f"{self.skipped} withheld component(s) without a value left out")
