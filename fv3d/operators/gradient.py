@@ -13,6 +13,7 @@ from dataclasses import dataclass
 from typing import Protocol
 
 import numpy as np
+import scipy.sparse as sparse
 
 from ..mesh.mesh import Mesh
 from . import kernels
@@ -49,6 +50,8 @@ class GradientOperator:
         Cells whose own neighbours leave a direction undetermined.
     missing : (p, 3, 3)
         Projector on these directions, filled from the neighbours' gradients.
+    completion : (p, n_cells) csr_matrix
+        Mean over those neighbours of each poor cell that are not poor themselves.
     """
 
     offsets: np.ndarray
@@ -56,6 +59,7 @@ class GradientOperator:
     weights: np.ndarray
     poor: np.ndarray
     missing: np.ndarray
+    completion: sparse.csr_matrix
 
     def __call__(self, cell_values: np.ndarray, boundary_values: np.ndarray) -> np.ndarray:
         """Gradient of a scalar (n_cells,) -> (n_cells, 3) or vector (n_cells, k) -> (n_cells, k, 3).
@@ -68,20 +72,14 @@ class GradientOperator:
         out = np.empty((len(cells), cells.shape[1], 3))
         kernels.weighted_gradient(self.offsets, self.other, self.weights,
                                   np.ascontiguousarray(cells), np.ascontiguousarray(edge), out)
-        if self.poor.size:
+        if self.completion.nnz:
             self._complete(out)
         return out[:, 0] if scalar else out
 
     def _complete(self, out: np.ndarray) -> None:
-        n_cells = len(out)
-        is_poor = np.zeros(n_cells, bool)
-        is_poor[self.poor] = True
-        for cell, project in zip(self.poor, self.missing, strict=True):
-            around = self.other[self.offsets[cell]:self.offsets[cell + 1]]
-            around = around[around < n_cells]
-            rich = around[~is_poor[around]]
-            if rich.size:
-                out[cell] += out[rich].mean(axis=0) @ project
+        width = out.shape[1]
+        around = (self.completion @ out.reshape(len(out), -1)).reshape(-1, width, 3)
+        out[self.poor] += np.einsum("cij,cjk->cik", around, self.missing)
 
 
 class GradientMethod(Protocol):
@@ -135,7 +133,24 @@ class LeastSquares:
         inverse, poor, missing = _pseudo_inverse(matrix)
         weights = np.einsum("kij,kj->ki", inverse[cell], arm) * (used * importance)[:, None]
         return GradientOperator(offsets, other.astype(np.int32), np.ascontiguousarray(weights),
-                                poor.astype(np.int32), missing)
+                                poor.astype(np.int32), missing,
+                                _completion(offsets, other, poor, mesh.n_cells))
+
+
+def _completion(offsets: np.ndarray, other: np.ndarray, poor: np.ndarray,
+                n_cells: int) -> sparse.csr_matrix:
+    count = np.diff(offsets)[poor]
+    row = np.repeat(np.arange(len(poor)), count)
+    starts = np.cumsum(count) - count
+    places = np.repeat(offsets[poor] - starts, count) + np.arange(count.sum())
+    column = other[places]
+    is_poor = np.zeros(n_cells, bool)
+    is_poor[poor] = True
+    use = column < n_cells
+    use[use] = ~is_poor[column[use]]
+    row, column = row[use], column[use]
+    share = 1.0 / np.bincount(row, minlength=len(poor))[row] if row.size else np.empty(0)
+    return sparse.csr_matrix((share, (row, column)), shape=(len(poor), n_cells))
 
 
 def _pseudo_inverse(matrix: np.ndarray, *, cut: float = 1e-8) -> tuple[np.ndarray, ...]:

@@ -198,7 +198,7 @@ def sweep(indptr, indices, data, inverse_diagonal, rhs, rows, backward, x):
 
 @ThreadedKernel
 def momentum_face_flux(left, right, weight, skew, area, delta, orthogonal, density, velocity,
-                       gradient, net_gradient, pressure, force_drop, interpolation_d,
+                       gradient, net_gradient, pressure, force_drop, interpolation_d, memory,
                        out):
     """Mass flux by momentum interpolation, see :mod:`fv3d.flow.pressure`."""
     for face in numba.prange(right.shape[0]):
@@ -215,7 +215,7 @@ def momentum_face_flux(left, right, weight, skew, area, delta, orthogonal, densi
             smooth += (w * net_gradient[a, i] + (1.0 - w) * net_gradient[b, i]) * delta[face, i]
         d = w * interpolation_d[a] + (1.0 - w) * interpolation_d[b]
         jump = pressure[b] - pressure[a] - force_drop[face]
-        out[face] = density * (flux + d * orthogonal[face] * (smooth - jump))
+        out[face] = density * (flux + d * (orthogonal[face] * (smooth - jump) + memory[face]))
 
 
 @ThreadedKernel

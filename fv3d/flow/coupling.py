@@ -1,0 +1,239 @@
+"""One iteration of the pressure-velocity coupling: ``start`` and ``step``; state in, state out."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+
+from ..operators import kernels, linear
+from ..operators.assembly import Pattern, symmetric_matrix
+from .equations import (
+    Momentum,
+    PressureFields,
+    boundary_velocity,
+    corrected_flux,
+    correction_matrix,
+    interpolated_flux,
+    momentum,
+    pressure_fields,
+)
+from .problem import Force, Problem, State
+
+REFRESH_AT = 1.6  # solver iterations above this multiple of a fresh hierarchy's: refresh it
+
+
+@dataclass(frozen=True)
+class Record:
+    """Numbers of one iteration: residuals of the state it started from, and effort.
+
+    ``momentum``: sum of |unrelaxed residual| over sum of |a u|, with the newest fluxes.
+    ``mass``: sum of |imbalance| of the predicted fluxes over the reference flux.
+    ``misfit``: largest relative misfit of the sources' own equations.
+    """
+
+    iteration: int
+    momentum: float
+    mass: float
+    misfit: float
+    pressure_iterations: int
+
+    @property
+    def residual(self) -> float:
+        """The largest of the three."""
+        return max(self.momentum, self.mass, self.misfit)
+
+
+@dataclass(eq=False)
+class Workspace:
+    """What iterations share and may rebuild at any time: the multigrid hierarchy."""
+
+    prepared: linear.Prepared | None = None
+    best_iterations: int = 0
+    setups: int = 0
+
+
+@dataclass(frozen=True, eq=False)
+class Sweeps:
+    """The inexact momentum solve: a fixed linear operator from right-hand side to change."""
+
+    pattern: Pattern
+    data: np.ndarray
+    inverse_diagonal: np.ndarray
+    count: int
+
+    def __call__(self, rhs: np.ndarray, rows: np.ndarray | None = None,
+                 out: np.ndarray | None = None) -> np.ndarray:
+        """Change (n_cells, 3) from zero; over some rows only, in a given zeroed array, if asked."""
+        x = np.zeros_like(rhs) if out is None else out
+        rows = np.arange(len(rhs), dtype=np.int32) if rows is None else rows
+        for k in range(self.count):
+            kernels.sweep(self.pattern.indptr, self.pattern.indices, self.data,
+                          self.inverse_diagonal, rhs, rows, k % 2 == 1, x)
+        return x
+
+
+def total_force(problem: Problem, state: State) -> Force | None:
+    """Body force of the case plus the forces of all sources."""
+    parts = [] if problem.force is None else [problem.force]
+    parts += [source.force(s) for source, s in zip(problem.sources, state.sources, strict=True)]
+    parts = [part for part in parts if np.any(part.cell)]
+    if not parts:
+        return None
+    return Force(sum((p.cell for p in parts[1:]), parts[0].cell),
+                 sum((p.drop for p in parts[1:]), parts[0].drop))
+
+
+def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, Record]:
+    """One iteration of the steady coupling.
+
+    Returns the new state and the record of the state it started from.
+    """
+    mesh, numerics = problem.mesh, problem.case.numerics
+    n, coupling = mesh.n_internal, numerics.coupling
+    edge_flux = state.mass_flux[n:]
+    gradient = problem.velocity_gradient(state.velocity, state.boundary_velocity)
+    edge = boundary_velocity(problem, state.velocity, gradient, edge_flux)
+    fields = pressure_fields(problem, state.pressure, edge_flux)
+    force = total_force(problem, state)
+    equation = momentum(problem, state.velocity, gradient, edge, state.mass_flux)
+    push = momentum_push(problem, fields, force)
+    residual = equation.rows.residual(state.velocity) + push
+    scale = _momentum_scale(problem, equation, state.velocity, push, fields)
+    alpha = coupling.velocity_relaxation
+    relaxed = equation.rows.diagonal + (1.0 / alpha - 1.0) * equation.diagonal[:, None]
+    sweeps = Sweeps(problem.pattern, equation.rows.data, 1.0 / relaxed, numerics.sweeps)
+    change = sweeps(residual)
+    sources, misfit = [], 0.0
+    for source, own in zip(problem.sources, state.sources, strict=True):
+        own, change, error = source.correct(own, state.velocity, change, sweeps)
+        sources.append(own)
+        misfit = max(misfit, error)
+    velocity = state.velocity + change
+    state = replace(state, velocity=velocity, sources=tuple(sources))
+    force = total_force(problem, state)
+    edge = boundary_velocity(problem, velocity, gradient, edge_flux)
+    flux = interpolated_flux(problem, velocity, gradient, edge, fields, force, equation.diagonal,
+                             np.zeros(mesh.n_faces))
+    record_mass = mass_residual(problem, flux, velocity)
+    state, effort = _correct_pressure(problem, state, flux, equation, gradient, workspace)
+    record = Record(state.iteration, float(np.abs(residual).sum() / scale), record_mass, misfit,
+                    effort)
+    return replace(state, iteration=state.iteration + 1), record
+
+
+def momentum_push(problem: Problem, fields: PressureFields, force: Force | None) -> np.ndarray:
+    """(n_cells, 3) pressure and body force on each cell [N]."""
+    push = -fields.gradient
+    if force is not None:
+        push = push + problem.case.fluid.density * force.cell
+    return push * problem.mesh.cell_volume[:, None]
+
+
+def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, equation: Momentum,
+                      gradient: np.ndarray, workspace: Workspace) -> tuple[State, int]:
+    mesh, numerics = problem.mesh, problem.case.numerics
+    n, coupling = mesh.n_internal, numerics.coupling
+    d = mesh.cell_volume / coupling.correction_diagonal(equation.diagonal, equation.neighbours, 0.0)
+    matrix, inner, outer = correction_matrix(problem, d)
+    result = solve_pressure(problem, workspace, matrix, -(mesh.outflow @ flux),
+                            numerics.pressure_tolerance)
+    correction = result.solution
+    flux = corrected_flux(problem, flux, correction, inner, outer)
+    slope = problem.pressure_gradient(correction, np.zeros(mesh.n_boundary))
+    velocity = state.velocity - d[:, None] * slope
+    pressure = state.pressure + coupling.pressure_share * correction
+    if problem.closed:
+        pressure -= np.average(pressure, weights=mesh.cell_volume)
+    edge = boundary_velocity(problem, velocity, gradient, flux[n:])
+    return replace(state, velocity=velocity, pressure=pressure, mass_flux=flux,
+                   boundary_velocity=edge), result.iterations
+
+
+def solve_pressure(problem: Problem, workspace: Workspace, matrix: Any, rhs: np.ndarray,
+                   tolerance: float) -> linear.LinearResult:
+    """Solve a pressure equation; the hierarchy is reused until iterations rise."""
+    multigrid = problem.case.numerics.multigrid
+    if workspace.prepared is None:
+        workspace.prepared = linear.prepare(matrix, method=multigrid, singular=problem.closed)
+        workspace.best_iterations, workspace.setups = 0, workspace.setups + 1
+    result = linear.solve(workspace.prepared, rhs, matrix=matrix, tolerance=tolerance)
+    per_decade = result.iterations / max(-np.log10(max(tolerance, 1e-300)), 0.1)
+    if workspace.best_iterations == 0:
+        workspace.best_iterations = max(int(np.ceil(per_decade)), 2)
+    elif per_decade > REFRESH_AT * workspace.best_iterations:
+        workspace.prepared = linear.refresh(workspace.prepared, matrix)
+        workspace.best_iterations, workspace.setups = 0, workspace.setups + 1
+    return result
+
+
+def mass_residual(problem: Problem, flux: np.ndarray, velocity: np.ndarray) -> float:
+    """Sum of the cells' mass imbalance over the reference flux."""
+    imbalance = np.abs(problem.mesh.outflow @ flux).sum()
+    return float(imbalance / reference_flux(problem, flux, velocity))
+
+
+def reference_flux(problem: Problem, flux: np.ndarray, velocity: np.ndarray) -> float:
+    """Inflow [kg/s]; in a domain without inflow the mean speed over a mean cross-section."""
+    mesh, density = problem.mesh, problem.case.fluid.density
+    inflow = -np.minimum(flux[mesh.n_internal:], 0.0).sum()
+    volume = mesh.cell_volume.sum()
+    speed = np.linalg.norm(velocity, axis=1) @ mesh.cell_volume / volume
+    circulating = density * speed * volume ** (2 / 3)
+    return float(max(inflow if inflow > 1e-3 * circulating else circulating, 1e-300))
+
+
+def _momentum_scale(problem: Problem, equation: Momentum, velocity: np.ndarray, push: np.ndarray,
+                    fields: PressureFields) -> float:
+    """Sum of |a u|; a fluid at rest is measured against a millionth of its pressure forces."""
+    moving = float((equation.diagonal * np.abs(velocity).sum(axis=1)).sum())
+    resting = float((np.abs(fields.gradient).sum(axis=1) * problem.mesh.cell_volume).sum())
+    return max(moving + 1e-6 * (resting + float(np.abs(push).sum())), 1e-300)
+
+
+def potential_start(problem: Problem, workspace: Workspace) -> State:
+    """Start field: irrotational flow through the given fluxes, or rest where there are none."""
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    flux = np.zeros(mesh.n_faces)
+    flux[n:] = problem.fixed_flux
+    outer = np.where(problem.table.pressure_given, problem.orthogonal[n:], 0.0)
+    if np.any(problem.fixed_flux) or problem.table.pressure[problem.table.pressure_given].any():
+        inner = problem.orthogonal[:n]
+        matrix = symmetric_matrix(mesh, problem.pattern, inner, outer)
+        prepared = linear.prepare(matrix, singular=problem.closed)
+        potential = linear.solve(prepared, -(mesh.outflow @ flux), matrix=matrix, tolerance=1e-6)
+        flux = corrected_flux(problem, flux, potential.solution, inner, outer)
+    velocity = velocity_from_flux(problem, flux)
+    edge = boundary_velocity(problem, velocity, np.zeros((mesh.n_cells, 3, 3)), flux[n:])
+    sources = tuple(source.start(problem, None) for source in problem.sources)
+    return State(velocity, np.zeros(mesh.n_cells), flux, edge, sources)
+
+
+def velocity_from_flux(problem: Problem, flux: np.ndarray) -> np.ndarray:
+    """(n_cells, 3) velocity that fits the mass fluxes of each cell's faces best."""
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    cells = np.concatenate([mesh.left, mesh.right])
+    area = np.concatenate([mesh.face_area, mesh.face_area[:n]])
+    size = np.concatenate([mesh.face_area_magnitude, mesh.face_area_magnitude[:n]])
+    through = np.concatenate([flux, flux[:n]]) / problem.case.fluid.density
+    matrix, rhs = np.zeros((mesh.n_cells, 3, 3)), np.zeros((mesh.n_cells, 3))
+    for i in range(3):
+        rhs[:, i] = np.bincount(cells, through * area[:, i] / size, mesh.n_cells)
+        for j in range(3):
+            matrix[:, i, j] = np.bincount(cells, area[:, i] * area[:, j] / size, mesh.n_cells)
+    return np.ascontiguousarray(np.linalg.solve(matrix, rhs[:, :, None])[:, :, 0])
+
+
+def conserve(problem: Problem, state: State, workspace: Workspace, *,
+             tolerance: float = 1e-11) -> State:
+    """Make the face fluxes conserve mass to rounding by one tight potential correction."""
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    outer = np.where(problem.table.pressure_given, problem.orthogonal[n:], 0.0)
+    inner = problem.orthogonal[:n]
+    matrix = symmetric_matrix(mesh, problem.pattern, inner, outer)
+    imbalance = -(mesh.outflow @ state.mass_flux)
+    prepared = linear.prepare(matrix, singular=problem.closed)
+    result = linear.solve(prepared, imbalance, matrix=matrix, tolerance=tolerance)
+    flux = corrected_flux(problem, state.mass_flux, result.solution, inner, outer)
+    return replace(state, mass_flux=flux)

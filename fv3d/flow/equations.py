@@ -1,0 +1,230 @@
+"""Momentum equation, face fluxes and pressure correction, in the order of the derivation.
+
+No iteration loops here.  With ``d = V / a`` (``a`` the unrelaxed diagonal) the mass flux through
+a face is
+
+    F = rho [ u_f . S + d_f g ( grad(p)_f . delta - (p_R - p_L) + force along delta - mean ) ],
+
+``g = |S|^2 / (S . delta)``: the interpolated velocity plus the difference between the mean of the
+two cells' pressure gradients and the compact one (Rhie, C. M. and Chow, W. L. 1983, AIAA J. 21,
+1525-1532).  ``d`` is taken without relaxation and time step, so neither enters the solution.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import scipy.sparse as sparse
+
+from ..operators import kernels
+from ..operators.assembly import Rows, symmetric_matrix
+from .problem import Force, Problem
+
+
+@dataclass(frozen=True, eq=False)
+class PressureFields:
+    """Pressure with what follows from it: boundary values and the conservative gradient.
+
+    ``face`` (n_faces,) [Pa]; ``gradient`` (n_cells, 3) [Pa/m] by summing ``face`` times area.
+    """
+
+    cell: np.ndarray
+    face: np.ndarray
+    gradient: np.ndarray
+
+
+@dataclass(frozen=True, eq=False)
+class Momentum:
+    """The momentum equation of one iteration, unrelaxed, without pressure and force.
+
+    ``rows`` holds ``A u = rhs``; ``diagonal`` (n_cells,) [kg/s] the part of its diagonal common to
+    all components; ``neighbours`` (n_cells,) [kg/s] the sum of the neighbours' coefficients.
+    """
+
+    rows: Rows
+    diagonal: np.ndarray
+    neighbours: np.ndarray
+
+
+def boundary_velocity(problem: Problem, velocity: np.ndarray, gradient: np.ndarray,
+                      boundary_flux: np.ndarray) -> np.ndarray:
+    """(n_boundary, 3) velocity on the boundary faces [m/s].
+
+    Where fluid enters through an outlet only the normal part of the cell's velocity is kept.
+    """
+    table, mesh = problem.table, problem.mesh
+    owner = mesh.left[mesh.n_internal:]
+    normal = mesh.face_normal[mesh.n_internal:]
+    inner = velocity[owner] + np.einsum("fij,fj->fi", gradient[owner], problem.foot)
+    across = np.einsum("ij,ij->i", inner, normal)[:, None] * normal
+    entering = table.pressure_given & (boundary_flux < 0)
+    tangential = np.where(entering, 0.0, table.keep_tangential)[:, None]
+    return tangential * (inner - across) + table.keep_normal[:, None] * across + table.fixed
+
+
+def boundary_pressure(problem: Problem, pressure: np.ndarray, gradient: np.ndarray,
+                      boundary_flux: np.ndarray) -> np.ndarray:
+    """(n_boundary,) pressure on the boundary faces [Pa].
+
+    Given at outlets (less the dynamic pressure where fluid enters), extrapolated with the cell
+    gradient at walls and inlets, along the plane only at symmetry planes.
+    """
+    table, mesh = problem.table, problem.mesh
+    owner = mesh.left[mesh.n_internal:]
+    reach = np.where(table.pressure_flat[:, None], problem.foot, mesh.delta[mesh.n_internal:])
+    outward = pressure[owner] + np.einsum("ij,ij->i", gradient[owner], reach)
+    density = problem.case.fluid.density
+    speed = np.minimum(boundary_flux, 0.0) / (density * mesh.face_area_magnitude[mesh.n_internal:])
+    given = table.pressure - 0.5 * density * speed ** 2
+    return np.where(table.pressure_given, given, outward)
+
+
+def pressure_fields(problem: Problem, pressure: np.ndarray,
+                    boundary_flux: np.ndarray) -> PressureFields:
+    """Face pressures and the conservative cell gradient."""
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    known = boundary_pressure(problem, pressure, np.zeros((mesh.n_cells, 3)), boundary_flux)
+    gradient = problem.pressure_gradient(pressure, known)
+    face = np.empty(mesh.n_faces)
+    kernels.linear_face_values(mesh.left[:n], mesh.right, mesh.weight, mesh.skew_offset, pressure,
+                               gradient, face[:n])
+    face[n:] = boundary_pressure(problem, pressure, gradient, boundary_flux)
+    return PressureFields(pressure, face, surface_gradient(problem, face))
+
+
+def surface_gradient(problem: Problem, face_values: np.ndarray) -> np.ndarray:
+    """(n_cells, 3) sum of face value times area vector over the cell volume."""
+    mesh = problem.mesh
+    offsets, faces, sign = mesh.cell_faces
+    out = np.empty((mesh.n_cells, 3))
+    kernels.surface_sum(offsets, faces, sign, face_values, mesh.face_area, mesh.cell_volume, out)
+    return out
+
+
+def momentum(problem: Problem, velocity: np.ndarray, gradient: np.ndarray, edge: np.ndarray,
+             mass_flux: np.ndarray) -> Momentum:
+    """Assemble convection and diffusion of momentum.
+
+    Parameters
+    ----------
+    gradient : (n_cells, 3, 3) velocity gradient, ``edge`` (n_boundary, 3) boundary velocity
+    mass_flux : (n_faces,) [kg/s]
+    """
+    mesh, layout, n = problem.mesh, problem.pattern, problem.mesh.n_internal
+    scheme = problem.case.numerics.convection
+    coefficient, explicit = np.empty((n, 2)), np.empty((n, 3))
+    kernels.transport_faces(
+        mesh.left[:n], mesh.right, mesh.weight, mesh.skew_offset, mesh.face_area, mesh.delta,
+        problem.orthogonal, mesh.face_centre, mesh.cell_centre, mass_flux, problem.face_viscosity,
+        velocity, gradient, float(scheme.upwind_share), float(scheme.central_share),
+        problem.full_stress, coefficient, explicit)
+    data = np.zeros(len(layout.indices))
+    neighbours, rhs = np.zeros(mesh.n_cells), np.zeros((mesh.n_cells, 3))
+    offsets, faces, sign = mesh.cell_faces
+    kernels.fill_rows(offsets, faces, sign, layout.entry, n, coefficient, explicit, data,
+                      neighbours, rhs)
+    implicit, component, outer = _boundary_momentum(problem, velocity, gradient, edge, mass_flux[n:])
+    owner = mesh.left[n:]
+    diagonal = neighbours + np.bincount(owner, implicit, mesh.n_cells)
+    full = np.empty((mesh.n_cells, 3))
+    for axis in range(3):
+        extra = np.bincount(owner, component[:, axis], mesh.n_cells)
+        rhs[:, axis] += np.bincount(owner, outer[:, axis], mesh.n_cells)
+        full[:, axis] = diagonal + extra
+    return Momentum(Rows(layout, data, full, rhs), diagonal, neighbours)
+
+
+def _boundary_momentum(problem: Problem, velocity: np.ndarray, gradient: np.ndarray,
+                       edge: np.ndarray, flux: np.ndarray) -> tuple[np.ndarray, ...]:
+    """Common diagonal, diagonal per component and right-hand side of the boundary faces."""
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    owner, normal = mesh.left[n:], mesh.face_normal[n:]
+    own = velocity[owner]
+    c, tangential, across = _shear_coefficients(problem)
+    implicit = c * tangential + np.where(flux < 0, -flux, 0.0)
+    component = (c * np.maximum(across - tangential, 0.0))[:, None] * normal ** 2
+    total = boundary_traction(problem, velocity, gradient, edge) - flux[:, None] * (edge - own)
+    return implicit, component, total + (implicit[:, None] + component) * own
+
+
+def _shear_coefficients(problem: Problem) -> tuple[np.ndarray, ...]:
+    n = problem.mesh.n_internal
+    c = problem.face_viscosity[n:] * problem.orthogonal[n:]
+    across = problem.table.shear_normal
+    if not problem.full_stress:
+        across = np.minimum(across, 1.0)
+    return c, problem.table.shear_tangential, across
+
+
+def boundary_traction(problem: Problem, velocity: np.ndarray, gradient: np.ndarray,
+                      edge: np.ndarray) -> np.ndarray:
+    """(n_boundary, 3) viscous force of the surroundings on the fluid through each face [N].
+
+    The velocity difference is taken between the face and the foot of its normal in the cell.
+    """
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    owner, normal = mesh.left[n:], mesh.face_normal[n:]
+    c, tangential, across = _shear_coefficients(problem)
+    inner = velocity[owner] + np.einsum("fij,fj->fi", gradient[owner], problem.foot)
+    jump = edge - inner
+    jump_across = np.einsum("ij,ij->i", jump, normal)[:, None] * normal
+    force = (c * tangential)[:, None] * (jump - jump_across) + (c * across)[:, None] * jump_across
+    if problem.full_stress:
+        turned = np.einsum("fji,fj->fi", gradient[owner], mesh.face_area[n:])
+        force += (problem.face_viscosity[n:] * problem.table.turned_stress)[:, None] * turned
+    return force
+
+
+def interpolated_flux(problem: Problem, velocity: np.ndarray, gradient: np.ndarray,
+                      edge: np.ndarray, fields: PressureFields, force: Force | None,
+                      diagonal: np.ndarray, memory: np.ndarray) -> np.ndarray:
+    """(n_faces,) mass flux by momentum interpolation [kg/s], see the module text.
+
+    Parameters
+    ----------
+    diagonal : (n_cells,) unrelaxed momentum diagonal, time term included [kg/s]
+    memory : (n_faces,) [kg/(m^3 s) m^3/s] older face fluxes less their interpolated velocities,
+        times density over time step; zero in a steady run.
+    """
+    mesh, n, density = problem.mesh, problem.mesh.n_internal, problem.case.fluid.density
+    net, drop = fields.gradient, np.zeros(mesh.n_faces)
+    if force is not None:
+        net = net - density * force.cell
+        drop = density * force.drop
+    d = mesh.cell_volume / diagonal
+    flux = np.empty(mesh.n_faces)
+    kernels.momentum_face_flux(mesh.left[:n], mesh.right, mesh.weight, mesh.skew_offset,
+                               mesh.face_area, mesh.delta, problem.orthogonal, density, velocity,
+                               gradient, net, fields.cell, drop, d, memory, flux)
+    owner = mesh.left[n:]
+    smooth = np.einsum("ij,ij->i", net[owner], mesh.delta[n:])
+    jump = fields.face[n:] - fields.cell[owner] - drop[n:]
+    through = np.einsum("ij,ij->i", edge, mesh.face_area[n:])
+    free = density * (through + d[owner] * (problem.orthogonal[n:] * (smooth - jump) + memory[n:]))
+    flux[n:] = np.where(problem.table.pressure_given, free, problem.fixed_flux)
+    return flux
+
+
+def correction_matrix(problem: Problem,
+                      d: np.ndarray) -> tuple[sparse.csr_matrix, np.ndarray, np.ndarray]:
+    """Pressure-correction matrix with its face and boundary coefficients [kg/(s Pa)].
+
+    ``d`` (n_cells,) is volume over the coupling's correction diagonal.
+    """
+    mesh, n, density = problem.mesh, problem.mesh.n_internal, problem.case.fluid.density
+    at_face = mesh.weight * d[mesh.left[:n]] + (1 - mesh.weight) * d[mesh.right]
+    inner = density * at_face * problem.orthogonal[:n]
+    outer = np.where(problem.table.pressure_given,
+                     density * d[mesh.left[n:]] * problem.orthogonal[n:], 0.0)
+    return symmetric_matrix(mesh, problem.pattern, inner, outer), inner, outer
+
+
+def corrected_flux(problem: Problem, flux: np.ndarray, correction: np.ndarray, inner: np.ndarray,
+                   outer: np.ndarray) -> np.ndarray:
+    """Mass flux after a pressure correction (n_cells,) [Pa]."""
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    flux = flux.copy()
+    flux[:n] -= inner * (correction[mesh.right] - correction[mesh.left[:n]])
+    flux[n:] += outer * correction[mesh.left[n:]]
+    return flux

@@ -1,0 +1,103 @@
+"""The numerical methods of a case, collected in one frozen object."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import Any
+
+from ..errors import CaseError
+from ..operators.fluxes import ConvectionScheme, SecondOrderUpwind
+from ..operators.gradient import GradientMethod, LeastSquares
+from ..operators.linear import ByAnisotropy
+
+
+def _share(value: float, where: str) -> None:
+    if not 0.0 < value < 1.0:
+        raise CaseError("A relaxation factor lies between 0 and 1.", where=where, got=value,
+                        remedy="Give 0.7, say.")
+
+
+@dataclass(frozen=True)
+class SIMPLE:
+    """Semi-implicit coupling with a relaxed pressure correction.
+
+    Source: Patankar, S. V. and Spalding, D. B. (1972), Int. J. Heat Mass Transfer 15, 1787-1806.
+    """
+
+    velocity_relaxation: float = 0.7
+    pressure_relaxation: float = 0.3
+
+    def __post_init__(self) -> None:
+        _share(self.velocity_relaxation, "SIMPLE(velocity_relaxation=)")
+        if not 0.0 < self.pressure_relaxation <= 1.0:
+            raise CaseError("The pressure relaxation lies between 0 and 1.",
+                            where="SIMPLE(pressure_relaxation=)", got=self.pressure_relaxation,
+                            remedy="Give 0.3, say.")
+
+    def correction_diagonal(self, diagonal: Any, neighbours: Any, inertia: Any) -> Any:
+        """Diagonal [kg/s] that turns a pressure correction into a velocity correction."""
+        return diagonal / self.velocity_relaxation + inertia
+
+    @property
+    def pressure_share(self) -> float:
+        """Share of the pressure correction that is added."""
+        return self.pressure_relaxation
+
+
+@dataclass(frozen=True)
+class SIMPLEC:
+    """Consistent form of the coupling: the neighbours' corrections are not dropped.
+
+    Source: Van Doormaal, J. P. and Raithby, G. D. (1984), Numer. Heat Transfer 7, 147-163.
+    """
+
+    velocity_relaxation: float = 0.9
+
+    def __post_init__(self) -> None:
+        _share(self.velocity_relaxation, "SIMPLEC(velocity_relaxation=)")
+
+    def correction_diagonal(self, diagonal: Any, neighbours: Any, inertia: Any) -> Any:
+        """Diagonal [kg/s] that turns a pressure correction into a velocity correction."""
+        return diagonal / self.velocity_relaxation - neighbours + inertia
+
+    @property
+    def pressure_share(self) -> float:
+        """The whole pressure correction is added."""
+        return 1.0
+
+
+@dataclass(frozen=True)
+class Numerics:
+    """Numerical methods of a case.
+
+    Attributes
+    ----------
+    coupling : SIMPLE or SIMPLEC
+    convection : convection scheme
+    gradient : gradient method
+    sweeps : int
+        Gauss-Seidel sweeps of the momentum equations per iteration.
+    pressure_tolerance : float
+        Residual reduction of the pressure correction per iteration.
+    multigrid : how the hierarchy is built
+    full_stress : bool or None
+        Keep the transposed velocity gradient in the viscous stress. None: only where the
+        viscosity varies, since its divergence is zero otherwise.
+    """
+
+    coupling: SIMPLE | SIMPLEC = field(default_factory=SIMPLEC)
+    convection: ConvectionScheme = field(default_factory=SecondOrderUpwind)
+    gradient: GradientMethod = field(default_factory=LeastSquares)
+    sweeps: int = 4
+    pressure_tolerance: float = 0.1
+    multigrid: Any = field(default_factory=ByAnisotropy)
+    full_stress: bool | None = None
+
+    def __post_init__(self) -> None:
+        if self.sweeps < 1:
+            raise CaseError("At least one sweep of the momentum equations is needed.",
+                            where="Numerics(sweeps=)", got=self.sweeps, remedy="Give 4, say.")
+        if not 0.0 < self.pressure_tolerance < 1.0:
+            raise CaseError("The pressure tolerance lies between 0 and 1.",
+                            where="Numerics(pressure_tolerance=)", got=self.pressure_tolerance,
+                            remedy="Give 0.1, say.")

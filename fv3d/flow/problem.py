@@ -1,0 +1,260 @@
+"""Case (what is asked), Problem (the case made ready on its mesh) and State (the fields)."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from typing import Any, Protocol
+
+import numpy as np
+
+from ..errors import BoundaryError, CaseError, Fv3dWarning
+from ..mesh.mesh import Mesh
+from ..operators import assembly
+from ..operators.gradient import BoundaryKnowledge, GradientOperator
+from .boundary import Boundary, BoundaryTable, boundary_table
+from .fluid import Fluid
+from .numerics import Numerics
+
+BodyForce = Any
+
+
+@dataclass(frozen=True, eq=False)
+class Case:
+    """What is to be computed: mesh, fluid, boundaries, body force, numerical methods.
+
+    Parameters
+    ----------
+    mesh : Mesh
+    fluid : Fluid
+    boundaries : mapping of boundary name to condition
+        Every boundary of the mesh exactly once.
+    body_force : vector or function of points (n, 3) -> (n, 3), optional
+        Force per mass [m/s^2].
+    viscosity : (n_cells,) array, optional
+        Viscosity of each cell [Pa s] where it differs from the fluid's.
+    numerics : Numerics
+
+    Raises
+    ------
+    BoundaryError, CaseError
+        A boundary missing, misspelt or not a condition; a value of wrong shape or not finite.
+    """
+
+    mesh: Mesh
+    fluid: Fluid
+    boundaries: Mapping[str, Boundary] = field(kw_only=True)
+    body_force: BodyForce = field(default=None, kw_only=True)
+    viscosity: np.ndarray | None = field(default=None, kw_only=True)
+    numerics: Numerics = field(default_factory=Numerics, kw_only=True)
+
+    def __post_init__(self) -> None:
+        if not isinstance(self.mesh, Mesh):
+            raise CaseError("A case needs a mesh.", where="Case(mesh, fluid)",
+                            got=type(self.mesh).__name__, remedy="Read one with read_mesh.")
+        if not isinstance(self.fluid, Fluid):
+            raise CaseError("A case needs a fluid.", where="Case(mesh, fluid)",
+                            got=type(self.fluid).__name__,
+                            remedy="Give Fluid(density=, viscosity=), moist_air(...) or water(...).")
+        boundary_table(self.mesh, self.boundaries)
+        body_force_cells(self)
+        _cell_viscosity(self)
+
+
+def body_force_cells(case: Case) -> np.ndarray | None:
+    """(n_cells, 3) body force [m/s^2] at the cell centres, or None."""
+    if case.body_force is None:
+        return None
+    centre = case.mesh.cell_centre
+    value = case.body_force(centre.copy()) if callable(case.body_force) else case.body_force
+    try:
+        value = np.asarray(value, dtype=float)
+        value = np.broadcast_to(value, centre.shape) if value.ndim == 1 else value
+    except (TypeError, ValueError):
+        value = np.empty(0)
+    if value.shape != centre.shape or not np.all(np.isfinite(value)):
+        raise CaseError("The body force must be a finite vector, or a function of points giving one "
+                        "finite vector per point.", where="Case(body_force=)",
+                        got=f"shape {value.shape}", remedy="Return an (n, 3) array [m/s^2].")
+    return np.ascontiguousarray(value)
+
+
+def _cell_viscosity(case: Case) -> np.ndarray:
+    if case.viscosity is None:
+        return np.full(case.mesh.n_cells, case.fluid.viscosity)
+    value = np.asarray(case.viscosity, dtype=float)
+    if value.shape != (case.mesh.n_cells,) or not np.all(np.isfinite(value) & (value > 0)):
+        raise CaseError("The viscosity field needs one positive value per cell.",
+                        where="Case(viscosity=)", got=f"shape {value.shape}",
+                        remedy="Give an (n_cells,) array [Pa s] in the mesh's cell numbering.")
+    return value
+
+
+@dataclass(frozen=True, eq=False)
+class State:
+    """The fields of one iteration.
+
+    Attributes
+    ----------
+    velocity : (n_cells, 3) [m/s], pressure : (n_cells,) [Pa]
+    mass_flux : (n_faces,) [kg/s], left to right, out of the domain on boundaries
+    boundary_velocity : (n_boundary, 3) [m/s]
+    sources : tuple of the states of the case's sources
+    iteration : int
+    """
+
+    velocity: np.ndarray
+    pressure: np.ndarray
+    mass_flux: np.ndarray
+    boundary_velocity: np.ndarray
+    sources: tuple[Any, ...] = ()
+    iteration: int = 0
+
+
+@dataclass(frozen=True, eq=False)
+class Force:
+    """A body force in the form the equations use, see :func:`balanced_force`.
+
+    ``cell`` (n_cells, 3) [m/s^2]; ``drop`` (n_faces,) [m^2/s^2] the force along each face's delta.
+    """
+
+    cell: np.ndarray
+    drop: np.ndarray
+
+
+class Source(Protocol):
+    """Something that adds force to the momentum equation and may solve for its strength."""
+
+    def start(self, problem: Problem, earlier: Any) -> Any:
+        """State before the first iteration; ``earlier`` the state of a start run or None."""
+        ...
+
+    def force(self, state: Any) -> Force:
+        """The force it exerts now."""
+        ...
+
+    def correct(self, state: Any, velocity: np.ndarray, change: np.ndarray,
+                relax: Callable[..., Any]) -> tuple[Any, np.ndarray, float]:
+        """New state, corrected velocity change, and remaining misfit relative to its scale."""
+        ...
+
+
+@dataclass(frozen=True, eq=False)
+class Problem:
+    """A case made ready: operators, boundary table, coefficients that never change.
+
+    Attributes
+    ----------
+    orthogonal : (n_faces,) [m] over-relaxed share of the normal difference
+    foot : (n_boundary, 3) [m] cell centre to the foot of the face centre's normal
+    velocity_gradient, pressure_gradient : GradientOperator
+    viscosity : (n_cells,), face_viscosity : (n_faces,) [Pa s]
+    force : Force of the case's body force, or None
+    closed : bool, no boundary gives the pressure
+    """
+
+    case: Case
+    table: BoundaryTable
+    pattern: assembly.Pattern
+    orthogonal: np.ndarray
+    foot: np.ndarray
+    velocity_gradient: GradientOperator
+    pressure_gradient: GradientOperator
+    viscosity: np.ndarray
+    face_viscosity: np.ndarray
+    full_stress: bool
+    force: Force | None
+    fixed_flux: np.ndarray
+    closed: bool
+    sources: tuple[Source, ...] = ()
+
+    @property
+    def mesh(self) -> Mesh:
+        """The mesh of the case."""
+        return self.case.mesh
+
+
+def make_problem(case: Case, sources: tuple[Source, ...] = ()) -> Problem:
+    """Prepare a case for iteration.
+
+    Raises
+    ------
+    BoundaryError
+        In a domain without outlet the given fluxes do not balance.
+    """
+    mesh, numerics = case.mesh, case.numerics
+    table = boundary_table(mesh, case.boundaries)
+    inside = mesh.n_internal
+    normal = mesh.face_normal[inside:]
+    arm = mesh.delta[inside:]
+    foot = arm - np.einsum("ij,ij->i", arm, normal)[:, None] * normal
+    viscosity = _cell_viscosity(case)
+    n = mesh.n_internal
+    w = mesh.weight
+    harmonic = 1.0 / ((1 - w) / viscosity[mesh.left[:n]] + w / viscosity[mesh.right])
+    face_viscosity = np.concatenate([harmonic, viscosity[mesh.left[n:]]])
+    full = numerics.full_stress if numerics.full_stress is not None \
+        else bool(np.ptp(viscosity) > 0)
+    known = BoundaryKnowledge(table.pressure_given, table.pressure_flat)
+    fixed_flux = case.fluid.density * np.einsum("ij,ij->i", table.fixed, mesh.face_area[inside:])
+    closed = not bool(table.pressure_given.any())
+    if closed:
+        fixed_flux = _balanced_flux(mesh, table, fixed_flux)
+    cell_force = body_force_cells(case)
+    return Problem(case, table, assembly.pattern(mesh), assembly.orthogonal_factor(mesh), foot,
+                   numerics.gradient.weights(mesh, BoundaryKnowledge.everywhere(mesh)),
+                   numerics.gradient.weights(mesh, known), viscosity, face_viscosity, full,
+                   None if cell_force is None else balanced_force(mesh, cell_force),
+                   fixed_flux, closed, sources)
+
+
+def _balanced_flux(mesh: Mesh, table: BoundaryTable, flux: np.ndarray) -> np.ndarray:
+    """Given fluxes of a domain without outlet, made to cancel to rounding.
+
+    A velocity *function* carries its own flux only to the order of the mesh: an imbalance below
+    1 % is spread over these faces; anything else is an error.
+    """
+    import warnings
+    net, gross = float(flux.sum()), float(np.abs(flux).sum())
+    if gross == 0.0 or abs(net) <= 1e-10 * gross:
+        return flux
+    names = [name for name, faces in mesh.boundaries.items()
+             if np.any(flux[faces.start - mesh.n_internal:faces.stop - mesh.n_internal] != 0)]
+    sampled = np.where(table.sampled, np.abs(flux), 0.0)
+    if abs(net) > 0.01 * gross or sampled.sum() < 0.1 * gross:
+        raise BoundaryError("Without an outlet the given inflow and outflow must balance.",
+                            where=f"boundaries {', '.join(names)}",
+                            got=f"net outflow {net:.6g} kg/s of {gross / 2:.6g} kg/s",
+                            remedy="Correct the velocities, or make one boundary an Outlet.")
+    if abs(net) > 1e-3 * gross:
+        warnings.warn(f"The velocity functions on {', '.join(names)} do not balance on this mesh: "
+                      f"{abs(net) / gross:.2%} of the flux is spread over their faces.",
+                      Fv3dWarning, stacklevel=2)
+    return flux - net * sampled / sampled.sum()
+
+
+def balanced_force(mesh: Mesh, cell_force: np.ndarray) -> Force:
+    """A body force by the same operators as the pressure gradient.
+
+    The force at a face is the linear interpolation of the cells'; integrated along ``delta`` it is
+    the potential difference a pressure would have to take up, and the surface integral of these
+    potentials over a cell gives the cell's force.  A uniform force is reproduced exactly, so a
+    fluid at rest stays at rest.
+
+    Parameters
+    ----------
+    cell_force : (n_cells, 3) [m/s^2]
+    """
+    n = mesh.n_internal
+    left, right, w = mesh.left[:n], mesh.right, mesh.weight[:, None]
+    at_face = w * cell_force[left] + (1 - w) * cell_force[right]
+    outer = cell_force[mesh.left[n:]]
+    cells = np.concatenate([left, right, mesh.left[n:]])
+    reach = np.concatenate([mesh.face_centre[:n] - mesh.cell_centre[left],
+                            mesh.face_centre[:n] - mesh.cell_centre[right], mesh.delta[n:]])
+    potential = np.einsum("ij,ij->i", np.concatenate([at_face, at_face, outer]), reach)
+    area = np.concatenate([mesh.face_area[:n], -mesh.face_area[:n], mesh.face_area[n:]])
+    cell = np.stack([np.bincount(cells, potential * area[:, axis], mesh.n_cells)
+                     for axis in range(3)], axis=1) / mesh.cell_volume[:, None]
+    drop = np.einsum("ij,ij->i", np.concatenate([at_face, outer]), mesh.delta)
+    return Force(cell, drop)

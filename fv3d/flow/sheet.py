@@ -1,0 +1,43 @@
+"""The short sheet a run prints."""
+
+from __future__ import annotations
+
+import resource
+from typing import Any
+
+import numpy as np
+
+from .coupling import mass_residual
+
+
+def run_sheet(run: Any) -> str:
+    """What was run, how it ended, how well, what it cost."""
+    case, mesh, history = run.case, run.mesh, run.history
+    numerics = case.numerics
+    kinds = ", ".join(f"{len(cells)} {kind}" for kind, _, cells in mesh.cell_blocks)
+    last = {key: values[-1] for key, values in history.items() if len(values)}
+    lines = [
+        f"run '{run.name}'",
+        f"  mesh       {kinds}",
+        f"  fluid      density {case.fluid.density:.6g} kg/m3, "
+        f"viscosity {case.fluid.viscosity:.6g} Pa s",
+        f"  methods    {type(numerics.coupling).__name__} "
+        f"{numerics.coupling.velocity_relaxation:g}, {type(numerics.convection).__name__}, "
+        f"{type(numerics.gradient).__name__}",
+        f"  outcome    {run.outcome}",
+    ]
+    if last:
+        lines.append(f"  residuals  momentum {last['momentum']:.1e}, mass {last['mass']:.1e}"
+                     + (f", readings {last['misfit']:.1e}" if run.problem.sources else ""))
+    imbalance = mass_residual(run.problem, run.mass_flux, run.velocity)
+    lines.append(f"  mass       summed imbalance {imbalance:.1e} of the reference flux")
+    speed = np.linalg.norm(run.velocity, axis=1)
+    lines.append(f"  speed      mean {np.average(speed, weights=mesh.cell_volume):.4g} m/s, "
+                 f"largest {speed.max():.4g} m/s")
+    for source, own in zip(run.problem.sources, run.state.sources, strict=True):
+        if hasattr(source, "describe"):
+            lines += ["  " + line for line in source.describe(own)]
+    peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 2**20
+    lines.append(f"  cost       {run.seconds:.1f} s, {len(history['iteration'])} iterations, "
+                 f"peak memory of the process {peak:.2f} GiB")
+    return "\n".join(lines)

@@ -1,0 +1,91 @@
+"""Start fields: irrotational flow, a vector, a function, or a run on this or another mesh."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from ..errors import CaseError
+from .coupling import Workspace, potential_start
+from .equations import boundary_velocity
+from .problem import Problem, State
+
+
+def start_state(problem: Problem, start: Any, workspace: Workspace) -> State:
+    """State before the first iteration.
+
+    Parameters
+    ----------
+    start : None, Run, vector, or function of points (n, 3) -> (n, 3) [m/s]
+
+    Raises
+    ------
+    CaseError
+        The start is of another kind, has a wrong shape or is not finite.
+    """
+    if start is None:
+        return potential_start(problem, workspace)
+    if hasattr(start, "state") and hasattr(start, "problem"):
+        return _from_run(problem, start)
+    centre = problem.mesh.cell_centre
+    try:
+        value = np.asarray(start(centre.copy()) if callable(start) else start, dtype=float)
+        value = np.broadcast_to(value, centre.shape) if value.ndim == 1 else value
+    except (TypeError, ValueError):
+        value = np.empty(0)
+    if value.shape != centre.shape or not np.all(np.isfinite(value)):
+        raise CaseError("The start must be a run, a finite velocity vector or a function of points.",
+                        where="start=", got=f"{type(start).__name__}, shape {value.shape}",
+                        remedy="Give start=plain, start=(1.0, 0.0, 0.0) or leave it out.")
+    return _with_fluxes(problem, np.array(value), np.zeros(len(centre)))
+
+
+def _from_run(problem: Problem, run: Any) -> State:
+    state = run.state
+    if not (np.all(np.isfinite(state.velocity)) and np.all(np.isfinite(state.pressure))):
+        raise CaseError("The start run has values that are not finite.", where="start=",
+                        got=f"run '{run.name}'", remedy="Start from a run that did not diverge.")
+    if run.mesh is problem.mesh:
+        sources = _carried_sources(problem, run)
+        return State(state.velocity, state.pressure, state.mass_flux, state.boundary_velocity,
+                     sources)
+    points = problem.mesh.cell_centre
+    velocity, pressure = sample_anywhere(run, points)
+    return _with_fluxes(problem, velocity, pressure)
+
+
+def _carried_sources(problem: Problem, run: Any) -> tuple[Any, ...]:
+    old = dict(zip(map(id, run.problem.sources), run.state.sources, strict=True))
+    return tuple(source.start(problem, old.get(id(source))) for source in problem.sources)
+
+
+def sample_anywhere(run: Any, points: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Velocity and pressure at points; outside the run's mesh those of the nearest cell."""
+    from scipy.spatial import cKDTree
+
+    from ..operators.interpolation import locate
+    inside = locate(run.mesh, points) >= 0
+    velocity, pressure = np.empty((len(points), 3)), np.empty(len(points))
+    if inside.any():
+        sample = run.sample(points[inside])
+        velocity[inside], pressure[inside] = sample.velocity, sample.pressure
+    if not inside.all():
+        _, nearest = cKDTree(run.mesh.cell_centre).query(points[~inside])
+        velocity[~inside], pressure[~inside] = run.velocity[nearest], run.pressure[nearest]
+    return velocity, pressure
+
+
+def _with_fluxes(problem: Problem, velocity: np.ndarray, pressure: np.ndarray) -> State:
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    density = problem.case.fluid.density
+    w = mesh.weight[:, None]
+    flux = np.zeros(mesh.n_faces)
+    at_face = w * velocity[mesh.left[:n]] + (1 - w) * velocity[mesh.right]
+    flux[:n] = density * np.einsum("ij,ij->i", at_face, mesh.face_area[:n])
+    edge = boundary_velocity(problem, velocity, np.zeros((mesh.n_cells, 3, 3)),
+                             np.ones(mesh.n_boundary))
+    outflow = density * np.einsum("ij,ij->i", edge, mesh.face_area[n:])
+    flux[n:] = np.where(problem.table.pressure_given, outflow, problem.fixed_flux)
+    sources = tuple(source.start(problem, None) for source in problem.sources)
+    return State(velocity, pressure, flux, edge, sources)
