@@ -11,7 +11,9 @@ from scipy.sparse.csgraph import connected_components
 from scipy.spatial import cKDTree
 
 from ..errors import MeshError
-from .mesh import LOCAL_FACES, Mesh, build_mesh, signed_volumes
+from .geometry import signed_volumes
+from .mesh import Mesh, build_mesh
+from .topology import LOCAL_FACES
 
 BLOCK_SIDES = ("i_min", "i_max", "j_min", "j_max", "k_min", "k_max")
 

@@ -14,21 +14,18 @@ from types import MappingProxyType
 
 import numpy as np
 import scipy.sparse as sparse
-from scipy.sparse.csgraph import reverse_cuthill_mckee
 
 from ..errors import MeshError
-
-# Local faces of each cell kind, outward by the right-hand rule; the point order is that
-# of the VTK file format, an open standard.
-LOCAL_FACES: dict[str, tuple[tuple[int, ...], ...]] = {
-    "tetra": ((0, 2, 1), (0, 1, 3), (1, 2, 3), (0, 3, 2)),
-    "hexahedron": ((0, 3, 2, 1), (4, 5, 6, 7), (0, 1, 5, 4), (1, 2, 6, 5), (2, 3, 7, 6),
-                   (3, 0, 4, 7)),
-    "wedge": ((0, 1, 2), (3, 5, 4), (0, 3, 4, 1), (1, 4, 5, 2), (2, 5, 3, 0)),
-    "pyramid": ((0, 3, 2, 1), (0, 1, 4), (1, 2, 4), (2, 3, 4), (3, 0, 4)),
-}
-POINTS_PER_CELL = {"tetra": 4, "hexahedron": 8, "wedge": 6, "pyramid": 5}
-CELL_KINDS = tuple(LOCAL_FACES)
+from .geometry import face_and_cell_geometry, signed_volumes
+from .topology import (
+    CELL_KINDS,
+    POINTS_PER_CELL,
+    local_faces,
+    name_faces,
+    number_cells,
+    pair_faces,
+    reversed_faces,
+)
 
 
 def _read_only(array: np.ndarray) -> np.ndarray:
@@ -59,6 +56,8 @@ class Mesh:
         Left centre to right centre; left centre to face centre on boundaries.
     weight : (n_internal,)
         Share of the left cell in linear interpolation to the face.
+    warp : (n_faces, 3, 3) [m^3], or (0, 3, 3) where all faces are flat
+        ``[f, j, i]`` the integral of (x - face centre)_j dS_i, which vanishes on flat faces.
     boundaries : mapping of name to slice into the faces.
     """
 
@@ -74,6 +73,7 @@ class Mesh:
     cell_centre: np.ndarray
     delta: np.ndarray
     weight: np.ndarray
+    warp: np.ndarray
     boundaries: Mapping[str, slice]
 
     @property
@@ -131,6 +131,19 @@ class Mesh:
         foot = self.cell_centre[self.left[inside]] + (1 - self.weight)[:, None] * self.delta[inside]
         return _read_only(self.face_centre[inside] - foot)
 
+    @property
+    def warped(self) -> bool:
+        """Whether some face is not flat."""
+        return len(self.warp) > 0
+
+    def to_faces(self, cell_values: np.ndarray) -> np.ndarray:
+        """(n_faces, ...) linear interpolation of cell values; the owner's value on boundaries."""
+        n = self.n_internal
+        w = self.weight.reshape(-1, *[1] * (cell_values.ndim - 1))
+        out = cell_values[self.left]
+        out[:n] = w * out[:n] + (1 - w) * cell_values[self.right]
+        return out
+
     def boundary_of_face(self, face: int) -> str:
         """Name of the boundary a face belongs to, or ``"inside"``."""
         for name, where in self.boundaries.items():
@@ -174,54 +187,37 @@ def build_mesh(points: np.ndarray, cells: Sequence[tuple[str, np.ndarray]],
         An inverted cell, a face of more than two cells, a boundary face without a name
         or with two, a name on something that is no boundary face.
     """
-    points = np.ascontiguousarray(points, dtype=np.float64)
-    cells = [(kind, np.ascontiguousarray(conn, dtype=np.int64)) for kind, conn in cells if len(conn)]
+    points = np.array(points, dtype=np.float64, order="C")
+    cells = [(kind, np.array(conn)) for kind, conn in cells if len(conn)]
     _check_blocks(points, cells, source)
-    face_points, face_cell = _local_faces(cells)
-    keys, first, second = _pair_faces(face_points, points, source)
-    internal = second >= 0
-    left, right = face_cell[first], np.where(internal, face_cell[second], -1)
-    name_of = _name_faces(keys, internal, boundaries, face_points[first], points, source)
-    n_cells = sum(len(conn) for _, conn in cells)
-    new_number = _numbering(left[internal], right[internal], n_cells, renumber)
-    old_number = np.argsort(new_number)
-    left = new_number[left]
-    right = np.where(internal, new_number[right], -1)
-    oriented = face_points[first]
-    flip = internal & (left > right)
-    left[flip], right[flip] = right[flip], left[flip]
-    oriented = np.where(flip[:, None], _reversed_faces(oriented), oriented)
-    order = np.lexsort((np.where(internal, right, left), np.where(internal, left, 0), name_of))
-    left, right, oriented = left[order], right[order], oriented[order]
-    n_internal = int(internal.sum())
-    slices, start = {}, n_internal
-    for rank, name in enumerate(boundaries):
-        stop = start + int(np.count_nonzero(name_of == rank))
-        slices[name] = slice(start, stop)
-        start = stop
-    blocks, at = [], 0
-    for kind, conn in cells:
-        blocks.append((kind, _read_only(conn), _read_only(new_number[at:at + len(conn)])))
-        at += len(conn)
-    return _with_geometry(points, tuple(blocks), old_number, oriented, left, right[:n_internal],
-                          slices)
-
-
-def signed_volumes(points: np.ndarray, kind: str, connectivity: np.ndarray) -> np.ndarray:
-    """(n,) volume of each cell [m^3], negative where the cell is turned inside out.
-
-    Quadrilateral faces are split about the mean of their points.
-    """
-    corners = points[connectivity]
-    middle = corners.mean(axis=1)
-    volume = np.zeros(len(connectivity))
-    for face in LOCAL_FACES[kind]:
-        ring = corners[:, list(face)] - middle[:, None]
-        hub = ring.mean(axis=1)
-        for k in range(len(face)):
-            a, b = ring[:, k], ring[:, (k + 1) % len(face)]
-            volume += np.einsum("ij,ij->i", hub, np.cross(a, b)) / 6.0
-    return volume
+    cells = [(kind, conn.astype(np.int32)) for kind, conn in cells]
+    faces, owner = local_faces(cells)
+    keys, first, second = pair_faces(faces, points, source=source)
+    name_of = name_faces(keys, second >= 0, boundaries, points, source=source)
+    inside, outside = np.flatnonzero(second >= 0), np.flatnonzero(second < 0)
+    n_cells, n_internal = sum(len(conn) for _, conn in cells), len(inside)
+    beside, across = owner[first[inside]], owner[second[inside]]
+    new_number = (number_cells(beside, across, n_cells) if renumber
+                  else np.arange(n_cells, dtype=np.int32))
+    beside, across = new_number[beside], new_number[across]
+    low, high = np.minimum(beside, across), np.maximum(beside, across)
+    order = np.argsort(low.astype(np.int64) * n_cells + high, kind="stable")
+    right, flip = high[order], (beside > across)[order]
+    outside = outside[np.lexsort((first[outside], new_number[owner[first[outside]]],
+                                  name_of[outside]))]
+    row = np.concatenate([first[inside[order]], first[outside]])
+    left = np.concatenate([low[order], new_number[owner[first[outside]]]])
+    face_points = faces[row]
+    turned = np.flatnonzero(flip)
+    face_points[turned] = reversed_faces(face_points[turned])
+    counts = np.bincount(name_of[outside], minlength=len(boundaries))
+    ends = n_internal + np.cumsum(np.concatenate([[0], counts]))
+    slices = {name: slice(int(start), int(stop))
+              for name, start, stop in zip(boundaries, ends[:-1], ends[1:])}
+    splits = np.cumsum([len(conn) for _, conn in cells])[:-1]
+    blocks = tuple((kind, _read_only(conn), _read_only(number)) for (kind, conn), number
+                   in zip(cells, np.split(new_number, splits)))
+    return _with_geometry(points, blocks, face_points, left, right, slices)
 
 
 def _check_blocks(points: np.ndarray, cells: list[tuple[str, np.ndarray]], source: str) -> None:
@@ -237,191 +233,52 @@ def _check_blocks(points: np.ndarray, cells: list[tuple[str, np.ndarray]], sourc
                         got="no tetra, hexahedron, wedge or pyramid",
                         remedy="Export the volume mesh, not only its surface.")
     for kind, conn in cells:
-        if kind not in LOCAL_FACES or conn.ndim != 2 or conn.shape[1] != POINTS_PER_CELL.get(kind, 0):
+        if conn.ndim != 2 or conn.shape[1] != POINTS_PER_CELL.get(kind, 0):
             raise MeshError("A block of cells is not of a known kind.", where=source,
                             got=f"{kind} with shape {conn.shape}",
                             remedy=f"Use {', '.join(CELL_KINDS)}.")
         if conn.min() < 0 or conn.max() >= len(points):
+            bad = int(conn.min() if conn.min() < 0 else conn.max())
             raise MeshError("A cell refers to a point that does not exist.", where=source,
-                            got=f"point {int(conn.max())} of {len(points)}",
+                            got=f"point {bad} of {len(points)}",
                             remedy="The file is damaged: write the mesh again.")
-        volume = signed_volumes(points, kind, conn)
-        bad = np.flatnonzero(~(volume > 0))
-        if bad.size:
-            place = points[conn[bad[0]]].mean(axis=0)
-            raise MeshError(f"{bad.size} cell(s) have no positive volume.",
-                            where=f"{source}, {kind} {int(bad[0])} at {np.round(place, 6).tolist()}",
-                            got=f"volume {volume[bad[0]]:.3e} m^3",
-                            remedy="Mend the mesh there; check the point order of the export.")
+        _check_volumes(points, kind, conn, source)
 
 
-def _local_faces(cells: list[tuple[str, np.ndarray]]) -> tuple[np.ndarray, np.ndarray]:
-    faces, owner, at = [], [], 0
-    for kind, conn in cells:
-        numbers = np.arange(at, at + len(conn))
-        for local in LOCAL_FACES[kind]:
-            padded = np.full((len(conn), 4), -1, dtype=np.int64)
-            padded[:, :len(local)] = conn[:, list(local)]
-            faces.append(padded)
-            owner.append(numbers)
-        at += len(conn)
-    return np.concatenate(faces), np.concatenate(owner)
+def _check_volumes(points: np.ndarray, kind: str, conn: np.ndarray, source: str) -> None:
+    """Refuse cells inside out and cells flat to rounding."""
+    volume = signed_volumes(points, kind, conn)
+    suspect = np.flatnonzero(~(volume > 1e-9 * np.max(np.abs(volume))))
+    extent = np.ptp(points[conn[suspect]], axis=1).max(axis=1)
+    bad = suspect[~(volume[suspect] > 1e-13 * extent ** 3)]
+    if bad.size:
+        cell = int(bad[0])
+        place = np.round(points[conn[cell]].mean(axis=0), 6).tolist()
+        raise MeshError(f"{bad.size} cell(s) have no positive volume.",
+                        where=f"{source}, {kind} {cell} at {place}",
+                        got=f"volume {volume[cell]:.3e} m^3",
+                        remedy="Mend the mesh there; check the point order of the export.")
 
 
-def _face_keys(faces: np.ndarray) -> np.ndarray:
-    return np.sort(faces, axis=1)
-
-
-def _pair_faces(faces: np.ndarray, points: np.ndarray,
-                source: str) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    keys = _face_keys(faces)
-    order = np.lexsort(keys.T[::-1])
-    ordered = keys[order]
-    new = np.concatenate([[True], np.any(ordered[1:] != ordered[:-1], axis=1)])
-    start = np.flatnonzero(new)
-    count = np.diff(np.concatenate([start, [len(order)]]))
-    if count.max() > 2:
-        bad = ordered[start[np.argmax(count)]]
-        place = points[bad[bad >= 0]].mean(axis=0)
-        raise MeshError("A face belongs to more than two cells.",
-                        where=f"{source}, near {np.round(place, 6).tolist()}",
-                        got=f"{int(count.max())} cells",
-                        remedy="Remove duplicate cells from the mesh.")
-    first = order[start]
-    second = np.where(count == 2, order[np.minimum(start + 1, len(order) - 1)], -1)
-    swap = (second >= 0) & (second < first)
-    first, second = np.where(swap, second, first), np.where(swap, first, second)
-    return ordered[start], first, second
-
-
-def _name_faces(keys: np.ndarray, internal: np.ndarray,
-                boundaries: Mapping[str, Sequence[np.ndarray]], faces: np.ndarray,
-                points: np.ndarray, source: str) -> np.ndarray:
-    """Rank of the boundary of each unique face, -1 inside."""
-    rank_of = np.full(len(keys), -1)
-    outer = np.flatnonzero(~internal)
-    lookup = {keys[i].tobytes(): i for i in outer}
-    for rank, (name, arrays) in enumerate(boundaries.items()):
-        for array in arrays:
-            array = np.asarray(array, dtype=np.int64)
-            padded = np.full((len(array), 4), -1, dtype=np.int64)
-            padded[:, :array.shape[1]] = array
-            for key, row in zip(_face_keys(padded), array, strict=True):
-                i = lookup.get(key.tobytes(), -1)
-                if i < 0:
-                    _refuse_named_face(key, keys, name, points[row].mean(axis=0), row, source)
-                if rank_of[i] not in (-1, rank):
-                    place = np.round(points[row].mean(axis=0), 6).tolist()
-                    raise MeshError("A boundary face has two names.",
-                                    where=f"{source}, boundary '{name}' near {place}",
-                                    got=f"'{list(boundaries)[rank_of[i]]}' and '{name}'",
-                                    remedy="Put every boundary face into one named group only.")
-                rank_of[i] = rank
-    nameless = np.flatnonzero(~internal & (rank_of < 0))
-    if nameless.size:
-        face = faces[nameless[0]]
-        place = np.round(points[face[face >= 0]].mean(axis=0), 6).tolist()
-        raise MeshError(f"{nameless.size} boundary face(s) have no name.",
-                        where=f"{source}, near {place}",
-                        got=f"names: {', '.join(boundaries) or 'none'}",
-                        remedy="Give every boundary surface a named group in the mesher (a face "
-                               "inside the domain listed here points to a hanging node).")
-    return rank_of
-
-
-def _refuse_named_face(key: np.ndarray, keys: np.ndarray, name: str, place: np.ndarray,
-                       row: np.ndarray, source: str) -> None:
-    where = f"{source}, boundary '{name}' near {np.round(place, 6).tolist()}"
-    if np.any(np.all(keys == key, axis=1)):
-        raise MeshError("A named face lies inside the domain.", where=where,
-                        got="cells on both sides",
-                        remedy="Leave internal surfaces out of the named groups.")
-    raise MeshError("A named face is no face of any cell.", where=where,
-                    got=f"points {row.tolist()}",
-                    remedy="Surface and volume mesh do not match: export both from the same mesh.")
-
-
-def _numbering(left: np.ndarray, right: np.ndarray, n_cells: int, renumber: bool) -> np.ndarray:
-    if not renumber:
-        return np.arange(n_cells)
-    ones = np.ones(len(left), dtype=np.int8)
-    graph = sparse.coo_matrix((ones, (left, right)), shape=(n_cells, n_cells)).tocsr()
-    graph = (graph + graph.T).tocsr()
-    new_number = np.empty(n_cells, dtype=np.int64)
-    new_number[reverse_cuthill_mckee(graph, symmetric_mode=True)] = np.arange(n_cells)
-    return new_number
-
-
-def _reversed_faces(faces: np.ndarray) -> np.ndarray:
-    triangle = faces[:, 3] < 0
-    turned = faces[:, ::-1].copy()
-    turned[triangle, :3] = faces[triangle, 2::-1]
-    turned[triangle, 3] = -1
-    return turned
-
-
-def face_geometry(points: np.ndarray, face_points: np.ndarray) -> tuple[np.ndarray, ...]:
-    """Area vectors, centroids and the triangles of each face about the mean of its points.
-
-    Returns
-    -------
-    area : (n, 3) [m^2], centre : (n, 3) [m]
-    triangle_area : (n, 4, 3) [m^2], triangle_centre : (n, 4, 3) [m]
-    """
-    count = np.where(face_points[:, 3] < 0, 3, 4)
-    ring = points[face_points]
-    ring[count == 3, 3] = 0.0
-    hub = ring.sum(axis=1) / count[:, None]
-    ring[count == 3, 3] = hub[count == 3]
-    nxt = np.roll(ring, -1, axis=1)
-    three = count == 3
-    nxt[three, 2] = ring[three, 0]
-    ring[three, 3] = nxt[three, 3] = hub[three]
-    triangle_area = 0.5 * np.cross(ring - hub[:, None], nxt - hub[:, None])
-    triangle_centre = (ring + nxt + hub[:, None]) / 3.0
-    area = triangle_area.sum(axis=1)
-    normal = area / np.maximum(np.linalg.norm(area, axis=1), 1e-300)[:, None]
-    share = np.einsum("ijk,ik->ij", triangle_area, normal)
-    total = np.maximum(share.sum(axis=1), 1e-300)
-    centre = np.einsum("ij,ijk->ik", share, triangle_centre) / total[:, None]
-    return area, centre, triangle_area, triangle_centre
-
-
-def _with_geometry(points: np.ndarray, blocks: tuple, old_number: np.ndarray,
-                   face_points: np.ndarray, left: np.ndarray, right: np.ndarray,
-                   slices: dict[str, slice]) -> Mesh:
-    n_cells, n_internal = len(old_number), len(right)
-    area, centre, triangle_area, triangle_centre = face_geometry(points, face_points)
-    apex = _mean_over_cells(centre, left, right, n_cells)
-    volume, moment = np.zeros(n_cells), np.zeros((n_cells, 3))
-    for cells, part, sign in ((left, slice(None), 1.0), (right, slice(0, n_internal), -1.0)):
-        for k in range(4):
-            arm = triangle_centre[part, k] - apex[cells]
-            piece = sign * np.einsum("ij,ij->i", arm, triangle_area[part, k]) / 3.0
-            volume += np.bincount(cells, piece, n_cells)
-            for axis in range(3):
-                moment[:, axis] += np.bincount(cells, piece * 0.75 * arm[:, axis], n_cells)
-    cell_centre = apex + moment / volume[:, None]
+def _with_geometry(points: np.ndarray, blocks: tuple, face_points: np.ndarray,
+                   left: np.ndarray, right: np.ndarray, slices: dict[str, slice]) -> Mesh:
+    n_cells, n_internal = sum(len(cells) for _, _, cells in blocks), len(right)
+    apex, new_number = np.empty((n_cells, 3)), np.concatenate([cells for _, _, cells in blocks])
+    for _, conn, cells in blocks:
+        apex[cells] = sum(points[column] for column in conn.T) / conn.shape[1]
+    area, centre, volume, cell_centre, warp = face_and_cell_geometry(points, face_points, left,
+                                                                     right, apex)
+    own = left[:n_internal]
+    to_face = centre[:n_internal] - cell_centre[own]
     delta = centre - cell_centre[left]
-    to_face = np.abs(np.einsum("ij,ij->i", delta[:n_internal], area[:n_internal]))
-    from_face = np.abs(np.einsum("ij,ij->i", cell_centre[right] - centre[:n_internal],
-                                 area[:n_internal]))
-    weight = from_face / np.maximum(to_face + from_face, 1e-300)
-    delta[:n_internal] = cell_centre[right] - cell_centre[left[:n_internal]]
+    delta[:n_internal] = cell_centre[right] - cell_centre[own]
+    near = np.abs(np.einsum("ij,ij->i", to_face, area[:n_internal]))
+    far = np.abs(np.einsum("ij,ij->i", delta[:n_internal] - to_face, area[:n_internal]))
     return Mesh(points=_read_only(points), cell_blocks=blocks,
-                file_index=_read_only(old_number.astype(np.int32)),
-                face_points=_read_only(face_points.astype(np.int32)),
-                left=_read_only(left.astype(np.int32)), right=_read_only(right.astype(np.int32)),
-                face_area=_read_only(area), face_centre=_read_only(centre),
-                cell_volume=_read_only(volume), cell_centre=_read_only(cell_centre),
-                delta=_read_only(delta), weight=_read_only(weight),
+                file_index=_read_only(np.argsort(new_number).astype(np.int32)),
+                face_points=_read_only(face_points), left=_read_only(left),
+                right=_read_only(right), face_area=_read_only(area),
+                face_centre=_read_only(centre), cell_volume=_read_only(volume),
+                cell_centre=_read_only(cell_centre), delta=_read_only(delta),
+                weight=_read_only(far / np.maximum(near + far, 1e-300)), warp=_read_only(warp),
                 boundaries=MappingProxyType(slices))
-
-
-def _mean_over_cells(face_values: np.ndarray, left: np.ndarray, right: np.ndarray,
-                     n_cells: int) -> np.ndarray:
-    cells = np.concatenate([left, right])
-    values = np.concatenate([face_values, face_values[:len(right)]])
-    count = np.bincount(cells, minlength=n_cells)
-    return np.stack([np.bincount(cells, values[:, axis], n_cells) / count for axis in range(3)],
-                    axis=1)

@@ -7,7 +7,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..errors import MeshError
-from .mesh import LOCAL_FACES, Mesh
+from .mesh import Mesh
+from .topology import LOCAL_FACES
 
 _PLURAL = {"tetra": "tetrahedra", "hexahedron": "hexahedra", "wedge": "wedges",
            "pyramid": "pyramids"}

@@ -15,8 +15,10 @@ import scipy.sparse as sparse
 from scipy.sparse.csgraph import connected_components
 
 from ..errors import MeshError
-from .mesh import CELL_KINDS, Mesh, build_mesh, signed_volumes
+from .geometry import signed_volumes
+from .mesh import Mesh, build_mesh
 from .quality import check_mesh
+from .topology import CELL_KINDS
 
 _SURFACE = {"triangle": 3, "quad": 4}
 _LEFT_OUT = ("vertex", "line")
@@ -163,7 +165,7 @@ def _named_surfaces(raw: Any, surfaces: list[tuple[int, np.ndarray]],
     for position, faces in surfaces:
         covered = np.zeros(len(faces), dtype=bool)
         for name, sets in raw.cell_sets.items():
-            if name.startswith("gmsh:") or sets[position] is None:
+            if name.startswith("gmsh:") or position >= len(sets) or sets[position] is None:
                 continue
             members = np.asarray(sets[position])
             members = np.flatnonzero(members) if members.dtype == bool else members.astype(int)
