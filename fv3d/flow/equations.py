@@ -26,11 +26,13 @@ from .problem import Force, Problem
 class PressureFields:
     """Pressure with what follows from it: boundary values and the conservative gradient.
 
-    ``face`` (n_faces,) [Pa]; ``gradient`` (n_cells, 3) [Pa/m] by summing ``face`` times area.
+    ``face`` (n_faces,) [Pa]; ``gradient`` (n_cells, 3) [Pa/m] by summing ``face`` times area plus
+    ``warp_force`` (n_faces, 3) [N], the slope's share on faces that are not flat.
     """
 
     cell: np.ndarray
     face: np.ndarray
+    warp_force: np.ndarray
     gradient: np.ndarray
 
 
@@ -90,16 +92,30 @@ def pressure_fields(problem: Problem, pressure: np.ndarray,
     kernels.linear_face_values(mesh.left[:n], mesh.right, mesh.weight, mesh.skew_offset, pressure,
                                gradient, face[:n])
     face[n:] = boundary_pressure(problem, pressure, gradient, boundary_flux)
-    return PressureFields(pressure, face, surface_gradient(problem, face))
+    return PressureFields(pressure, face, _warp_force(problem, gradient),
+                          surface_gradient(problem, face, gradient))
 
 
-def surface_gradient(problem: Problem, face_values: np.ndarray) -> np.ndarray:
-    """(n_cells, 3) sum of face value times area vector over the cell volume."""
+def surface_gradient(problem: Problem, face_values: np.ndarray,
+                     slope: np.ndarray) -> np.ndarray:
+    """(n_cells, 3) surface integral of a scalar over the cell volume.
+
+    ``slope`` (n_cells, 3), the scalar's gradient, carries the integral over warped faces.
+    """
     mesh = problem.mesh
     offsets, faces, sign = mesh.cell_faces
     out = np.empty((mesh.n_cells, 3))
     kernels.surface_sum(offsets, faces, sign, face_values, mesh.face_area, mesh.cell_volume, out)
+    if mesh.warped:
+        out += (mesh.outflow @ _warp_force(problem, slope)) / mesh.cell_volume[:, None]
     return out
+
+
+def _warp_force(problem: Problem, slope: np.ndarray) -> np.ndarray:
+    mesh = problem.mesh
+    if not mesh.warped:
+        return np.zeros((mesh.n_faces, 3))
+    return np.einsum("fj,fji->fi", mesh.to_faces(slope), mesh.warp)
 
 
 def momentum(problem: Problem, velocity: np.ndarray, gradient: np.ndarray, edge: np.ndarray,
@@ -119,6 +135,8 @@ def momentum(problem: Problem, velocity: np.ndarray, gradient: np.ndarray, edge:
         problem.orthogonal, mesh.face_centre, mesh.cell_centre, mass_flux, problem.face_viscosity,
         velocity, gradient, float(scheme.upwind_share), float(scheme.central_share),
         problem.full_stress, coefficient, explicit)
+    if mesh.warped:
+        explicit += _warp_convection(problem, velocity, gradient)[:n]
     data = np.zeros(len(layout.indices))
     neighbours, rhs = np.zeros(mesh.n_cells), np.zeros((mesh.n_cells, 3))
     offsets, faces, sign = mesh.cell_faces
@@ -133,6 +151,13 @@ def momentum(problem: Problem, velocity: np.ndarray, gradient: np.ndarray, edge:
         rhs[:, axis] += np.bincount(owner, outer[:, axis], mesh.n_cells)
         full[:, axis] = diagonal + extra
     return Momentum(Rows(layout, data, full, rhs), diagonal, neighbours)
+
+
+def _warp_convection(problem: Problem, velocity: np.ndarray, gradient: np.ndarray) -> np.ndarray:
+    """(n_faces, 3) convection of the velocity's slope over warped faces [N]."""
+    mesh = problem.mesh
+    through = np.einsum("fi,fji->fj", mesh.to_faces(velocity), mesh.warp)
+    return problem.case.fluid.density * np.einsum("fj,fkj->fk", through, mesh.to_faces(gradient))
 
 
 def _boundary_momentum(problem: Problem, velocity: np.ndarray, gradient: np.ndarray,
@@ -203,6 +228,9 @@ def interpolated_flux(problem: Problem, velocity: np.ndarray, gradient: np.ndarr
     through = np.einsum("ij,ij->i", edge, mesh.face_area[n:])
     free = density * (through + d[owner] * (problem.orthogonal[n:] * (smooth - jump) + memory[n:]))
     flux[n:] = np.where(problem.table.pressure_given, free, problem.fixed_flux)
+    if mesh.warped:
+        slope = mesh.to_faces(gradient)
+        flux[:n] += density * np.einsum("fij,fji->f", slope[:n], mesh.warp[:n])
     return flux
 
 

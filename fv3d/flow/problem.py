@@ -255,6 +255,10 @@ def balanced_force(mesh: Mesh, cell_force: np.ndarray) -> Force:
     potential = np.einsum("ij,ij->i", np.concatenate([at_face, at_face, outer]), reach)
     area = np.concatenate([mesh.face_area[:n], -mesh.face_area[:n], mesh.face_area[n:]])
     cell = np.stack([np.bincount(cells, potential * area[:, axis], mesh.n_cells)
-                     for axis in range(3)], axis=1) / mesh.cell_volume[:, None]
+                     for axis in range(3)], axis=1)
+    if mesh.warped:
+        faces = np.concatenate([at_face, outer])
+        cell += mesh.outflow @ np.einsum("fj,fji->fi", faces, mesh.warp)
+    cell /= mesh.cell_volume[:, None]
     drop = np.einsum("ij,ij->i", np.concatenate([at_face, outer]), mesh.delta)
     return Force(cell, drop)
