@@ -11,7 +11,6 @@ import numpy as np
 from .topology import LOCAL_FACES
 
 _CHUNK = 32768
-_FLAT = 1e-11
 
 
 def signed_volumes(points: np.ndarray, kind: str, connectivity: np.ndarray) -> np.ndarray:
@@ -52,7 +51,6 @@ def face_and_cell_geometry(points: np.ndarray, face_points: np.ndarray, left: np
     area, centre = np.empty((n_faces, 3)), np.empty((n_faces, 3))
     warps = []
     from_left, from_right = np.empty((4, n_faces)), np.empty((4, n_internal))
-    warp = np.zeros((0, 3, 3))
     for at in range(0, n_faces, _CHUNK):
         rows = slice(at, min(at + _CHUNK, n_faces))
         hub, vector, moment = _fan(points, face_points[rows])
