@@ -246,7 +246,7 @@ def test_without_graphics_a_sentence_and_no_file(tmp_path, monkeypatch):
 
 def test_frame_lays_the_long_side_across():
     points = np.array([[0, 0, 0], [0.1, 0.0, 0.0], [0, 0, 2.0]])
-    frame = frame_of_plane(points, np.zeros(3), np.array([0.0, 1.0, 0.0]))
+    frame = frame_of_plane(points, origin=np.zeros(3), normal=np.array([0.0, 1.0, 0.0]))
     assert frame.labels == ("z [m]", "x [m]") and frame.width == 2.0 and frame.height == 0.1
     np.testing.assert_allclose(np.abs(frame.toward), [0, 1, 0])
 

@@ -39,7 +39,7 @@ class Frame:
         return np.cross(self.right, self.up)
 
 
-def frame_of_plane(points: np.ndarray, origin: np.ndarray, normal: np.ndarray) -> Frame:
+def frame_of_plane(points: np.ndarray, *, origin: np.ndarray, normal: np.ndarray) -> Frame:
     """Look along the normal, the longest extent of the points (n, 3) across the picture."""
     axes = np.delete(np.eye(3), np.argmax(np.abs(normal)), axis=0)
     extent = np.ptp(points @ axes.T, axis=0)
@@ -121,7 +121,7 @@ class Canvas:
     def text(self, words: str, at: tuple[float, float], *, size: int = FONT, bold: bool = False,
              across: str = "left", turned: bool = False) -> None:
         """Write words at a pixel; ``across`` is left, centre or right."""
-        add_text(self.plotter, words, at, size=size, bold=bold, across=across, turned=turned)
+        add_text(self.plotter, words, at=at, size=size, bold=bold, across=across, turned=turned)
 
     def lines(self, edges: Any) -> None:
         """Draw thin black lines."""
@@ -231,7 +231,7 @@ def quiet() -> None:
     vtkLogger.SetStderrVerbosity(vtkLogger.VERBOSITY_OFF)
 
 
-def add_text(plotter: Any, words: str, at: tuple[float, float], *, size: int = FONT,
+def add_text(plotter: Any, words: str, *, at: tuple[float, float], size: int = FONT,
              bold: bool = False, across: str = "left", turned: bool = False) -> None:
     """Write words at a pixel of the window; ``across`` is left, centre or right."""
     from vtkmodules.vtkRenderingCore import vtkTextActor
@@ -263,7 +263,7 @@ def legend(plotter: Any, colours: dict[str, str], *, top: float, right: float, l
     while len(entries) > 1 and sum(wide) > right - left:
         entries, wide = [*entries[:-2], ("...", "")], [*wide[:-2], 62 + 0.56 * size * 3]
     for (words, colour), width in zip(reversed(entries), reversed(wide), strict=True):
-        add_text(plotter, words, (right, top), across="right", size=size)
+        add_text(plotter, words, at=(right, top), across="right", size=size)
         if colour:
             at = (right - width + 38, top + 10)
             dot(at, "black", 22)

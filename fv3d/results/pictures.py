@@ -62,7 +62,8 @@ def picture(run: Any, path: PathLike, *, readings: Readings | None = None,
                         remedy="Choose a point inside the mesh.")
 
     def draw(aside: Path) -> None:
-        canvas = Canvas(frame_of_plane(cut.points, point, normal), title=title or str(run.name))
+        frame = frame_of_plane(cut.points, origin=point, normal=normal)
+        canvas = Canvas(frame, title=title or str(run.name))
         canvas.field(cut, "speed", label="speed [m/s]", limits=limits)
         canvas.lines(cut.extract_feature_edges(boundary_edges=True, feature_edges=False,
                                                non_manifold_edges=False, manifold_edges=False))
@@ -97,7 +98,7 @@ def picture_readings(mesh: Mesh, readings: Readings, *, path: PathLike,
 
     def draw(aside: Path) -> None:
         from .scene import draw_scene
-        draw_scene(mesh, readings, aside, title=title)
+        draw_scene(mesh, readings, path=aside, title=title)
     return _draw_aside(target, draw)
 
 

@@ -17,7 +17,7 @@ DIRECTION = np.array([0.45, 0.4, 0.8])  # from the mesh to the eye: right, up, t
 MARGIN = 0.74  # share of the width of the window the mesh fills
 
 
-def draw_scene(mesh: Mesh, readings: Readings, path: Path, *, title: str) -> None:
+def draw_scene(mesh: Mesh, readings: Readings, *, path: Path, title: str) -> None:
     """Draw mesh surface, edges, box with axes in metres, and the readings by group."""
     import pyvista as pv
     quiet()
@@ -40,7 +40,7 @@ def draw_scene(mesh: Mesh, readings: Readings, path: Path, *, title: str) -> Non
         plotter.add_mesh(balls, color=colour, smooth_shading=True, ambient=0.45)
     _axes(plotter, low, high, view)
     top = view.size[1] - 60
-    add_text(plotter, title, (40, top), size=FONT + 6, bold=True)
+    add_text(plotter, title, at=(40, top), size=FONT + 6, bold=True)
 
     def dot(at: tuple[float, float], colour: str, size: int) -> None:
         if colour != "black":
@@ -168,4 +168,4 @@ def _outer_edge(low: np.ndarray, high: np.ndarray, axis: int,
 def _label(plotter: Any, words: str, at: np.ndarray, out: np.ndarray) -> None:
     across = "left" if out[0] > 0.5 else "right" if out[0] < -0.5 else "centre"
     drop = 26 if out[1] < -0.5 else 11
-    add_text(plotter, words, (float(at[0]), float(at[1]) - drop), across=across)
+    add_text(plotter, words, at=(float(at[0]), float(at[1]) - drop), across=across)
