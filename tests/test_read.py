@@ -124,6 +124,28 @@ def test_physical_groups_without_names_are_tags(tmp_path: Path) -> None:
     assert sorted(read_mesh(tmp_path / "a.msh").boundaries) == [f"tag {k}" for k in range(1, 7)]
 
 
+def test_family_names_of_tags(tmp_path: Path) -> None:
+    """A format that keeps a table of group names for its tags."""
+    mesh = small()
+    raw = meshio_of(mesh)
+    raw.cell_data = {"cell_tags": [np.zeros(mesh.n_cells, dtype=int), -raw.cell_data["tag"][1]]}
+    raw.cell_tags = {-k: [name] for k, name in enumerate(SIDES, start=1)}
+    meshio.write(tmp_path / "a.med", raw)
+    assert_same(mesh, read_mesh(tmp_path / "a.med"))
+
+
+def test_group_number_zero_is_no_name(tmp_path: Path, capsys: Any) -> None:
+    raw = meshio_of(small())
+    tags = raw.cell_data["tag"]
+    groups = [tags[0], np.where(tags[1] == 3, 0, tags[1])]
+    raw.cell_data = {"gmsh:physical": groups, "gmsh:geometrical": tags}
+    meshio.write(tmp_path / "a.msh", raw, file_format="gmsh22")
+    _refused(tmp_path / "a.msh", "4 boundary face.* have no name", capsys)
+    raw.cell_data = {"gmsh:physical": [0 * t for t in tags], "gmsh:geometrical": tags}
+    meshio.write(tmp_path / "b.msh", raw, file_format="gmsh22")
+    assert sorted(read_mesh(tmp_path / "b.msh").boundaries) == [f"tag {k}" for k in range(1, 7)]
+
+
 def meshio_of(mesh: Mesh) -> meshio.Mesh:
     """Cells, then one block of quadrilaterals with tags 1 to 6."""
     faces = mesh.face_points[mesh.n_internal:].astype(np.int64)

@@ -8,7 +8,6 @@ from dataclasses import dataclass, field
 import numpy as np
 import scipy.sparse as sparse
 from scipy.sparse.csgraph import connected_components
-from scipy.spatial import cKDTree
 
 from ..errors import MeshError
 from .geometry import signed_volumes
@@ -130,6 +129,7 @@ def patch_between(first: np.ndarray, second: np.ndarray, share: np.ndarray) -> n
 
 def _merged_points(blocks: Sequence[Block]) -> tuple[np.ndarray, list[np.ndarray]]:
     """Points without duplicates and the point numbers of each block in its own shape."""
+    from scipy.spatial import cKDTree  # slow to import, needed only here
     shapes = [block.points.shape[:3] for block in blocks]
     cloud = np.concatenate([block.points.reshape(-1, 3) for block in blocks])
     surface = np.flatnonzero(np.concatenate([_on_surface(shape).ravel() for shape in shapes]))

@@ -52,7 +52,8 @@ def channel_with_cylinder(*, length: float, height: float, depth: float, centre:
     refinement : int
         Multiplies all cell counts (also ``around`` and ``layers``; one layer stays one).
     tetra : bool
-        Cut every hexahedron into six tetrahedra.
+        Cut every hexahedron into six tetrahedra; good ones need a depth of the cells near
+        their size in the plane.
 
     Returns
     -------
@@ -215,7 +216,8 @@ def channel_with_block(*, length: float, height: float, depth: float, lower: Seq
     refinement : int
         Multiplies all cell counts (one layer stays one).
     tetra : bool
-        Cut every hexahedron into six tetrahedra.
+        Cut every hexahedron into six tetrahedra; good ones need a depth of the cells near
+        their size in the plane.
 
     Returns
     -------

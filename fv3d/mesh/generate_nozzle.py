@@ -50,7 +50,8 @@ def nozzle(sections: Sequence[tuple[float, float]], *, core: int = 4,
     refinement : int
         Multiplies all cell counts.
     tetra : bool
-        Cut every hexahedron into six tetrahedra.
+        Cut every hexahedron into six tetrahedra; good ones need axial cells not much longer
+        than wide, and ``wall_share=1``.
 
     Returns
     -------

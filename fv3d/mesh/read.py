@@ -22,7 +22,8 @@ from .topology import CELL_KINDS
 
 _SURFACE = {"triangle": 3, "quad": 4}
 _LEFT_OUT = ("vertex", "line")
-_TAG_KEYS = ("gmsh:physical", "medit:ref", "gmsh:geometrical")
+_TAG_KEYS = ("gmsh:physical", "cell_tags", "medit:ref", "gmsh:geometrical")
+_GROUP_KEYS = ("gmsh:physical", "cell_tags")           # tag 0 means no group
 
 
 def read_mesh(path: str | os.PathLike[str], *, scale: float = 1.0,
@@ -159,9 +160,7 @@ def _named_surfaces(raw: Any, surfaces: list[tuple[int, np.ndarray]],
                     source: str) -> dict[int | str, list[np.ndarray]]:
     """Faces under each name of the file: sets first, then tags for what is left."""
     found: dict[int | str, list[np.ndarray]] = {}
-    groups = {tag: name for name, (tag, dim) in
-              ((name, np.ravel(pair)[:2]) for name, pair in raw.field_data.items()
-               if np.size(pair) >= 2) if dim == 2}
+    groups, all_tags = _group_names(raw), _tags(raw, surfaces)
     for position, faces in surfaces:
         covered = np.zeros(len(faces), dtype=bool)
         for name, sets in raw.cell_sets.items():
@@ -175,11 +174,11 @@ def _named_surfaces(raw: Any, surfaces: list[tuple[int, np.ndarray]],
             if members.size:
                 found.setdefault(name, []).append(faces[members])
                 covered[members] = True
-        tags = _tags(raw, position, len(faces))
-        if tags is None:
-            continue
+        tags = all_tags.get(position, np.zeros(len(faces), dtype=np.int64))
+        if position not in all_tags or any(key in raw.cell_data for key in _GROUP_KEYS):
+            covered |= tags == 0
         for tag in np.unique(tags[~covered]):
-            label = groups.get(tag, int(tag))
+            label = groups.get(int(tag), int(tag))
             found.setdefault(label, []).append(faces[~covered & (tags == tag)])
     if not found:
         raise MeshError("No boundary has a name.", where=source,
@@ -189,17 +188,31 @@ def _named_surfaces(raw: Any, surfaces: list[tuple[int, np.ndarray]],
     return found
 
 
-def _tags(raw: Any, position: int, count: int) -> np.ndarray | None:
-    """Integer tag of each surface element of a block, None if the file has none."""
-    keys = [key for key in _TAG_KEYS if key in raw.cell_data]
-    keys = keys[:1] + [key for key in raw.cell_data if key not in _TAG_KEYS]
-    for key in keys:
-        tags = np.asarray(raw.cell_data[key][position])
-        if tags.shape != (count,) or tags.dtype.kind not in "iuf":
-            continue
-        if np.all(np.isfinite(tags)) and np.array_equal(tags, np.round(tags)):
-            return tags.astype(np.int64)
-    return None
+def _tags(raw: Any, surfaces: list[tuple[int, np.ndarray]]) -> dict[int, np.ndarray]:
+    """Integer tags of the first kind the file has, for each surface block; 0 of a group is none."""
+    for key in (*_TAG_KEYS, *(key for key in raw.cell_data if key not in _TAG_KEYS)):
+        found = {}
+        for position, faces in surfaces:
+            tags = np.asarray(raw.cell_data[key][position] if key in raw.cell_data else [])
+            if (tags.shape == (len(faces),) and tags.dtype.kind in "iuf"
+                    and np.all(np.isfinite(tags)) and np.array_equal(tags, np.round(tags))):
+                found[position] = tags.astype(np.int64)
+        if found and (key not in _GROUP_KEYS or any(np.any(tags) for tags in found.values())):
+            return found
+    return {}
+
+
+def _group_names(raw: Any) -> dict[int, str]:
+    """Names the file gives to the tags of its surface groups."""
+    names = {}
+    for name, entry in raw.field_data.items():
+        entry = np.ravel(entry)
+        if len(entry) >= 2 and entry[1] == 2:
+            names[int(entry[0])] = str(name)
+    for tag, families in getattr(raw, "cell_tags", {}).items():
+        if families:
+            names.setdefault(int(tag), str(families[0]))
+    return names
 
 
 def _renamed(found: dict[int | str, list[np.ndarray]], names: Mapping[int | str, str],
