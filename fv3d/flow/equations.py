@@ -33,6 +33,7 @@ class PressureFields:
     cell: np.ndarray
     face: np.ndarray
     warp_force: np.ndarray
+    slope: np.ndarray
     gradient: np.ndarray
 
 
@@ -92,7 +93,7 @@ def pressure_fields(problem: Problem, pressure: np.ndarray,
     kernels.linear_face_values(mesh.left[:n], mesh.right, mesh.weight, mesh.skew_offset, pressure,
                                gradient, face[:n])
     face[n:] = boundary_pressure(problem, pressure, gradient, boundary_flux)
-    return PressureFields(pressure, face, _warp_force(problem, gradient),
+    return PressureFields(pressure, face, _warp_force(problem, gradient), gradient,
                           surface_gradient(problem, face, gradient))
 
 
@@ -213,7 +214,7 @@ def interpolated_flux(problem: Problem, velocity: np.ndarray, gradient: np.ndarr
         times density over time step; zero in a steady run.
     """
     mesh, n, density = problem.mesh, problem.mesh.n_internal, problem.case.fluid.density
-    net, drop = fields.gradient, np.zeros(mesh.n_faces)
+    net, drop = fields.slope, np.zeros(mesh.n_faces)
     if force is not None:
         net = net - density * force.cell
         drop = density * force.drop

@@ -134,6 +134,27 @@ def _barycentric(o: np.ndarray, h: np.ndarray, a: np.ndarray, b: np.ndarray,
     return np.column_stack([1.0 - inner.sum(axis=1), inner])
 
 
+def _onto_surface(mesh: Mesh, points: np.ndarray, which: np.ndarray, *,
+                  slack: float = 0.05) -> np.ndarray:
+    """Points just off a boundary moved onto it: flat faces stand for curved walls.
+
+    ``slack`` is the distance allowed, as a share of the nearest boundary face's size.
+    """
+    from scipy.spatial import cKDTree
+    n, points = mesh.n_internal, points.copy()
+    near = min(6, mesh.n_boundary)
+    _, faces = cKDTree(mesh.face_centre[n:]).query(points[which], k=near)
+    faces = np.asarray(faces).reshape(len(which), near) + n
+    for i, candidates in zip(which, faces, strict=True):
+        off = np.einsum("kj,kj->k", points[i] - mesh.face_centre[candidates],
+                        mesh.face_normal[candidates])
+        size = np.sqrt(mesh.face_area_magnitude[candidates])
+        for k in np.argsort(-off):
+            if 0.0 < off[k] <= slack * size[k]:
+                points[i] -= (off[k] + 1e-9 * size[k]) * mesh.face_normal[candidates[k]]
+    return points
+
+
 def point_interpolation(mesh: Mesh, gradient: GradientOperator, points: np.ndarray, *,
                         where: str = "sample(points)",
                         names: list[str] | None = None) -> PointInterpolation:
@@ -149,10 +170,13 @@ def point_interpolation(mesh: Mesh, gradient: GradientOperator, points: np.ndarr
     Raises
     ------
     CaseError
-        A point lies outside the mesh.
+        A point lies outside the mesh by more than a twentieth of the nearest boundary face.
     """
     points = checked_points(points, where)
     place = _locate(mesh, points, 12)
+    if np.any(place.cell < 0):
+        points = _onto_surface(mesh, points, np.flatnonzero(place.cell < 0))
+        place = _locate(mesh, points, 12)
     outside = np.flatnonzero(place.cell < 0)
     if outside.size:
         i = int(outside[0])
