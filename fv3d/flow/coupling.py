@@ -179,7 +179,7 @@ def reference_flux(problem: Problem, flux: np.ndarray, velocity: np.ndarray) -> 
     mesh, density = problem.mesh, problem.case.fluid.density
     inflow = -np.minimum(flux[mesh.n_internal:], 0.0).sum()
     volume = mesh.cell_volume.sum()
-    speed = np.linalg.norm(velocity, axis=1) @ mesh.cell_volume / volume
+    speed = np.einsum("i,i->", np.linalg.norm(velocity, axis=1), mesh.cell_volume) / volume
     circulating = density * speed * volume ** (2 / 3)
     return float(max(inflow if inflow > 1e-3 * circulating else circulating, 1e-300))
 

@@ -1,0 +1,51 @@
+"""Complete 3D flow fields from a mesh, a few readings and a coarse simulation.
+
+The names below are in the order a script uses them.
+"""
+
+from .errors import (
+    BoundaryError,
+    CaseError,
+    DivergenceError,
+    FileError,
+    Fv3dError,
+    Fv3dWarning,
+    MeshError,
+    Outcome,
+    ReadingError,
+)
+from .flow.boundary import Inlet, Outlet, Symmetry, Wall
+from .flow.fluid import Fluid, moist_air, water
+from .flow.numerics import SIMPLE, SIMPLEC, Numerics
+from .flow.problem import Case
+from .flow.run import Run, iterate, solve_steady
+from .measured.compare import Comparison, compare
+from .measured.readings import Readings, observe, read_readings
+from .mesh.generate import box
+from .mesh.generate_channel import channel_with_block, channel_with_cylinder
+from .mesh.generate_nozzle import nozzle
+from .mesh.grading import OneSided, Spacing, TwoSided, Uniform
+from .mesh.mesh import Mesh, build_mesh
+from .mesh.quality import check_mesh, quality
+from .mesh.read import read_mesh
+from .mesh.write import write_mesh
+from .operators.fluxes import Blended, Central, SecondOrderUpwind, Upwind
+from .operators.gradient import LeastSquares
+from .operators.kernels import get_threads, set_threads
+from .operators.linear import ByAnisotropy, Classical, SmoothedAggregation
+from .results.diagnostics import BoundaryForce, MomentumBudget, force, momentum_budget
+from .results.files import write_history, write_readings, write_vtk
+from .results.pictures import picture, picture_readings
+
+__all__ = [
+    "SIMPLE", "SIMPLEC", "Blended", "BoundaryError", "BoundaryForce", "ByAnisotropy", "Case",
+    "CaseError", "Central", "Classical", "Comparison", "DivergenceError", "FileError", "Fluid",
+    "Fv3dError", "Fv3dWarning", "Inlet", "LeastSquares", "Mesh", "MeshError", "MomentumBudget",
+    "Numerics", "OneSided", "Outcome", "Outlet", "ReadingError", "Readings", "Run",
+    "SecondOrderUpwind", "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided", "Uniform",
+    "Upwind", "Wall", "box", "build_mesh", "channel_with_block", "channel_with_cylinder",
+    "check_mesh", "compare", "force", "get_threads", "iterate", "moist_air", "momentum_budget",
+    "nozzle", "observe", "picture", "picture_readings", "quality", "read_mesh", "read_readings",
+    "set_threads", "solve_steady", "water", "write_history", "write_mesh", "write_readings",
+    "write_vtk",
+]
