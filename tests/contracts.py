@@ -1,0 +1,289 @@
+"""One list of promises per kind of method; every new member of a kind must pass its list.
+
+A list is a dictionary of checks, ``name -> check(method)``; a test file parametrises over the
+members and the list, for example ``GRADIENT`` and ``fv3d.LeastSquares()``.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any
+
+import numpy as np
+from scipy.spatial.transform import Rotation
+
+import fv3d
+from fv3d.flow.boundary import BoundaryTable
+from fv3d.flow.problem import make_problem
+from fv3d.mesh.generate import box
+from fv3d.mesh.mesh import Mesh
+from fv3d.operators import kernels
+from fv3d.operators.gradient import BoundaryKnowledge
+
+Check = Callable[[Any], None]
+ROTATION = Rotation.from_rotvec([0.3, -0.5, 0.7]).as_matrix()
+SLOPE = np.array([[0.7, -1.1, 0.4], [0.2, 0.5, -0.9], [1.3, 0.1, -1.2]])  # trace 0
+SHIFT = np.array([0.3, -0.2, 0.1])
+
+
+def skewed(n: int, *, tetra: bool = False) -> Mesh:
+    """Unit cube of n cells along each axis (cut into tetrahedra), points shaken."""
+    return box((0, 0, 0), (1, 1, 1), cells=(n, n, n), tetra=tetra, skew=0.15 if tetra else 0.25,
+               seed=n)
+
+
+def linear(points: np.ndarray) -> np.ndarray:
+    """(n, 3) -> (n, 3) a linear, divergence-free vector field."""
+    return points @ SLOPE.T + SHIFT
+
+
+def edge_centres(mesh: Mesh) -> np.ndarray:
+    """(n_boundary, 3) centres of the boundary faces."""
+    return mesh.face_centre[mesh.n_internal:]
+
+
+def observed_order(errors: list[float], sizes: list[float]) -> float:
+    """Slope of log error over log size by least squares."""
+    return float(np.polyfit(np.log(sizes), np.log(errors), 1)[0])
+
+
+# ----------------------------------------------------------------------------- gradient
+
+def _gradient(method: Any, mesh: Mesh) -> Any:
+    return method.weights(mesh, BoundaryKnowledge.everywhere(mesh))
+
+
+def gradient_of_a_constant_is_zero(method: Any) -> None:
+    for tetra in (False, True):
+        mesh = skewed(4, tetra=tetra)
+        slope = _gradient(method, mesh)(np.full(mesh.n_cells, 3.7), np.full(mesh.n_boundary, 3.7))
+        assert np.all(slope == 0.0)
+
+
+def gradient_is_exact_on_linear_fields(method: Any) -> None:
+    for tetra in (False, True):
+        mesh = skewed(4, tetra=tetra)
+        slope = _gradient(method, mesh)(linear(mesh.cell_centre), linear(edge_centres(mesh)))
+        np.testing.assert_allclose(slope, np.broadcast_to(SLOPE, slope.shape), atol=1e-11)
+
+
+def gradient_turns_with_the_mesh(method: Any) -> None:
+    for tetra in (False, True):
+        mesh = skewed(4, tetra=tetra)
+        turned = turned_mesh(mesh, ROTATION)
+        r = np.random.default_rng(0)
+        cells, edges = r.normal(size=mesh.n_cells), r.normal(size=mesh.n_boundary)
+        slope = _gradient(method, mesh)(cells, edges)
+        again = _gradient(method, turned)(cells, edges)
+        np.testing.assert_allclose(again, slope @ ROTATION.T, atol=1e-10 * np.abs(slope).max())
+
+
+def turned_mesh(mesh: Mesh, rotation: np.ndarray) -> Mesh:
+    """The same mesh, same numbering, about the origin."""
+    blocks = [(kind, conn[np.argsort(cells)]) for kind, conn, cells in mesh.cell_blocks]
+    boundaries = {name: [np.array([row[row >= 0] for row in mesh.face_points[faces]])]
+                  for name, faces in mesh.boundaries.items()}
+    turned = fv3d.build_mesh(mesh.points @ rotation.T, blocks, boundaries, renumber=False)
+    np.testing.assert_allclose(turned.cell_centre, mesh.cell_centre @ rotation.T, atol=1e-13)
+    np.testing.assert_array_equal(turned.left, mesh.left)
+    return turned
+
+
+def gradient_has_its_declared_order(method: Any) -> None:
+    """On shaken meshes, whose cells do not become more regular as they shrink."""
+    for tetra in (False, True):
+        errors, sizes = [], []
+        for n in (6, 10, 16) if tetra else (8, 14, 24):
+            mesh = skewed(n, tetra=tetra)
+            slope = _gradient(method, mesh)(_wave(mesh.cell_centre), _wave(edge_centres(mesh)))
+            error = ((slope - _wave_slope(mesh.cell_centre))**2).sum(axis=1)
+            errors.append(float(np.sqrt(np.average(error, weights=mesh.cell_volume))))
+            sizes.append(1.0 / n)
+        assert observed_order(errors, sizes) > method.order - 0.1
+
+
+def gradient_extends_where_boundary_values_are_unknown(method: Any) -> None:
+    """Exact on linear fields from the cells alone, wherever a cell has neighbours enough."""
+    mesh = skewed(4)
+    nothing = np.zeros(mesh.n_boundary, bool)
+    operator = method.weights(mesh, BoundaryKnowledge(nothing, nothing))
+    slope = operator(linear(mesh.cell_centre), np.full((mesh.n_boundary, 3), 1e6))
+    np.testing.assert_allclose(slope, np.broadcast_to(SLOPE, slope.shape), atol=1e-10)
+
+
+def _wave(x: np.ndarray) -> np.ndarray:
+    return np.sin(2.0 * x[:, 0]) * np.cos(3.0 * x[:, 1]) * np.exp(x[:, 2])
+
+
+def _wave_slope(x: np.ndarray) -> np.ndarray:
+    a, b, c = 2.0 * x[:, 0], 3.0 * x[:, 1], np.exp(x[:, 2])
+    return np.stack([2 * np.cos(a) * np.cos(b) * c, -3 * np.sin(a) * np.sin(b) * c,
+                     np.sin(a) * np.cos(b) * c], axis=1)
+
+
+GRADIENT: dict[str, Check] = {f.__name__: f for f in (
+    gradient_of_a_constant_is_zero, gradient_is_exact_on_linear_fields,
+    gradient_turns_with_the_mesh, gradient_has_its_declared_order,
+    gradient_extends_where_boundary_values_are_unknown)}
+
+
+# ----------------------------------------------------------------------------- convection
+
+def face_values(scheme: Any, mesh: Mesh, flux: np.ndarray, values: np.ndarray,
+                gradient: np.ndarray) -> np.ndarray:
+    """(n_internal, k) values a scheme convects, by the compiled loop."""
+    n = mesh.n_internal
+    coefficient, explicit = np.empty((n, 2)), np.empty((n, values.shape[1]))
+    kernels.transport_faces(
+        mesh.left[:n], mesh.right, mesh.weight, mesh.skew_offset, mesh.face_area, mesh.delta,
+        np.ones(mesh.n_faces), mesh.face_centre, mesh.cell_centre, flux, np.zeros(mesh.n_faces),
+        values, gradient, float(scheme.upwind_share), float(scheme.central_share), False,
+        coefficient, explicit)
+    up = np.where(flux[:n] >= 0, mesh.left[:n], mesh.right)
+    return values[up] + explicit / flux[:n, None]
+
+
+def uniform_flux(mesh: Mesh, velocity: tuple[float, float, float]) -> np.ndarray:
+    """(n_faces,) flux of a uniform velocity: conserves exactly."""
+    return mesh.face_area @ np.array(velocity)
+
+
+def scheme_keeps_a_constant(scheme: Any) -> None:
+    for tetra in (False, True):
+        mesh = skewed(4, tetra=tetra)
+        values = np.full((mesh.n_cells, 3), 2.5)
+        at_face = face_values(scheme, mesh, uniform_flux(mesh, (1.0, 0.4, -0.3)), values,
+                              np.zeros((mesh.n_cells, 3, 3)))
+        np.testing.assert_allclose(at_face, 2.5, rtol=1e-15)
+
+
+def scheme_conserves_to_rounding(scheme: Any) -> None:
+    """What the cells gain is what the boundary brings: interior fluxes cancel in pairs."""
+    for tetra in (False, True):
+        mesh = skewed(4, tetra=tetra)
+        case = fv3d.Case(mesh, fv3d.Fluid(density=1.2, viscosity=0.3),
+                         boundaries={b: fv3d.Inlet(linear) for b in mesh.boundaries},
+                         numerics=fv3d.Numerics(convection=scheme))
+        imbalance, size = momentum_imbalance(make_problem(case))
+        assert np.abs(imbalance).max() <= 1e-13 * size
+
+
+def momentum_imbalance(problem: Any) -> tuple[np.ndarray, float]:
+    """Sum of all cells' residuals less what enters through the boundary, random fields."""
+    from fv3d.flow.equations import boundary_traction, momentum
+    mesh, r = problem.mesh, np.random.default_rng(5)
+    velocity, gradient = r.normal(size=(mesh.n_cells, 3)), r.normal(size=(mesh.n_cells, 3, 3))
+    edge, flux = r.normal(size=(mesh.n_boundary, 3)), r.normal(size=mesh.n_faces)
+    equation = momentum(problem, velocity, gradient, edge, flux)
+    gained = equation.rows.residual(velocity)
+    # the rows hold div(F u) - u div F: the imbalance of these random fluxes belongs to the cells
+    own = (mesh.outflow @ flux)[:, None] * velocity
+    entering = (boundary_traction(problem, velocity, gradient, edge)
+                - flux[mesh.n_internal:, None] * edge)
+    return (gained - own).sum(axis=0) - entering.sum(axis=0), float(np.abs(gained).sum())
+
+
+def scheme_has_its_declared_order(scheme: Any) -> None:
+    """Of the face value, with least-squares gradients on shaken meshes: declared +- 0.2."""
+    for tetra in (False, True):
+        errors, sizes = [], []
+        for n in (6, 10, 16) if tetra else (8, 14, 24):
+            mesh = skewed(n, tetra=tetra)
+            method = _gradient(fv3d.LeastSquares(), mesh)
+            slope = method(_wave(mesh.cell_centre), _wave(edge_centres(mesh)))
+            at_face = face_values(scheme, mesh, uniform_flux(mesh, (1.0, 0.4, -0.3)),
+                                  _wave(mesh.cell_centre)[:, None], slope[:, None, :])
+            error = at_face[:, 0] - _wave(mesh.face_centre[:mesh.n_internal])
+            errors.append(float(np.sqrt(np.mean(error**2))))
+            sizes.append(1.0 / n)
+        assert abs(observed_order(errors, sizes) - scheme.order) <= 0.2
+
+
+def scheme_is_bounded_if_it_claims_to(scheme: Any) -> None:
+    """A step carried obliquely through a channel stays between 0 and 1, or is seen to overshoot."""
+    new_extreme = overshoot(scheme)
+    if scheme.bounded:
+        assert new_extreme <= 1e-12
+    else:
+        assert new_extreme > 1e-3
+
+
+def overshoot(scheme: Any) -> float:
+    """Largest value outside 0 ... 1 of a steady convected step."""
+    from scipy.sparse.linalg import LinearOperator, gmres, splu
+    mesh = box((0, 0, 0), (1, 1, 0.1), cells=(20, 20, 1))
+    flux = uniform_flux(mesh, (1.0, 0.7, 0.0))
+    n, centre = mesh.n_internal, edge_centres(mesh)
+    owner, outer = mesh.left[n:], flux[n:]
+    step = (centre[:, 1] < 0.3).astype(float) * (centre[:, 0] < 1e-9)
+    method = _gradient(fv3d.LeastSquares(), mesh)
+
+    def net(values: np.ndarray, entering: np.ndarray, share: Any) -> np.ndarray:
+        edge = np.where(outer < 0, entering, values[owner])
+        at_face = face_values(share, mesh, flux + 1e-300, values[:, None],
+                              method(values, edge)[:, None, :])[:, 0]
+        return np.asarray(mesh.outflow @ np.concatenate([flux[:n] * at_face, outer * edge]))
+
+    size, none = mesh.n_cells, np.zeros(mesh.n_boundary)
+    upwind = np.column_stack([net(column, none, fv3d.Upwind()) for column in np.eye(size)])
+    from scipy.sparse import csc_matrix
+    factors = splu(csc_matrix(upwind))
+    shape = (size, size)
+    solution, failed = gmres(LinearOperator(shape, lambda x: net(x.ravel(), none, scheme)),
+                             -net(np.zeros(size), step, scheme), rtol=1e-12, atol=0.0,
+                             maxiter=40, restart=100, M=LinearOperator(shape, factors.solve))
+    assert failed == 0
+    return float(max(-solution.min(), solution.max() - 1.0))
+
+
+CONVECTION: dict[str, Check] = {f.__name__: f for f in (
+    scheme_keeps_a_constant, scheme_conserves_to_rounding, scheme_has_its_declared_order,
+    scheme_is_bounded_if_it_claims_to)}
+
+
+# ----------------------------------------------------------------------------- boundaries
+
+def filled(condition: Any, mesh: Mesh, side: str) -> tuple[BoundaryTable, slice]:
+    """Boundary table with the rows of one side filled."""
+    table = BoundaryTable.empty(mesh.n_boundary)
+    faces = mesh.boundaries[side]
+    rows = slice(faces.start - mesh.n_internal, faces.stop - mesh.n_internal)
+    condition.fill(table, rows, mesh.face_centre[faces], mesh.face_normal[faces])
+    return table, rows
+
+
+def condition_fills_its_rows_only(condition: Any) -> None:
+    mesh = skewed(3)
+    table, rows = filled(condition, mesh, "y_max")
+    untouched = BoundaryTable.empty(mesh.n_boundary)
+    other = np.ones(mesh.n_boundary, bool)
+    other[rows] = False
+    for name, column in vars(table).items():
+        np.testing.assert_array_equal(column[other], getattr(untouched, name)[other])
+        assert np.all(np.isfinite(column))
+
+
+def condition_turns_with_the_mesh(condition: Any) -> None:
+    """Coefficients along and across the face do not depend on the axes."""
+    mesh = skewed(3)
+    here, _ = filled(condition, mesh, "y_max")
+    there, _ = filled(condition, turned_mesh(mesh, ROTATION), "y_max")
+    for name in ("keep_tangential", "keep_normal", "shear_tangential", "shear_normal",
+                 "pressure_given", "pressure_flat", "pressure"):
+        np.testing.assert_array_equal(getattr(here, name), getattr(there, name))
+
+
+def condition_gives_a_velocity_or_a_pressure(condition: Any) -> None:
+    """Across the face either the flux is given or the pressure, never both, never neither."""
+    table, rows = filled(condition, skewed(3), "y_max")
+    assert np.all(table.flux_given[rows] != table.pressure_given[rows])
+
+
+def condition_is_frozen(condition: Any) -> None:
+    import dataclasses
+    assert dataclasses.is_dataclass(condition) and condition.__dataclass_params__.frozen
+
+
+BOUNDARY: dict[str, Check] = {f.__name__: f for f in (
+    condition_fills_its_rows_only, condition_turns_with_the_mesh,
+    condition_gives_a_velocity_or_a_pressure, condition_is_frozen)}
