@@ -107,7 +107,7 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     change = sweeps(residual)
     sources, misfit = [], 0.0
     for source, own in zip(problem.sources, state.sources, strict=True):
-        own, change, error = source.correct(own, state.velocity, change, sweeps)
+        own, change, error = source.correct(own, problem, state, change, sweeps)
         sources.append(own)
         misfit = max(misfit, error)
     velocity = state.velocity + change
@@ -198,7 +198,7 @@ def potential_start(problem: Problem, workspace: Workspace) -> State:
     flux = np.zeros(mesh.n_faces)
     flux[n:] = problem.fixed_flux
     outer = np.where(problem.table.pressure_given, problem.orthogonal[n:], 0.0)
-    if np.any(problem.fixed_flux) or problem.table.pressure[problem.table.pressure_given].any():
+    if np.any(problem.fixed_flux):
         inner = problem.orthogonal[:n]
         matrix = symmetric_matrix(mesh, problem.pattern, inner, outer)
         prepared = linear.prepare(matrix, singular=problem.closed)
@@ -206,8 +206,7 @@ def potential_start(problem: Problem, workspace: Workspace) -> State:
         flux = corrected_flux(problem, flux, potential.solution, inner, outer)
     velocity = velocity_from_flux(problem, flux)
     edge = boundary_velocity(problem, velocity, np.zeros((mesh.n_cells, 3, 3)), flux[n:])
-    sources = tuple(source.start(problem, None) for source in problem.sources)
-    return State(velocity, np.zeros(mesh.n_cells), flux, edge, sources)
+    return State(velocity, np.zeros(mesh.n_cells), flux, edge)
 
 
 def velocity_from_flux(problem: Problem, flux: np.ndarray) -> np.ndarray:

@@ -125,17 +125,20 @@ class Force:
 class Source(Protocol):
     """Something that adds force to the momentum equation and may solve for its strength."""
 
-    def start(self, problem: Problem, earlier: Any) -> Any:
-        """State before the first iteration; ``earlier`` the state of a start run or None."""
+    def start(self, problem: Problem, state: State, earlier: Any) -> Any:
+        """Own state before the first iteration; ``earlier`` that of a start run, or None."""
         ...
 
     def force(self, state: Any) -> Force:
         """The force it exerts now."""
         ...
 
-    def correct(self, state: Any, velocity: np.ndarray, change: np.ndarray,
+    def correct(self, own: Any, problem: Problem, state: State, change: np.ndarray,
                 relax: Callable[..., Any]) -> tuple[Any, np.ndarray, float]:
-        """New state, corrected velocity change, and remaining misfit relative to its scale."""
+        """New own state, corrected velocity change, and the misfit of ``state`` over its scale.
+
+        ``relax`` is the inexact momentum solve: right-hand side [N] to velocity change.
+        """
         ...
 
 
@@ -244,21 +247,54 @@ def balanced_force(mesh: Mesh, cell_force: np.ndarray) -> Force:
     Parameters
     ----------
     cell_force : (n_cells, 3) [m/s^2]
+
+    Returns
+    -------
+    Force
     """
-    n = mesh.n_internal
-    left, right, w = mesh.left[:n], mesh.right, mesh.weight[:, None]
-    at_face = w * cell_force[left] + (1 - w) * cell_force[right]
-    outer = cell_force[mesh.left[n:]]
-    cells = np.concatenate([left, right, mesh.left[n:]])
-    reach = np.concatenate([mesh.face_centre[:n] - mesh.cell_centre[left],
-                            mesh.face_centre[:n] - mesh.cell_centre[right], mesh.delta[n:]])
-    potential = np.einsum("ij,ij->i", np.concatenate([at_face, at_face, outer]), reach)
-    area = np.concatenate([mesh.face_area[:n], -mesh.face_area[:n], mesh.face_area[n:]])
-    cell = np.stack([np.bincount(cells, potential * area[:, axis], mesh.n_cells)
-                     for axis in range(3)], axis=1)
-    if mesh.warped:
-        faces = np.concatenate([at_face, outer])
-        cell += mesh.outflow @ np.einsum("fj,fji->fi", faces, mesh.warp)
-    cell /= mesh.cell_volume[:, None]
-    drop = np.einsum("ij,ij->i", np.concatenate([at_face, outer]), mesh.delta)
+    cell, drop = np.zeros((mesh.n_cells, 3)), np.zeros(mesh.n_faces)
+    _add_balanced(mesh, cell_force, np.arange(mesh.n_faces), cell, drop)
     return Force(cell, drop)
+
+
+def balanced_force_near(mesh: Mesh, cells: np.ndarray,
+                        force: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """As :func:`balanced_force` for a force in a few cells only.
+
+    Parameters
+    ----------
+    cells : (k,)
+    force : (k, 3) [m/s^2]
+
+    Returns
+    -------
+    touched cells (p,), their force (p, 3), touched faces (q,), their drop (q,)
+    """
+    offsets, around, _ = mesh.cell_faces
+    faces = np.unique(np.concatenate([around[offsets[c]:offsets[c + 1]] for c in cells]))
+    inner = faces[faces < mesh.n_internal]
+    touched = np.unique(np.concatenate([mesh.left[faces], mesh.right[inner]]))
+    whole, cell = np.zeros((mesh.n_cells, 3)), np.zeros((mesh.n_cells, 3))
+    drop = np.zeros(mesh.n_faces)
+    whole[cells] = force
+    _add_balanced(mesh, whole, faces, cell, drop)
+    return touched, cell[touched], faces, drop[faces]
+
+
+def _add_balanced(mesh: Mesh, cell_force: np.ndarray, faces: np.ndarray, cell: np.ndarray,
+                  drop: np.ndarray) -> None:
+    inner, outer = faces[faces < mesh.n_internal], faces[faces >= mesh.n_internal]
+    left, right, w = mesh.left[inner], mesh.right[inner], mesh.weight[inner, None]
+    owner = mesh.left[outer]
+    at_face = np.concatenate([w * cell_force[left] + (1 - w) * cell_force[right],
+                              cell_force[owner]])
+    order = np.concatenate([inner, outer])
+    drop[order] = np.einsum("ij,ij->i", at_face, mesh.delta[order])
+    warped = np.einsum("fj,fji->fi", at_face, mesh.warp[order]) if mesh.warped else 0.0
+    for cells, rows, sign in ((mesh.left[order], slice(None), 1.0),
+                              (right, slice(0, len(inner)), -1.0)):
+        reach = mesh.face_centre[order[rows]] - mesh.cell_centre[cells]
+        potential = np.einsum("ij,ij->i", at_face[rows], reach)
+        push = potential[:, None] * mesh.face_area[order[rows]]
+        push = sign * (push + (warped[rows] if mesh.warped else 0.0))
+        np.add.at(cell, cells, push / mesh.cell_volume[cells, None])

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -24,10 +25,20 @@ def start_state(problem: Problem, start: Any, workspace: Workspace) -> State:
     CaseError
         The start is of another kind, has a wrong shape or is not finite.
     """
+    earlier: dict[int, Any] = {}
     if start is None:
-        return potential_start(problem, workspace)
-    if hasattr(start, "state") and hasattr(start, "problem"):
-        return _from_run(problem, start)
+        state = potential_start(problem, workspace)
+    elif hasattr(start, "state") and hasattr(start, "problem"):
+        state = _from_run(problem, start)
+        earlier = dict(zip(map(id, start.problem.sources), start.state.sources, strict=True))
+    else:
+        state = _from_values(problem, start)
+    sources = tuple(source.start(problem, state, earlier.get(id(source)))
+                    for source in problem.sources)
+    return replace(state, sources=sources)
+
+
+def _from_values(problem: Problem, start: Any) -> State:
     centre = problem.mesh.cell_centre
     try:
         value = np.asarray(start(centre.copy()) if callable(start) else start, dtype=float)
@@ -47,17 +58,10 @@ def _from_run(problem: Problem, run: Any) -> State:
         raise CaseError("The start run has values that are not finite.", where="start=",
                         got=f"run '{run.name}'", remedy="Start from a run that did not diverge.")
     if run.mesh is problem.mesh:
-        sources = _carried_sources(problem, run)
-        return State(state.velocity, state.pressure, state.mass_flux, state.boundary_velocity,
-                     sources)
+        return State(state.velocity, state.pressure, state.mass_flux, state.boundary_velocity)
     points = problem.mesh.cell_centre
     velocity, pressure = sample_anywhere(run, points)
     return _with_fluxes(problem, velocity, pressure)
-
-
-def _carried_sources(problem: Problem, run: Any) -> tuple[Any, ...]:
-    old = dict(zip(map(id, run.problem.sources), run.state.sources, strict=True))
-    return tuple(source.start(problem, old.get(id(source))) for source in problem.sources)
 
 
 def sample_anywhere(run: Any, points: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -87,5 +91,4 @@ def _with_fluxes(problem: Problem, velocity: np.ndarray, pressure: np.ndarray) -
                              np.ones(mesh.n_boundary))
     outflow = density * np.einsum("ij,ij->i", edge, mesh.face_area[n:])
     flux[n:] = np.where(problem.table.pressure_given, outflow, problem.fixed_flux)
-    sources = tuple(source.start(problem, None) for source in problem.sources)
-    return State(velocity, pressure, flux, edge, sources)
+    return State(velocity, pressure, flux, edge)

@@ -1,0 +1,359 @@
+"""Readings as forces: proportional feedback whose strengths are solved with the flow.
+
+The momentum equation gains ``f = -sum_j phi_j a_j`` [m/s^2] with ``a_j = K (H_j u - u*_j)``:
+``H_j`` is the interpolation that ``run.sample`` uses, ``phi_j`` a kernel scaled so that
+``H_j phi_j = 1``, and the gain ``K`` [1/s] is the rate at which the reading itself relaxes.
+
+The strengths are unknowns, corrected in every iteration after the momentum sweeps,
+
+    da = (1/K + H g)^-1 (H (u + du) - u* - a/K),    u += du - g da,    a += da,
+
+``g`` being the response of the *same* sweeps to each kernel; so the iteration is stable for any
+gain, and its fixed point does not depend on ``g`` (derived here; nudging after Hoke, J. E. and
+Anthes, R. A. 1976, Mon. Weather Rev. 104, 1551-1556).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, field, replace
+from typing import Any
+
+import numpy as np
+import scipy.sparse as sparse
+
+from ..errors import CaseError, ReadingError
+from ..flow.problem import Force, Problem, State, balanced_force_near
+from ..operators.interpolation import PointInterpolation, point_interpolation
+from .kernel import Gaussian, Kernel, Neighbourhood, SingleCell
+from .readings import Readings, linearised_direction, predict
+
+REFRESH_EARLY = (0, 2, 5, 10, 20)  # responses are renewed at these iterations,
+REFRESH_EVERY = 30                 # then at every multiple of this
+BITES_FROM = 3.0                   # gain * radius / speed above which the passing fluid is corrected
+
+
+@dataclass(frozen=True)
+class Feedback:
+    """Proportional feedback at velocity readings, a source for the solve verbs.
+
+    Parameters
+    ----------
+    readings : Readings
+        Velocity components, components along a direction and speeds are fed; pressures are not.
+    radius : float or None
+        Width of the Gaussian kernel [m]; None puts the force into the single cell that holds the
+        reading (the corrected volume then shrinks with the cell).
+    gain : float or None
+        Rate at which a reading relaxes [1/s]; None: 5 times the local speed over the radius
+        (the cell size without radius). Zero leaves the run as it is, bit for bit.
+
+    Raises
+    ------
+    ReadingError
+        No velocity reading, a value that is not a number, or readings resolved in time.
+    CaseError
+        A gain or radius that is negative or not finite.
+    """
+
+    readings: Readings
+    gain: float | None = field(default=None, kw_only=True)
+    radius: float | None = field(kw_only=True)
+
+    def __post_init__(self) -> None:
+        for name, value, low in (("gain", self.gain, 0.0), ("radius", self.radius, 1e-300)):
+            if value is not None and not (np.isfinite(value) and value >= low):
+                raise CaseError(f"The {name} must be a finite number, not negative.",
+                                where=f"Feedback({name}=)", got=value,
+                                remedy="Leave it out for the default." if name == "gain" else
+                                "Give the width of the force [m], about the probe spacing.")
+        fed = self.readings.velocity_only()
+        if fed.n_components == 0:
+            raise ReadingError("Only velocities can be fed, and there are none.",
+                               where="Feedback(readings)", got=f"{len(self.readings)} places",
+                               remedy="Give u, v, w, speed or along readings.")
+        if np.isfinite(fed.time).any():
+            raise ReadingError("Readings resolved in time cannot be fed to a steady iteration.",
+                               where="Feedback(readings)", got="a column 'time'",
+                               remedy="Feed their mean values without the time column.")
+        if not np.all(np.isfinite(fed.component_value)):
+            bad = int(np.flatnonzero(~np.isfinite(fed.component_value))[0])
+            raise ReadingError("A fed reading is not a number.", where="Feedback(readings)",
+                               got=f"reading '{fed.name[fed.component_place[bad]]}'",
+                               remedy="Leave that reading out or withhold it.")
+
+    @property
+    def kernel(self) -> Kernel:
+        """Shape of the force."""
+        return SingleCell() if self.radius is None else Gaussian(self.radius)
+
+    def start(self, problem: Problem, state: State, earlier: Any) -> FeedbackState:
+        """Kernels, gains and zero strengths (or those of an earlier run with this law)."""
+        fed = self.readings.velocity_only()
+        layout = make_layout(problem, fed, self.kernel)
+        velocity = layout.sample(problem, state.velocity, state.boundary_velocity)
+        gain = self._gains(problem, fed, layout, velocity)
+        strength = np.zeros(fed.n_components)
+        if isinstance(earlier, FeedbackState) and len(earlier.strength) == len(strength):
+            strength = earlier.strength
+        direction = linearised_direction(fed, velocity)
+        return FeedbackState(fed, layout, gain, strength, direction)
+
+    def _gains(self, problem: Problem, fed: Readings, layout: Layout,
+               velocity: np.ndarray) -> np.ndarray:
+        if self.gain is not None:
+            return np.full(fed.n_components, float(self.gain))
+        length = self.radius or np.cbrt(problem.mesh.cell_volume[layout.to_points.home])
+        return (5.0 * local_speed(fed, velocity) / length)[fed.component_place]
+
+    def force(self, own: FeedbackState) -> Force:
+        """The force exerted now [m/s^2]."""
+        return own.layout.force(own.place_strength(own.strength))
+
+    def correct(self, own: FeedbackState, problem: Problem, state: State, change: np.ndarray,
+                relax: Callable[..., Any]) -> tuple[FeedbackState, np.ndarray, float]:
+        """Solve for the strengths together with the momentum change, see the module text."""
+        active = own.gain > 0
+        if not active.any():
+            return own, change, 0.0
+        due = own.count in REFRESH_EARLY or own.count % REFRESH_EVERY == 0
+        if due or own.response is None:
+            own = replace(own, response=_response(problem, own.layout, relax))
+        assert own.response is not None
+        slack = np.divide(own.strength, own.gain, out=np.zeros_like(own.gain), where=active)
+        before = own.layout.sample(problem, state.velocity, state.boundary_velocity)
+        misfit = np.where(active, own.misfit(before) - slack, 0.0)
+        after = before + own.layout.sample_change(problem, change)
+        error = np.where(active, own.misfit(after) - slack, 0.0)
+        own = replace(own, direction=linearised_direction(own.readings, after))
+        matrix = own.response.between(own)[np.ix_(active, active)]
+        matrix[np.diag_indices(len(matrix))] += 1.0 / own.gain[active]
+        step = np.zeros_like(own.strength)
+        step[active] = np.linalg.lstsq(matrix, error[active], rcond=1e-13)[0]
+        change = change - own.response.apply(own.place_strength(step, sign=1.0))
+        scale = max(float(np.abs(own.readings.component_value).max()),
+                    float(np.linalg.norm(before, axis=1).max()), 1e-300)
+        own = replace(own, strength=own.strength + step, count=own.count + 1)
+        return own, change, float(np.abs(misfit).max()) / scale
+
+    def describe(self, own: FeedbackState) -> list[str]:
+        """Lines for the sheet of a run."""
+        gain = own.gain
+        width = "single cell" if self.radius is None else f"radius {self.radius:g} m"
+        span = f"{gain.min():.4g}" if np.ptp(gain) == 0 else f"{gain.min():.4g} to {gain.max():.4g}"
+        how = "given" if self.gain is not None else "5 local speed / radius"
+        lines = [f"feedback   {own.readings.n_components} values at {len(own.readings)} places, "
+                 f"{width}, gain {span} 1/s ({how})"]
+        misfit = np.divide(own.strength, gain, out=np.zeros_like(gain), where=gain > 0)
+        share = np.sqrt(np.mean((misfit / own.readings.component_std) ** 2))
+        lines.append(f"           misfit at fed readings {np.sqrt(np.mean(misfit ** 2)):.3g} m/s "
+                     f"rms, {share:.2g} standard deviations (no evidence: these were fed)")
+        if share < 0.3 and gain.any():
+            lines.append("           the fed readings are met far closer than their uncertainty: "
+                         "a lower gain would not fit their noise")
+        if self.radius is not None and gain.any():
+            speed = local_speed(own.readings, own.layout.home_speed)[own.readings.component_place]
+            bite = gain * self.radius / np.maximum(speed, 1e-300)
+            if bite.min() < BITES_FROM:
+                lines.append(f"           gain * radius / speed is {bite.min():.2g} at one reading, "
+                             f"below {BITES_FROM:g}: the fluid passes uncorrected there")
+        return lines
+
+
+def local_speed(readings: Readings, velocity: np.ndarray) -> np.ndarray:
+    """(n_places,) larger of the measured and the computed speed [m/s], floored by their mean."""
+    square = np.bincount(readings.component_place, readings.component_value ** 2, len(readings))
+    speed = np.maximum(np.sqrt(square), np.linalg.norm(velocity, axis=1))
+    return np.maximum(speed, 0.1 * speed.mean())
+
+
+@dataclass(frozen=True, eq=False)
+class Layout:
+    """Kernels of all readings on one mesh, three directions each.
+
+    ``cell`` (3 n_cells, 3 n_places) and ``drop`` (n_faces, 3 n_places) sparse, scaled so that the
+    interpolation of each kernel's own component at its reading is one.
+    """
+
+    to_points: PointInterpolation
+    edges: np.ndarray
+    cell: sparse.csr_matrix
+    drop: sparse.csr_matrix
+    regions: tuple[np.ndarray, ...]
+    home_speed: np.ndarray
+
+    def force(self, strength: np.ndarray) -> Force:
+        """Force of strengths (n_places, 3) [m/s^2]."""
+        flat = strength.ravel()
+        if not flat.any():
+            return Force(np.zeros((self.cell.shape[0] // 3, 3)), np.zeros(self.drop.shape[0]))
+        return Force((self.cell @ flat).reshape(-1, 3), self.drop @ flat)
+
+    def sample(self, problem: Problem, velocity: np.ndarray, edge: np.ndarray) -> np.ndarray:
+        """(n_places, 3) velocity at the readings [m/s]."""
+        return self.to_points(velocity, edge)
+
+    def sample_change(self, problem: Problem, change: np.ndarray) -> np.ndarray:
+        """(n_places, 3) velocity change at the readings, boundary values following the cells."""
+        edge = np.zeros((problem.mesh.n_boundary, 3))
+        edge[self.edges] = edge_change(problem, self.edges, change)
+        return self.to_points(change, edge)
+
+
+def edge_change(problem: Problem, rows: np.ndarray, change: np.ndarray) -> np.ndarray:
+    """(k, 3) change of the boundary velocity on some boundary faces."""
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    normal, inner = mesh.face_normal[n + rows], change[mesh.left[n + rows]]
+    across = np.einsum("ij,ij->i", inner, normal)[:, None] * normal
+    table = problem.table
+    return (table.keep_tangential[rows, None] * (inner - across)
+            + table.keep_normal[rows, None] * across)
+
+
+@dataclass(frozen=True, eq=False)
+class Response:
+    """Answer of the momentum sweeps to a unit strength of each kernel.
+
+    ``velocity`` (3 n_cells, 3 n_places) sparse; ``at_places`` (3 n_places, 3 n_places).
+    """
+
+    velocity: sparse.csr_matrix
+    at_places: np.ndarray
+
+    def apply(self, strength: np.ndarray) -> np.ndarray:
+        """(n_cells, 3) velocity change for strengths (n_places, 3)."""
+        return np.asarray(self.velocity @ strength.ravel()).reshape(-1, 3)
+
+    def between(self, own: FeedbackState) -> np.ndarray:
+        """(m, m) response of each component to the strength of each."""
+        spread = own.spread()
+        return np.asarray(spread.T @ (spread.T @ self.at_places.T).T)
+
+
+@dataclass(frozen=True, eq=False)
+class FeedbackState:
+    """Strengths ``a`` (m,) [m/s^2] with what is needed to go on."""
+
+    readings: Readings
+    layout: Layout
+    gain: np.ndarray
+    strength: np.ndarray
+    direction: np.ndarray
+    response: Response | None = None
+    count: int = 0
+
+    def misfit(self, velocity: np.ndarray) -> np.ndarray:
+        """(m,) computed minus measured for velocities (n_places, 3) at the readings."""
+        computed = predict(self.readings, velocity, pressure=np.zeros(len(velocity)))
+        return computed - self.readings.component_value
+
+    def place_strength(self, strength: np.ndarray, *, sign: float = -1.0) -> np.ndarray:
+        """(n_places, 3) vector strength; the force acts against the misfit."""
+        out = np.zeros((len(self.readings), 3))
+        np.add.at(out, self.readings.component_place, sign * strength[:, None] * self.direction)
+        return out
+
+    def spread(self) -> sparse.csr_matrix:
+        """(3 n_places, m) component directions."""
+        m = len(self.strength)
+        rows = 3 * self.readings.component_place[:, None] + np.arange(3)
+        columns = np.repeat(np.arange(m), 3)
+        return sparse.csr_matrix((self.direction.ravel(), (rows.ravel(), columns)),
+                                 shape=(3 * len(self.readings), m))
+
+
+def make_layout(problem: Problem, readings: Readings, kernel: Kernel, *,
+                layers: int = 4) -> Layout:
+    """Kernels of readings, balanced like the pressure gradient and scaled.
+
+    Raises
+    ------
+    ReadingError
+        A reading lies outside the mesh, or so close to a wall that its kernel vanishes there.
+    """
+    mesh = problem.mesh
+    try:
+        to_points = point_interpolation(mesh, problem.velocity_gradient, readings.point,
+                                        where="readings", names=list(readings.name))
+    except CaseError as error:
+        raise ReadingError("A fed reading lies outside the mesh.", where=error.where,
+                           got=error.got, remedy=error.remedy) from None
+    near = Neighbourhood.of(mesh)
+    edges = np.unique(to_points.edges.indices)
+    cells, drops, regions = [], [], []
+    for place in range(len(readings)):
+        where, value = kernel.shape(mesh, near, readings.point[place], int(to_points.home[place]))
+        at_cell, at_face = _columns(problem, to_points, edges, place, where, value, readings)
+        cells.append(at_cell)
+        drops.append(at_face)
+        regions.append(near.within(np.unique(at_cell.nonzero()[0] // 3), layers))
+    home = np.linalg.norm(np.zeros((len(readings), 3)), axis=1)
+    return Layout(to_points, edges, sparse.hstack(cells).tocsr(), sparse.hstack(drops).tocsr(),
+                  tuple(regions), home[:, None] * np.ones(3))
+
+
+def _columns(problem: Problem, to_points: PointInterpolation, edges: np.ndarray, place: int,
+             where: np.ndarray, value: np.ndarray,
+             readings: Readings) -> tuple[sparse.csc_matrix, sparse.csc_matrix]:
+    mesh = problem.mesh
+    columns, drops = [], []
+    for axis in range(3):
+        force = np.zeros((len(where), 3))
+        force[:, axis] = value
+        touched, push, faces, drop = balanced_force_near(mesh, where, force)
+        whole = np.zeros((mesh.n_cells, 3))
+        whole[touched] = push
+        edge = np.zeros((mesh.n_boundary, 3))
+        edge[edges] = edge_change(problem, edges, whole)
+        own = float((to_points.cells[[place]] @ whole + to_points.edges[[place]] @ edge)[0, axis])
+        largest = float(np.abs(push).max())
+        if not own > 1e-3 * largest:
+            own = np.inf if _pinned(problem, to_points, place) else 0.0
+        if own == 0.0:
+            raise ReadingError("The force of a reading does not reach the reading.",
+                               where=f"reading '{readings.name[place]}'",
+                               got=f"share {own:.2g}", remedy="Move it off the wall, or withhold it.")
+        rows = (3 * touched[:, None] + np.arange(3)).ravel()
+        columns.append(sparse.csc_matrix((push.ravel() / own, (rows, np.zeros(len(rows), int))),
+                                         shape=(3 * mesh.n_cells, 1)))
+        drops.append(sparse.csc_matrix((drop / own, (faces, np.zeros(len(faces), int))),
+                                       shape=(mesh.n_faces, 1)))
+    return sparse.hstack(columns).tocsc(), sparse.hstack(drops).tocsc()
+
+
+def _pinned(problem: Problem, to_points: PointInterpolation, place: int) -> bool:
+    """Whether boundary faces take part in the interpolation to a reading."""
+    return to_points.edges[[place]].nnz > 0
+
+
+def _response(problem: Problem, layout: Layout, relax: Callable[..., Any]) -> Response:
+    """Sweep every kernel over its own region."""
+    mesh, density = problem.mesh, problem.case.fluid.density
+    n_places = len(layout.regions)
+    push = layout.cell.tocsc()
+    scratch = np.zeros((mesh.n_cells, 3))
+    rhs = np.zeros((mesh.n_cells, 3))
+    columns, values, rows = [], [], []
+    for column in range(3 * n_places):
+        region = layout.regions[column // 3]
+        part = slice(push.indptr[column], push.indptr[column + 1])
+        flat = push.indices[part]
+        rhs.reshape(-1)[flat] = push.data[part] * density * mesh.cell_volume[flat // 3]
+        relax(rhs, region, scratch)
+        rows.append((3 * region[:, None].astype(np.int64) + np.arange(3)).ravel())
+        values.append(scratch[region].ravel())
+        columns.append(np.full(3 * len(region), column))
+        scratch[region] = 0.0
+        rhs.reshape(-1)[flat] = 0.0
+    velocity = sparse.csr_matrix(
+        (np.concatenate(values), (np.concatenate(rows), np.concatenate(columns))),
+        shape=(3 * mesh.n_cells, 3 * n_places))
+    return Response(velocity, _at_places(problem, layout, velocity))
+
+
+def _at_places(problem: Problem, layout: Layout, velocity: sparse.csr_matrix) -> np.ndarray:
+    out = np.empty((velocity.shape[1], velocity.shape[1]))
+    for column in range(velocity.shape[1]):
+        change = velocity[:, [column]].toarray().reshape(-1, 3)
+        out[:, column] = layout.sample_change(problem, change).ravel()
+    return out
