@@ -10,6 +10,7 @@ import numpy as np
 from .coupling import mass_residual
 
 
+@np.errstate(all="ignore")  # the last finite state of a diverged run may overflow in a norm
 def run_sheet(run: Any) -> str:
     """What was run, how it ended, how well, what it cost."""
     case, mesh, history = run.case, run.mesh, run.history
