@@ -98,6 +98,14 @@ class Outcome:
         return f"{self.name}: {self.sentence} {self.next_step}".rstrip()
 
 
+def as_number(value: Any) -> float:
+    """The value as a float; NaN for what is no number, so that a range check refuses it."""
+    try:
+        return float(value)
+    except (TypeError, ValueError):
+        return float("nan")
+
+
 def converged(iterations: int, tolerance: float) -> Outcome:
     """Outcome of an iteration whose residuals all fell below the tolerance."""
     return Outcome("converged",

@@ -14,7 +14,7 @@ from typing import Any, Protocol
 
 import numpy as np
 
-from ..errors import BoundaryError
+from ..errors import BoundaryError, as_number
 from ..mesh.mesh import Mesh
 
 VelocityValue = Sequence[float] | np.ndarray | Callable[[np.ndarray], np.ndarray]
@@ -38,8 +38,9 @@ class BoundaryTable:
     @staticmethod
     def empty(n: int) -> BoundaryTable:
         """All zero: a wall at rest without traction."""
-        return BoundaryTable(np.zeros((n, 3)), *(np.zeros(n) for _ in range(5)),
-                             np.zeros(n, bool), np.zeros(n, bool), np.zeros(n), np.zeros(n, bool))
+        return BoundaryTable(np.zeros((n, 3)), np.zeros(n), np.zeros(n), np.zeros(n), np.zeros(n),
+                             np.zeros(n), np.zeros(n, bool), np.zeros(n, bool), np.zeros(n),
+                             np.zeros(n, bool))
 
     @property
     def flux_given(self) -> np.ndarray:
@@ -59,7 +60,10 @@ class Boundary(Protocol):
 def _evaluate(value: Any, centre: np.ndarray, what: str) -> np.ndarray:
     """A vector, or a function of points (n, 3) -> (n, 3), at the face centres."""
     if callable(value):
-        result = np.asarray(value(centre.copy()), dtype=float)
+        try:
+            result = np.asarray(value(centre.copy()), dtype=float)
+        except (TypeError, ValueError):
+            result = np.empty(0)
         if result.shape != centre.shape:
             raise BoundaryError(f"The {what} function returned a wrong shape.", where=what,
                                 got=f"shape {result.shape} for points of shape {centre.shape}",
@@ -79,7 +83,7 @@ def _vector(value: Any, what: str) -> np.ndarray:
     except (TypeError, ValueError):
         vector = np.empty(0)
     if vector.shape != (3,):
-        raise BoundaryError(f"The {what} must be a vector of three numbers or a function of points.",
+        raise BoundaryError(f"The {what} must be three numbers or a function of points.",
                             where=what, got=repr(value), remedy="Give (1.0, 0.0, 0.0), say [m/s].")
     return vector
 
@@ -130,7 +134,7 @@ class Outlet:
     pressure: float = 0.0
 
     def __post_init__(self) -> None:
-        if not np.ndim(self.pressure) == 0 or not np.isfinite(self.pressure):
+        if not np.ndim(self.pressure) == 0 or not np.isfinite(as_number(self.pressure)):
             raise BoundaryError("The outlet pressure must be one finite number.",
                                 where="Outlet(pressure=)", got=repr(self.pressure),
                                 remedy="Give a gauge pressure [Pa], 0.0 say.")
@@ -190,6 +194,10 @@ def boundary_table(mesh: Mesh, boundaries: Mapping[str, Boundary]) -> BoundaryTa
         not have, or something that is no boundary condition.
     """
     import difflib
+    if not isinstance(boundaries, Mapping):
+        raise BoundaryError("The boundaries must be a mapping of name to condition.",
+                            where="Case(boundaries=)", got=type(boundaries).__name__,
+                            remedy=f"Give a dict with keys {', '.join(mesh.boundaries)}.")
     unknown = [name for name in boundaries if name not in mesh.boundaries]
     missing = [name for name in mesh.boundaries if name not in boundaries]
     if unknown:
@@ -205,7 +213,7 @@ def boundary_table(mesh: Mesh, boundaries: Mapping[str, Boundary]) -> BoundaryTa
     table = BoundaryTable.empty(mesh.n_boundary)
     for name, condition in boundaries.items():
         faces = mesh.boundaries[name]
-        if not hasattr(condition, "fill"):
+        if isinstance(condition, type) or not hasattr(condition, "fill"):
             raise BoundaryError("Not a boundary condition.", where=f"boundary '{name}'",
                                 got=repr(condition), remedy="Give Inlet(...), Outlet(...), "
                                                             "Wall(...) or Symmetry().")

@@ -5,14 +5,14 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 from typing import Any
 
-from ..errors import CaseError
+from ..errors import CaseError, as_number
 from ..operators.fluxes import ConvectionScheme, SecondOrderUpwind
 from ..operators.gradient import GradientMethod, LeastSquares
 from ..operators.linear import ByAnisotropy
 
 
 def _share(value: float, where: str) -> None:
-    if not 0.0 < value < 1.0:
+    if not 0.0 < as_number(value) < 1.0:
         raise CaseError("A relaxation factor lies between 0 and 1.", where=where, got=value,
                         remedy="Give 0.7, say.")
 
@@ -29,7 +29,7 @@ class SIMPLE:
 
     def __post_init__(self) -> None:
         _share(self.velocity_relaxation, "SIMPLE(velocity_relaxation=)")
-        if not 0.0 < self.pressure_relaxation <= 1.0:
+        if not 0.0 < as_number(self.pressure_relaxation) <= 1.0:
             raise CaseError("The pressure relaxation lies between 0 and 1.",
                             where="SIMPLE(pressure_relaxation=)", got=self.pressure_relaxation,
                             remedy="Give 0.3, say.")
@@ -66,6 +66,14 @@ class SIMPLEC:
         return 1.0
 
 
+_METHODS = {  # what a method of each kind must have, and an example
+    "coupling": ("correction_diagonal", "SIMPLEC()"),
+    "convection": ("upwind_share", "SecondOrderUpwind()"),
+    "gradient": ("weights", "LeastSquares()"),
+    "multigrid": ("prolongations", "ByAnisotropy()"),
+}
+
+
 @dataclass(frozen=True)
 class Numerics:
     """Numerical methods of a case.
@@ -94,10 +102,16 @@ class Numerics:
     full_stress: bool | None = None
 
     def __post_init__(self) -> None:
-        if self.sweeps < 1:
+        for name, (needs, example) in _METHODS.items():
+            method = getattr(self, name)
+            if isinstance(method, type) or not hasattr(method, needs):
+                raise CaseError("A numerical method is an object of its kind.",
+                                where=f"Numerics({name}=)", got=repr(method),
+                                remedy=f"Give {example}, say.")
+        if not as_number(self.sweeps) >= 1:
             raise CaseError("At least one sweep of the momentum equations is needed.",
                             where="Numerics(sweeps=)", got=self.sweeps, remedy="Give 4, say.")
-        if not 0.0 < self.pressure_tolerance < 1.0:
+        if not 0.0 < as_number(self.pressure_tolerance) < 1.0:
             raise CaseError("The pressure tolerance lies between 0 and 1.",
                             where="Numerics(pressure_tolerance=)", got=self.pressure_tolerance,
                             remedy="Give 0.1, say.")

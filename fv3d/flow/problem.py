@@ -55,7 +55,12 @@ class Case:
         if not isinstance(self.fluid, Fluid):
             raise CaseError("A case needs a fluid.", where="Case(mesh, fluid)",
                             got=type(self.fluid).__name__,
-                            remedy="Give Fluid(density=, viscosity=), moist_air(...) or water(...).")
+                            remedy="Give Fluid(density=, viscosity=), moist_air(...) or "
+                                   "water(...).")
+        if not isinstance(self.numerics, Numerics):
+            raise CaseError("The numerical methods of a case are one Numerics object.",
+                            where="Case(numerics=)", got=repr(self.numerics),
+                            remedy="Give Numerics(coupling=SIMPLE()), say.")
         boundary_table(self.mesh, self.boundaries)
         body_force_cells(self)
         _cell_viscosity(self)
@@ -73,8 +78,8 @@ def body_force_cells(case: Case) -> np.ndarray | None:
     except (TypeError, ValueError):
         value = np.empty(0)
     if value.shape != centre.shape or not np.all(np.isfinite(value)):
-        raise CaseError("The body force must be a finite vector, or a function of points giving one "
-                        "finite vector per point.", where="Case(body_force=)",
+        raise CaseError("The body force must be a finite vector, or a function of points giving "
+                        "one finite vector per point.", where="Case(body_force=)",
                         got=f"shape {value.shape}", remedy="Return an (n, 3) array [m/s^2].")
     return np.ascontiguousarray(value)
 
@@ -82,7 +87,10 @@ def body_force_cells(case: Case) -> np.ndarray | None:
 def _cell_viscosity(case: Case) -> np.ndarray:
     if case.viscosity is None:
         return np.full(case.mesh.n_cells, case.fluid.viscosity)
-    value = np.asarray(case.viscosity, dtype=float)
+    try:
+        value = np.asarray(case.viscosity, dtype=float)
+    except (TypeError, ValueError):
+        value = np.empty(0)
     if value.shape != (case.mesh.n_cells,) or not np.all(np.isfinite(value) & (value > 0)):
         raise CaseError("The viscosity field needs one positive value per cell.",
                         where="Case(viscosity=)", got=f"shape {value.shape}",
@@ -185,6 +193,9 @@ def make_problem(case: Case, sources: tuple[Source, ...] = ()) -> Problem:
     BoundaryError
         In a domain without outlet the given fluxes do not balance.
     """
+    if not isinstance(case, Case):
+        raise CaseError("Only a case can be solved.", where="the first argument",
+                        got=type(case).__name__, remedy="Give Case(mesh, fluid, boundaries=...).")
     mesh, numerics = case.mesh, case.numerics
     table = boundary_table(mesh, case.boundaries)
     inside = mesh.n_internal

@@ -13,7 +13,7 @@ from typing import Any, Protocol
 import numpy as np
 
 from .. import errors
-from ..errors import CaseError, DivergenceError, Fv3dWarning, Outcome
+from ..errors import CaseError, DivergenceError, Fv3dWarning, Outcome, as_number
 from ..mesh.mesh import Mesh
 from ..operators.interpolation import PointInterpolation, point_interpolation
 from . import coupling
@@ -91,7 +91,8 @@ class Run:
     def source_force(self) -> Force:
         """Force of all sources [m/s^2], as the equations use it."""
         mesh = self.mesh
-        parts = [s.force(own) for s, own in zip(self.problem.sources, self.state.sources, strict=True)]
+        parts = [source.force(own) for source, own
+                 in zip(self.problem.sources, self.state.sources, strict=True)]
         cell, drop = np.zeros((mesh.n_cells, 3)), np.zeros(mesh.n_faces)
         for part in parts:
             cell, drop = cell + part.cell, drop + part.drop
@@ -210,6 +211,8 @@ def solve_steady(case: Case, *, tolerance: float, max_iterations: int,
         The fields stopped being finite; carries the last finite run.
     """
     _check_limits(tolerance, max_iterations)
+    _check_kind(sources, ("start", "force", "correct"), "sources")
+    _check_kind(monitors, ("see",), "monitors")
     began = time.perf_counter()
     problem = make_problem(case, tuple(sources))
     workspace = Workspace()
@@ -221,7 +224,7 @@ def solve_steady(case: Case, *, tolerance: float, max_iterations: int,
     with Progress(problem, name, tolerance, max_iterations, progress) as bar:
         try:
             last = state
-            for state, record in _loop(problem, state, workspace):
+            for state, record in _loop(problem, last, workspace):
                 if not (np.isfinite(record.residual) and _finite(state)):
                     outcome, state = errors.diverged(len(records) + 1), last
                     break
@@ -248,12 +251,22 @@ def solve_steady(case: Case, *, tolerance: float, max_iterations: int,
 
 
 def _check_limits(tolerance: float, max_iterations: int) -> None:
-    if not (np.isfinite(tolerance) and tolerance > 0):
+    if not 0.0 < as_number(tolerance) < np.inf:
         raise CaseError("The tolerance must be positive.", where="solve_steady(tolerance=)",
                         got=tolerance, remedy="Give 1e-6, say.")
-    if max_iterations < 1:
-        raise CaseError("At least one iteration is needed.", where="solve_steady(max_iterations=)",
-                        got=max_iterations, remedy="Give 2000, say.")
+    if not (as_number(max_iterations) >= 1 and as_number(max_iterations) % 1 == 0):
+        raise CaseError("The limit of iterations is a whole number from 1.", got=max_iterations,
+                        where="solve_steady(max_iterations=)", remedy="Give 2000, say.")
+
+
+def _check_kind(given: Any, needs: tuple[str, ...], name: str) -> None:
+    """Refuse what is no sequence of objects with the methods a source or monitor has."""
+    whole = isinstance(given, Sequence) and not isinstance(given, str)
+    for one in given if whole else [given]:
+        if not whole or isinstance(one, type) or not all(hasattr(one, need) for need in needs):
+            raise CaseError(f"The {name} must be a list of objects with the methods "
+                            f"{', '.join(needs)}.", where=f"solve_steady({name}=)", got=repr(one),
+                            remedy=f"Give {name}=[...], with instances, not classes.")
 
 
 def _finite(state: State) -> bool:

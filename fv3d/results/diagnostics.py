@@ -10,6 +10,7 @@ import numpy as np
 from ..errors import CaseError
 from ..flow.equations import boundary_traction
 from ..flow.run import Run
+from ..operators.interpolation import checked_points
 
 
 @dataclass(frozen=True, eq=False)
@@ -83,10 +84,10 @@ def force(run: Run, name: str, *, centre: Sequence[float] = (0.0, 0.0, 0.0)) -> 
     rows = slice(faces.start - n, faces.stop - n)
     push = pressure_force(run)[rows]
     drag = -_traction(run)[rows]
-    arm = mesh.face_centre[faces] - np.asarray(centre, dtype=float)
+    about = checked_points(np.asarray(centre), "force(centre=)")[0]
+    arm = mesh.face_centre[faces] - about
     return BoundaryForce(name, push.sum(axis=0), drag.sum(axis=0),
-                         np.cross(arm, push).sum(axis=0), np.cross(arm, drag).sum(axis=0),
-                         np.asarray(centre, dtype=float))
+                         np.cross(arm, push).sum(axis=0), np.cross(arm, drag).sum(axis=0), about)
 
 
 def pressure_force(run: Run) -> np.ndarray:
