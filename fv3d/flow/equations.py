@@ -42,7 +42,8 @@ class Momentum:
     """The momentum equation of one iteration, unrelaxed, without pressure and force.
 
     ``rows`` holds ``A u = rhs``; ``diagonal`` (n_cells,) [kg/s] the part of its diagonal common to
-    all components; ``neighbours`` (n_cells,) [kg/s] the sum of the neighbours' coefficients.
+    all components (the traction of walls, which acts along them only, is not in it);
+    ``neighbours`` (n_cells,) [kg/s] the sum of the neighbours' coefficients.
     """
 
     rows: Rows
@@ -143,14 +144,13 @@ def momentum(problem: Problem, velocity: np.ndarray, gradient: np.ndarray, edge:
     offsets, faces, sign = mesh.cell_faces
     kernels.fill_rows(offsets, faces, sign, layout.entry, n, coefficient, explicit, data,
                       neighbours, rhs)
-    implicit, component, outer = _boundary_momentum(problem, velocity, gradient, edge, mass_flux[n:])
+    implicit, block, outer = _boundary_momentum(problem, velocity, gradient, edge, mass_flux[n:])
     owner = mesh.left[n:]
     diagonal = neighbours + np.bincount(owner, implicit, mesh.n_cells)
-    full = np.empty((mesh.n_cells, 3))
-    for axis in range(3):
-        extra = np.bincount(owner, component[:, axis], mesh.n_cells)
-        rhs[:, axis] += np.bincount(owner, outer[:, axis], mesh.n_cells)
-        full[:, axis] = diagonal + extra
+    full = np.zeros((mesh.n_cells, 6))
+    full[:, :3] = diagonal[:, None]
+    np.add.at(full, owner, block)
+    np.add.at(rhs, owner, outer)
     return Momentum(Rows(layout, data, full, rhs), diagonal, neighbours)
 
 
@@ -163,15 +163,22 @@ def _warp_convection(problem: Problem, velocity: np.ndarray, gradient: np.ndarra
 
 def _boundary_momentum(problem: Problem, velocity: np.ndarray, gradient: np.ndarray,
                        edge: np.ndarray, flux: np.ndarray) -> tuple[np.ndarray, ...]:
-    """Common diagonal, diagonal per component and right-hand side of the boundary faces."""
+    """Common diagonal, rest of the diagonal block and right-hand side of the boundary faces."""
     mesh, n = problem.mesh, problem.mesh.n_internal
-    owner, normal = mesh.left[n:], mesh.face_normal[n:]
-    own = velocity[owner]
-    c, tangential, across = _shear_coefficients(problem)
-    implicit = c * tangential + np.where(flux < 0, -flux, 0.0)
-    component = (c * np.maximum(across - tangential, 0.0))[:, None] * normal ** 2
+    normal, own = mesh.face_normal[n:], velocity[mesh.left[n:]]
+    c, along, across = _shear_coefficients(problem)
+    common = np.minimum(along, across)
+    implicit = c * common + np.where(flux < 0, -flux, 0.0)
+    x, y, z = normal.T
+    nn = np.stack([x * x, y * y, z * z, x * y, x * z, y * z], axis=1)
+    block = (c * (across - along))[:, None] * nn
+    block[:, :3] += (c * (along - common))[:, None]
     total = boundary_traction(problem, velocity, gradient, edge) - flux[:, None] * (edge - own)
-    return implicit, component, total + (implicit[:, None] + component) * own
+    acting = np.empty_like(own)
+    acting[:, 0] = block[:, 0] * own[:, 0] + block[:, 3] * own[:, 1] + block[:, 4] * own[:, 2]
+    acting[:, 1] = block[:, 3] * own[:, 0] + block[:, 1] * own[:, 1] + block[:, 5] * own[:, 2]
+    acting[:, 2] = block[:, 4] * own[:, 0] + block[:, 5] * own[:, 1] + block[:, 2] * own[:, 2]
+    return implicit, block, total + implicit[:, None] * own + acting
 
 
 def _shear_coefficients(problem: Problem) -> tuple[np.ndarray, ...]:

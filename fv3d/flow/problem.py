@@ -301,11 +301,12 @@ def _add_balanced(mesh: Mesh, cell_force: np.ndarray, faces: np.ndarray, cell: n
                               cell_force[owner]])
     order = np.concatenate([inner, outer])
     drop[order] = np.einsum("ij,ij->i", at_face, mesh.delta[order])
-    warped = np.einsum("fj,fji->fi", at_face, mesh.warp[order]) if mesh.warped else 0.0
+    warped = (np.einsum("fj,fji->fi", at_face, mesh.warp[order]) if mesh.warped
+              else np.zeros_like(at_face))
     for cells, rows, sign in ((mesh.left[order], slice(None), 1.0),
                               (right, slice(0, len(inner)), -1.0)):
         reach = mesh.face_centre[order[rows]] - mesh.cell_centre[cells]
         potential = np.einsum("ij,ij->i", at_face[rows], reach)
         push = potential[:, None] * mesh.face_area[order[rows]]
-        push = sign * (push + (warped[rows] if mesh.warped else 0.0))
-        np.add.at(cell, cells, push / mesh.cell_volume[cells, None])
+        push = sign * (push + warped[rows]) / mesh.cell_volume[cells, None]
+        np.add.at(cell, cells, push)

@@ -17,7 +17,7 @@ from ..errors import CaseError, DivergenceError, Fv3dWarning, Outcome, as_number
 from ..mesh.mesh import Mesh
 from ..operators.interpolation import PointInterpolation, point_interpolation
 from . import coupling
-from .coupling import Record, Workspace
+from .coupling import Record, Workspace, make_workspace
 from .equations import PressureFields, pressure_fields
 from .problem import Case, Force, Problem, Source, State, make_problem
 from .start import start_state
@@ -167,7 +167,7 @@ def iterate(case: Case, *, sources: Sequence[Source] = (),
         The start does not fit.
     """
     problem = make_problem(case, tuple(sources))
-    workspace = Workspace()
+    workspace = make_workspace(problem)
     yield from _loop(problem, start_state(problem, start, workspace), workspace)
 
 
@@ -215,7 +215,7 @@ def solve_steady(case: Case, *, tolerance: float, max_iterations: int,
     _check_kind(monitors, ("see",), "monitors")
     began = time.perf_counter()
     problem = make_problem(case, tuple(sources))
-    workspace = Workspace()
+    workspace = make_workspace(problem)
     state = start_state(problem, start, workspace)
     name = name or ("guided" if sources else "plain")
     records: list[Record] = []

@@ -46,7 +46,7 @@ def _from_values(problem: Problem, start: Any) -> State:
     except (TypeError, ValueError):
         value = np.empty(0)
     if value.shape != centre.shape or not np.all(np.isfinite(value)):
-        raise CaseError("The start must be a run, a finite velocity vector or a function of points.",
+        raise CaseError("The start must be a run, a finite vector or a function of points.",
                         where="start=", got=f"{type(start).__name__}, shape {value.shape}",
                         remedy="Give start=plain, start=(1.0, 0.0, 0.0) or leave it out.")
     return _with_fluxes(problem, np.array(value), np.zeros(len(centre)))

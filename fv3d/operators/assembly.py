@@ -69,27 +69,44 @@ def pattern(mesh: Mesh) -> Pattern:
 
 @dataclass(frozen=True, eq=False)
 class Rows:
-    """A matrix with its diagonal apart, one per component: ``A x = rhs``.
+    """A matrix for the three components of a vector: ``A x = rhs``.
+
+    The neighbours act on each component alike; the diagonal is a symmetric block, because walls
+    and symmetry planes act on the components across and along them differently.
 
     Attributes
     ----------
     data : (nnz,)
         Off-diagonal entries in the places of the pattern (diagonal places unused).
-    diagonal : (n_cells, k)
-    rhs : (n_cells, k)
+    block : (n_cells, 6)
+        Diagonal blocks as (xx, yy, zz, xy, xz, yz).
+    rhs : (n_cells, 3)
     """
 
     pattern: Pattern
     data: np.ndarray
-    diagonal: np.ndarray
+    block: np.ndarray
     rhs: np.ndarray
 
     def residual(self, x: np.ndarray) -> np.ndarray:
-        """(n_cells, k) right-hand side minus matrix times ``x``."""
+        """(n_cells, 3) right-hand side minus matrix times ``x``."""
         out = np.empty_like(self.rhs)
-        kernels.row_residual(self.pattern.indptr, self.pattern.indices, self.data, self.diagonal,
+        kernels.row_residual(self.pattern.indptr, self.pattern.indices, self.data, self.block,
                              self.rhs, x, out)
         return out
+
+
+def inverse_blocks(block: np.ndarray) -> np.ndarray:
+    """(n, 6) inverse of symmetric 3 x 3 blocks stored as (xx, yy, zz, xy, xz, yz)."""
+    inverse = np.zeros_like(block)
+    inverse[:, :3] = 1.0 / block[:, :3]
+    full = np.flatnonzero(block[:, 3:].any(axis=1))
+    a, b, c, d, e, f = block[full].T
+    cofactor = np.stack([b * c - f * f, a * c - e * e, a * b - d * d, e * f - c * d,
+                         d * f - b * e, d * e - a * f], axis=1)
+    determinant = a * cofactor[:, 0] + d * cofactor[:, 3] + e * cofactor[:, 4]
+    inverse[full] = cofactor / determinant[:, None]
+    return inverse
 
 
 def symmetric_matrix(mesh: Mesh, layout: Pattern, face_coefficient: np.ndarray,

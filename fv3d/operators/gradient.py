@@ -97,13 +97,15 @@ class LeastSquares:
     """Least-squares gradient over face neighbours and boundary faces.
 
     Differences are weighted by ``1 / distance**power``.  Exact on linear fields on any mesh.
-    Directions that no neighbour determines (corner tetrahedra, meshes one cell thick) are taken
-    from the neighbouring cells' gradients, or zero where these have none either.
+    Directions of which the known faces determine less than the share ``least_known`` (corner
+    tetrahedra at walls) are taken from the neighbouring cells' gradients, or zero where these have
+    none either (meshes one cell thick).
 
     Source: Barth, T. J. (1991), AIAA Paper 91-0721.
     """
 
     power: float = 2.0
+    least_known: float = 0.05
     order: int = 1
 
     def weights(self, mesh: Mesh, known: BoundaryKnowledge) -> GradientOperator:
@@ -124,13 +126,16 @@ class LeastSquares:
         flat = edge[known.flat[b]]
         normal = mesh.face_normal[faces[flat]]
         across = normal * np.einsum("ij,ij->i", arm[flat], normal)[:, None]
-        matrix = np.zeros((mesh.n_cells, 3, 3))
+        matrix, whole = np.zeros((mesh.n_cells, 3, 3)), np.zeros((mesh.n_cells, 3, 3))
         for i in range(3):
             for j in range(i, 3):
-                term = used * importance * arm[:, i] * arm[:, j]
-                term[flat] += importance[flat] * across[:, i] * across[:, j]
-                matrix[:, i, j] = matrix[:, j, i] = np.bincount(cell, term, mesh.n_cells)
-        inverse, poor, missing = _pseudo_inverse(matrix)
+                term = importance * arm[:, i] * arm[:, j]
+                term[flat] = importance[flat] * across[:, i] * across[:, j]
+                share = used * term
+                share[flat] = term[flat]
+                whole[:, i, j] = whole[:, j, i] = np.bincount(cell, term, mesh.n_cells)
+                matrix[:, i, j] = matrix[:, j, i] = np.bincount(cell, share, mesh.n_cells)
+        inverse, poor, missing = _known_inverse(matrix, whole, self.least_known)
         weights = np.einsum("kij,kj->ki", inverse[cell], arm) * (used * importance)[:, None]
         return GradientOperator(offsets, other.astype(np.int32), np.ascontiguousarray(weights),
                                 poor.astype(np.int32), missing,
@@ -153,12 +158,29 @@ def _completion(offsets: np.ndarray, other: np.ndarray, poor: np.ndarray,
     return sparse.csr_matrix((share, (row, column)), shape=(len(poor), n_cells))
 
 
-def _pseudo_inverse(matrix: np.ndarray, *, cut: float = 1e-8) -> tuple[np.ndarray, ...]:
-    values, vectors = np.linalg.eigh(matrix)
-    present = values > cut * values[:, -1:]
-    scale = np.where(present, 1.0 / np.where(present, values, 1.0), 0.0)
-    inverse = np.einsum("cik,ck,cjk->cij", vectors, scale, vectors)
+def _known_inverse(matrix: np.ndarray, whole: np.ndarray,
+                   least: float) -> tuple[np.ndarray, ...]:
+    """Inverse in the directions that are known well enough.
+
+    ``whole`` is the normal matrix with all faces, ``matrix`` that with the known ones; an
+    eigenvalue of ``matrix v = share whole v`` is the share of a direction that is known, whatever
+    the shape of the cell.
+
+    Returns
+    -------
+    inverse : (n_cells, 3, 3), poor : (p,), missing : (p, 3, 3)
+        ``gradient @ missing`` is the part of a gradient the inverse leaves out.
+    """
+    scale = np.trace(whole, axis1=1, axis2=2)[:, None, None]
+    lower = np.linalg.cholesky(whole / scale + 1e-12 * np.eye(3))
+    turn = np.linalg.inv(lower)
+    share, vectors = np.linalg.eigh(turn @ (matrix / scale) @ turn.transpose(0, 2, 1))
+    present = share > least
+    back = turn.transpose(0, 2, 1) @ vectors
+    factor = np.where(present, 1.0 / np.where(present, share, 1.0), 0.0)
+    inverse = np.einsum("cik,ck,cjk->cij", back, factor, back) / scale
     poor = np.flatnonzero(~present.all(axis=1))
     absent = (~present[poor]).astype(float)
-    missing = np.einsum("cik,ck,cjk->cij", vectors[poor], absent, vectors[poor])
+    forth = lower[poor] @ vectors[poor]
+    missing = np.einsum("cik,ck,cjk->cij", forth, absent, back[poor])
     return inverse, poor, missing

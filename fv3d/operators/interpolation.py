@@ -235,4 +235,5 @@ def _gradient_rows(gradient: GradientOperator, cells: np.ndarray, axis: int,
     weight = gradient.weights[place, axis]
     rows = sparse.csr_matrix((weight, (row, gradient.other[place])), shape=(len(cells), width))
     own = np.bincount(row, weight, len(cells))
-    return rows - sparse.csr_matrix((own, (np.arange(len(cells)), cells)), shape=(len(cells), width))
+    here = (np.arange(len(cells)), cells)
+    return rows - sparse.csr_matrix((own, here), shape=(len(cells), width))

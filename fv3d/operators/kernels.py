@@ -163,22 +163,32 @@ def fill_rows(offsets, faces, sign, entry, n_internal, coefficient, explicit, da
 
 
 @ThreadedKernel
-def row_residual(indptr, indices, data, diagonal, rhs, x, out):
-    """out = rhs - A x for several right-hand sides; the diagonal is stored apart."""
-    width = x.shape[1]
+def row_residual(indptr, indices, data, block, rhs, x, out):
+    """out = rhs - A x for three right-hand sides; block = (xx, yy, zz, xy, xz, yz) diagonal."""
     for row in numba.prange(indptr.shape[0] - 1):
-        for i in range(width):
-            out[row, i] = rhs[row, i] - diagonal[row, i] * x[row, i]
+        x0 = x[row, 0]
+        x1 = x[row, 1]
+        x2 = x[row, 2]
+        s0 = rhs[row, 0] - block[row, 0] * x0 - block[row, 3] * x1 - block[row, 4] * x2
+        s1 = rhs[row, 1] - block[row, 3] * x0 - block[row, 1] * x1 - block[row, 5] * x2
+        s2 = rhs[row, 2] - block[row, 4] * x0 - block[row, 5] * x1 - block[row, 2] * x2
         for k in range(indptr[row], indptr[row + 1]):
             column = indices[k]
             if column != row:
-                for i in range(width):
-                    out[row, i] -= data[k] * x[column, i]
+                s0 -= data[k] * x[column, 0]
+                s1 -= data[k] * x[column, 1]
+                s2 -= data[k] * x[column, 2]
+        out[row, 0] = s0
+        out[row, 1] = s1
+        out[row, 2] = s2
 
 
 @compiled
-def sweep(indptr, indices, data, inverse_diagonal, rhs, rows, backward, x):
-    """One Gauss-Seidel sweep over the given rows (in their order, or backwards), three columns."""
+def sweep(indptr, indices, data, inverse, rhs, rows, backward, x):
+    """One Gauss-Seidel sweep over the given rows (in their order, or backwards), three columns.
+
+    inverse = (xx, yy, zz, xy, xz, yz) of each row's inverted diagonal block.
+    """
     n = rows.shape[0]
     for step in range(n):
         row = rows[n - 1 - step] if backward else rows[step]
@@ -191,9 +201,9 @@ def sweep(indptr, indices, data, inverse_diagonal, rhs, rows, backward, x):
                 s0 -= data[k] * x[column, 0]
                 s1 -= data[k] * x[column, 1]
                 s2 -= data[k] * x[column, 2]
-        x[row, 0] = s0 * inverse_diagonal[row, 0]
-        x[row, 1] = s1 * inverse_diagonal[row, 1]
-        x[row, 2] = s2 * inverse_diagonal[row, 2]
+        x[row, 0] = inverse[row, 0] * s0 + inverse[row, 3] * s1 + inverse[row, 4] * s2
+        x[row, 1] = inverse[row, 3] * s0 + inverse[row, 1] * s1 + inverse[row, 5] * s2
+        x[row, 2] = inverse[row, 4] * s0 + inverse[row, 5] * s1 + inverse[row, 2] * s2
 
 
 @ThreadedKernel
