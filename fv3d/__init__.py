@@ -20,6 +20,7 @@ from .flow.numerics import SIMPLE, SIMPLEC, Numerics
 from .flow.problem import Case
 from .flow.run import Run, iterate, solve_steady
 from .measured.compare import Comparison, compare
+from .measured.feedback import Feedback
 from .measured.readings import Readings, observe, read_readings
 from .mesh.generate import box
 from .mesh.generate_channel import channel_with_block, channel_with_cylinder
@@ -39,7 +40,7 @@ from .results.pictures import picture, picture_readings
 
 __all__ = [
     "SIMPLE", "SIMPLEC", "Blended", "BoundaryError", "BoundaryForce", "ByAnisotropy", "Case",
-    "CaseError", "Central", "Classical", "Comparison", "DivergenceError", "FileError", "Fluid",
+    "CaseError", "Central", "Classical", "Comparison", "DivergenceError", "Feedback", "FileError", "Fluid",
     "Fv3dError", "Fv3dWarning", "Inlet", "LeastSquares", "Mesh", "MeshError", "MomentumBudget",
     "Numerics", "OneSided", "Outcome", "Outlet", "ReadingError", "Readings", "Run",
     "SecondOrderUpwind", "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided", "Uniform",
