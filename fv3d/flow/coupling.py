@@ -208,21 +208,22 @@ def mass_residual(problem: Problem, flux: np.ndarray, velocity: np.ndarray) -> f
 
 
 def reference_flux(problem: Problem, flux: np.ndarray, velocity: np.ndarray) -> float:
-    """Inflow [kg/s]; in a domain without inflow the mean speed over a mean cross-section."""
+    """Inflow [kg/s]; in a domain without inflow the rms speed over a mean cross-section."""
     mesh, density = problem.mesh, problem.case.fluid.density
     inflow = -np.minimum(flux[mesh.n_internal:], 0.0).sum()
     volume = mesh.cell_volume.sum()
-    speed = np.einsum("i,i->", np.linalg.norm(velocity, axis=1), mesh.cell_volume) / volume
-    circulating = density * speed * volume ** (2 / 3)
+    square = np.einsum("ij,ij,i->", velocity, velocity, mesh.cell_volume) / volume
+    circulating = density * np.sqrt(square) * volume ** (2 / 3)
     return float(max(inflow if inflow > 1e-3 * circulating else circulating, 1e-300))
 
 
 def _momentum_scale(problem: Problem, equation: Momentum, velocity: np.ndarray, push: np.ndarray,
                     fields: PressureFields) -> float:
     """Sum of |a u|; a fluid at rest is measured against a millionth of its pressure forces."""
-    moving = float((equation.diagonal * np.abs(velocity).sum(axis=1)).sum())
-    resting = float((np.abs(fields.gradient).sum(axis=1) * problem.mesh.cell_volume).sum())
-    return max(moving + 1e-6 * (resting + float(np.abs(push).sum())), 1e-300)
+    moving = float(np.einsum("i,ij->", equation.diagonal, np.abs(velocity)))
+    resting = float(np.einsum("i,ij->", problem.mesh.cell_volume, np.abs(fields.gradient)))
+    resting += float(np.einsum("ij->", np.abs(push)))
+    return max(moving + 1e-6 * resting, 1e-300)
 
 
 def potential_start(problem: Problem, workspace: Workspace) -> State:

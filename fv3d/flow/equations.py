@@ -249,8 +249,9 @@ def correction_matrix(problem: Problem,
     ``d`` (n_cells,) is volume over the coupling's correction diagonal.
     """
     mesh, n, density = problem.mesh, problem.mesh.n_internal, problem.case.fluid.density
-    at_face = mesh.weight * d[mesh.left[:n]] + (1 - mesh.weight) * d[mesh.right]
-    inner = density * at_face * problem.orthogonal[:n]
+    inner = np.empty(n)
+    kernels.face_coefficients(mesh.left[:n], mesh.right, mesh.weight, d, problem.orthogonal,
+                              density, inner)
     outer = np.where(problem.table.pressure_given,
                      density * d[mesh.left[n:]] * problem.orthogonal[n:], 0.0)
     return symmetric_matrix(mesh, problem.pattern, inner, outer), inner, outer

@@ -120,14 +120,10 @@ def symmetric_matrix(mesh: Mesh, layout: Pattern, face_coefficient: np.ndarray,
     boundary_coefficient : (n_boundary,)
         Flux per difference to a given boundary value; zero where the flux is given.
     """
-    data = np.zeros(len(layout.indices))
-    data[layout.left_entry] = -face_coefficient
-    data[layout.right_entry] = -face_coefficient
-    inside = mesh.n_internal
-    diagonal = (np.bincount(mesh.left[:inside], face_coefficient, mesh.n_cells)
-                + np.bincount(mesh.right, face_coefficient, mesh.n_cells)
-                + np.bincount(mesh.left[inside:], boundary_coefficient, mesh.n_cells))
-    data[layout.diagonal] = diagonal
+    data = np.empty(len(layout.indices))
+    offsets, faces, _ = mesh.cell_faces
+    kernels.fill_symmetric(offsets, faces, layout.entry, layout.diagonal, mesh.n_internal,
+                           face_coefficient, boundary_coefficient, data)
     return layout.matrix(data)
 
 

@@ -163,6 +163,30 @@ def fill_rows(offsets, faces, sign, entry, n_internal, coefficient, explicit, da
 
 
 @ThreadedKernel
+def fill_symmetric(offsets, faces, entry, place, n_internal, inner, outer, data):
+    """Rows of a symmetric diffusion matrix from face and boundary coefficients."""
+    for cell in numba.prange(offsets.shape[0] - 1):
+        total = 0.0
+        for k in range(offsets[cell], offsets[cell + 1]):
+            f = faces[k]
+            if f < n_internal:
+                data[entry[k]] = -inner[f]
+                total += inner[f]
+            else:
+                total += outer[f - n_internal]
+        data[place[cell]] = total
+
+
+@ThreadedKernel
+def face_coefficients(left, right, weight, cell_values, factor, scale, out):
+    """out = scale * factor * linear interpolation of cell values to internal faces."""
+    for face in numba.prange(right.shape[0]):
+        w = weight[face]
+        out[face] = scale * factor[face] * (w * cell_values[left[face]]
+                                            + (1.0 - w) * cell_values[right[face]])
+
+
+@ThreadedKernel
 def row_residual(indptr, indices, data, block, rhs, x, out):
     """out = rhs - A x for three right-hand sides; block = (xx, yy, zz, xy, xz, yz) diagonal."""
     for row in numba.prange(indptr.shape[0] - 1):
