@@ -103,18 +103,43 @@ def fill_rows(offsets, faces, sign, entry, n_internal, coefficient, explicit, da
 
 
 @reference
-def row_residual(indptr, indices, data, diagonal, rhs, x, out):
-    matrix = dense(indptr, indices, data)
-    np.fill_diagonal(matrix, 0.0)
-    return {6: rhs - diagonal * x - matrix @ x}
+def fill_symmetric(offsets, faces, entry, place, n_internal, inner, outer, data):
+    data = data.copy()
+    for cell in range(len(place)):
+        data[place[cell]] = 0.0
+        for k in range(offsets[cell], offsets[cell + 1]):
+            boundary = faces[k] - n_internal
+            if boundary < 0:
+                data[entry[k]] = -inner[faces[k]]
+            data[place[cell]] += outer[boundary] if boundary >= 0 else inner[faces[k]]
+    return {7: data}
 
 
 @reference
-def sweep(indptr, indices, data, inverse_diagonal, rhs, rows, backward, x):
-    matrix, x = dense(indptr, indices, data), x.copy()
+def face_coefficients(left, right, weight, cell_values, factor, scale, out):
+    at_face = [w * cell_values[a] + (1 - w) * cell_values[b]
+               for a, b, w in zip(left, right, weight)]
+    return {6: scale * factor[:len(right)] * np.array(at_face)}
+
+
+def square(blocks: np.ndarray) -> np.ndarray:
+    """(n, 3, 3) symmetric matrices from rows (xx, yy, zz, xy, xz, yz)."""
+    return np.array([[[a, d, e], [d, b, f], [e, f, c]] for a, b, c, d, e, f in blocks])
+
+
+@reference
+def row_residual(indptr, indices, data, block, rhs, x, out):
+    matrix = dense(indptr, indices, data)
+    np.fill_diagonal(matrix, 0.0)
+    return {6: rhs - np.einsum("nij,nj->ni", square(block), x) - matrix @ x}
+
+
+@reference
+def sweep(indptr, indices, data, inverse, rhs, rows, backward, x):
+    matrix, x, inverse = dense(indptr, indices, data), x.copy(), square(inverse)
     np.fill_diagonal(matrix, 0.0)
     for row in (rows[::-1] if backward else rows):
-        x[row] = (rhs[row] - matrix[row] @ x) * inverse_diagonal[row]
+        x[row] = inverse[row] @ (rhs[row] - matrix[row] @ x)
     return {7: x}
 
 
@@ -198,10 +223,15 @@ def arguments(name: str, mesh: Mesh, *, dtype: type = np.float64, seed: int = 0,
             bool(variant), np.empty((inside, 2)), np.empty((inside, 3))],
         "fill_rows": [offsets, cell_faces, sign, layout.entry, inside, r.normal(size=(inside, 2)),
                       table(inside), np.zeros(len(data)), r.normal(size=n), table()],
-        "row_residual": [layout.indptr, layout.indices, data.astype(float), table(), table(),
-                         table(), np.empty((n, 3))],
-        "sweep": [layout.indptr, layout.indices, 0.1 * data.astype(float), 1.0 / (1.0 + table()**2),
-                  table(), rows, bool(variant), table()],
+        "fill_symmetric": [offsets, cell_faces, layout.entry, layout.diagonal, inside,
+                           r.normal(size=inside), r.normal(size=mesh.n_boundary),
+                           np.empty(len(data))],
+        "face_coefficients": [*ends[:3], r.normal(size=n), r.normal(size=faces), 1.3,
+                              np.empty(inside)],
+        "row_residual": [layout.indptr, layout.indices, data.astype(float), r.normal(size=(n, 6)),
+                         table(), table(), np.empty((n, 3))],
+        "sweep": [layout.indptr, layout.indices, 0.1 * data.astype(float),
+                  0.3 * r.normal(size=(n, 6)), table(), rows, bool(variant), table()],
         "momentum_face_flux": [
             *ends, mesh.face_area, mesh.delta, orthogonal, 1.3, table(), gradient, table(),
             r.normal(size=n), r.normal(size=faces), r.uniform(0.5, 2.0, n), r.normal(size=faces),

@@ -12,7 +12,7 @@ import fv3d
 from fv3d.flow.equations import boundary_traction, momentum
 from fv3d.flow.problem import make_problem
 from fv3d.mesh.generate import box
-from fv3d.operators.assembly import orthogonal_factor, pattern, symmetric_matrix
+from fv3d.operators.assembly import inverse_blocks, orthogonal_factor, pattern, symmetric_matrix
 
 SCHEMES = [fv3d.Upwind(), fv3d.SecondOrderUpwind(), fv3d.Central(), fv3d.Blended(share=0.6)]
 
@@ -43,6 +43,17 @@ def test_diffusion_matrix_is_symmetric_with_zero_row_sums(tetra: bool) -> None:
     np.testing.assert_allclose(np.asarray(with_values.sum(axis=1)).ravel(),
                                np.bincount(mesh.left[mesh.n_internal:], outer, mesh.n_cells),
                                atol=1e-12 * abs(matrix).max())
+
+
+def test_inverse_blocks_against_numpy() -> None:
+    """Full blocks (cells at walls) and diagonal ones, stored as (xx, yy, zz, xy, xz, yz)."""
+    r = np.random.default_rng(0)
+    root = r.normal(size=(40, 3, 3))
+    whole = root @ root.transpose(0, 2, 1) + 0.5 * np.eye(3)
+    whole[20:] *= np.eye(3)
+    rows, columns = [0, 1, 2, 0, 0, 1], [0, 1, 2, 1, 2, 2]
+    inverse = inverse_blocks(whole[:, rows, columns])
+    np.testing.assert_allclose(inverse, np.linalg.inv(whole)[:, rows, columns], atol=1e-9)
 
 
 @pytest.mark.parametrize("full_stress", [False, True])
