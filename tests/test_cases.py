@@ -17,8 +17,9 @@ from judge import Figure, judge, load
 FOLDERS = case_folders()
 
 
-def script_of(folder: Path) -> ModuleType:
-    """The case's script as a module."""
+def script_of(folder: Path, monkeypatch: pytest.MonkeyPatch) -> ModuleType:
+    """The case's script as a module; as when it is run, its folder is searched for modules."""
+    monkeypatch.syspath_prepend(str(folder))
     spec = importlib.util.spec_from_file_location(f"case_{folder.name}", folder / "run.py")
     assert spec and spec.loader
     module = importlib.util.module_from_spec(spec)
@@ -32,8 +33,8 @@ def marked(folder: Path) -> object:
 
 
 @pytest.mark.parametrize("folder", [marked(folder) for folder in FOLDERS])
-def test_case(folder: Path) -> None:
-    found = judge(folder, script_of(folder).figures())
+def test_case(folder: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    found = judge(folder, script_of(folder, monkeypatch).figures())
     assert found
     missed = [f"{f.name}: {f.computed:.8g}, expected {f.expected}" for f in found
               if not f.meets_published]
