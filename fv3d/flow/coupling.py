@@ -155,7 +155,7 @@ def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, equation
     if problem.closed:
         pressure -= np.average(pressure, weights=mesh.cell_volume)
     edge = boundary_velocity(problem, velocity, gradient, flux[n:])
-    if workspace.response.fine_step > 0:
+    if workspace.response.fine_steps:
         pressure = _fine_supplement(problem, replace(state, velocity=velocity, pressure=pressure),
                                     gradient, edge, flux[n:], equation, workspace)
     return replace(state, velocity=velocity, pressure=pressure, mass_flux=flux,
@@ -168,17 +168,17 @@ def _fine_supplement(problem: Problem, state: State, gradient: np.ndarray, edge:
     """Pressure with its cell-scale part brought nearer to the end of the iteration.
 
     At the scale of the cells the fluxes answer the pressure with the unrelaxed coefficient only, a
-    tenth of the one the correction was computed with; one damped Jacobi step on what remains of the
-    imbalance makes up for that.  It changes the path, not the solution.
+    tenth of the one the correction was computed with; two damped Jacobi steps on what remains of
+    the imbalance make up for that.  They change the path, not the solution.
     """
-    mesh = problem.mesh
-    fields = pressure_fields(problem, state.pressure, edge_flux)
-    flux = interpolated_flux(problem, state.velocity, gradient, edge, fields,
-                             total_force(problem, state), equation.diagonal,
-                             np.zeros(mesh.n_faces))
+    mesh, force = problem.mesh, total_force(problem, state)
     unrelaxed = correction_matrix(problem, mesh.cell_volume / equation.diagonal)[0].diagonal()
-    step = workspace.response.fine_step * (mesh.outflow @ flux) / unrelaxed
-    pressure = state.pressure - step
+    pressure, memory = state.pressure, np.zeros(mesh.n_faces)
+    for size in workspace.response.fine_steps:
+        fields = pressure_fields(problem, pressure, edge_flux)
+        flux = interpolated_flux(problem, state.velocity, gradient, edge, fields, force,
+                                 equation.diagonal, memory)
+        pressure = pressure - size * (mesh.outflow @ flux) / unrelaxed
     if problem.closed:
         pressure -= np.average(pressure, weights=mesh.cell_volume)
     return pressure

@@ -46,9 +46,12 @@ class PressureResponse:
         return min(coupling.pressure_share, DAMPED / coupling.correction_diagonal(1.0, 1.0, 0.0))
 
     @property
-    def fine_step(self) -> float:
-        """Step of the fine-scale pressure supplement; none on a skewed mesh."""
-        return 0.0 if self.skewed else 1.3 / self.fine
+    def fine_steps(self) -> tuple[float, ...]:
+        """Steps of the fine-scale pressure supplement; none on a skewed mesh.
+
+        The pair damps answers between a third of the largest and the largest to a fifth.
+        """
+        return () if self.skewed else (1.1 / self.fine, 2.0 / self.fine)
 
 
 def pressure_response(problem: Problem, *, steps: int = 12) -> PressureResponse:
