@@ -15,7 +15,6 @@ import numba
 
 from ..errors import Fv3dWarning
 
-
 SMALL = 20_000  # below this many rows a second thread costs more than it brings
 
 
