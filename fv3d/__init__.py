@@ -41,12 +41,14 @@ from .results.pictures import picture, picture_readings
 
 __all__ = [
     "SIMPLE", "SIMPLEC", "Blended", "BoundaryError", "BoundaryForce", "ByAnisotropy", "Case",
-    "CaseError", "Central", "Classical", "Comparison", "DivergenceError", "Feedback", "FileError", "Fluid", "ForceBudget",
+    "CaseError", "Central", "Classical", "Comparison", "DivergenceError", "Feedback", "FileError",
+    "Fluid", "ForceBudget",
     "Fv3dError", "Fv3dWarning", "Inlet", "LeastSquares", "Mesh", "MeshError", "MomentumBudget",
     "Numerics", "OneSided", "Outcome", "Outlet", "ReadingError", "Readings", "Run",
     "SecondOrderUpwind", "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided", "Uniform",
     "Upwind", "Wall", "box", "build_mesh", "channel_with_block", "channel_with_cylinder",
-    "check_mesh", "compare", "force", "force_budget", "get_threads", "iterate", "moist_air", "momentum_budget",
+    "check_mesh", "compare", "force", "force_budget", "get_threads", "iterate", "moist_air",
+    "momentum_budget",
     "nozzle", "observe", "picture", "picture_readings", "quality", "read_mesh", "read_readings",
     "set_threads", "solve_steady", "water", "write_history", "write_mesh", "write_readings",
     "write_vtk",

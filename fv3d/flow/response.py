@@ -7,6 +7,7 @@ then overshoot.  Both numbers are estimated once per case by power iteration.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -76,8 +77,14 @@ def pressure_response(problem: Problem, *, steps: int = 12) -> PressureResponse:
     def compact_inverse(rhs: np.ndarray) -> np.ndarray:
         return linear.solve(prepared, rhs, matrix=matrix, tolerance=0.1).solution
 
-    whole = _largest(lambda p: compact_inverse(_answer(problem, p, outer, 1.0)), mesh.n_cells, steps)
-    fine = _largest(lambda p: _answer(problem, p, outer, 0.0) / diagonal, mesh.n_cells, steps)
+    def whole_answer(p: np.ndarray) -> np.ndarray:
+        return compact_inverse(_answer(problem, p, outer, 1.0))
+
+    def fine_answer(p: np.ndarray) -> np.ndarray:
+        return _answer(problem, p, outer, 0.0) / diagonal
+
+    whole = _largest(whole_answer, mesh.n_cells, steps)
+    fine = _largest(fine_answer, mesh.n_cells, steps)
     return PressureResponse(max(1.1 * whole, 1.0), max(1.1 * fine, 1.0))
 
 
@@ -96,8 +103,7 @@ def _answer(problem: Problem, pressure: np.ndarray, outer: np.ndarray,
     return np.asarray(-(mesh.outflow @ flux))
 
 
-def _largest(operator: object, size: int, steps: int) -> float:
-    assert callable(operator)
+def _largest(operator: Callable[[np.ndarray], np.ndarray], size: int, steps: int) -> float:
     x = np.random.default_rng(3).standard_normal(size)
     value = 1.0
     for _ in range(steps):

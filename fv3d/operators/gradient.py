@@ -62,7 +62,7 @@ class GradientOperator:
     completion: sparse.csr_matrix
 
     def __call__(self, cell_values: np.ndarray, boundary_values: np.ndarray) -> np.ndarray:
-        """Gradient of a scalar (n_cells,) -> (n_cells, 3) or vector (n_cells, k) -> (n_cells, k, 3).
+        """Gradient (n_cells, 3) of a scalar (n_cells,), (n_cells, k, 3) of a vector (n_cells, k).
 
         For vectors ``[c, i, j]`` is the derivative of component ``i`` along axis ``j``.
         """
@@ -85,7 +85,10 @@ class GradientOperator:
 class GradientMethod(Protocol):
     """A way to turn a mesh into gradient weights."""
 
-    order: int
+    @property
+    def order(self) -> int:
+        """Declared order of accuracy on irregular meshes."""
+        ...
 
     def weights(self, mesh: Mesh, known: BoundaryKnowledge) -> GradientOperator:
         """Weights on this mesh."""

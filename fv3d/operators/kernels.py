@@ -134,11 +134,13 @@ def transport_faces(left, right, weight, skew, area, delta, orthogonal, face_cen
             turned = 0.0
             for j in range(3):
                 mean = w * gradient[a, i, j] + (1.0 - w) * gradient[b, i, j]
-                reach += gradient[up, i, j] * (face_centre[face, j] - cell_centre[up, j])
+                arm = face_centre[face, j] - cell_centre[a, j]
+                reach += gradient[up, i, j] * (arm if up == a else arm - delta[face, j])
                 centred += skew[face, j] * mean
                 tangential += (area[face, j] - orthogonal[face] * delta[face, j]) * mean
                 if full_stress:
-                    turned += area[face, j] * (w * gradient[a, j, i] + (1.0 - w) * gradient[b, j, i])
+                    turned += area[face, j] * (w * gradient[a, j, i]
+                                               + (1.0 - w) * gradient[b, j, i])
             explicit[face, i] = (flux * (upwind_share * reach + central_share * centred)
                                  - viscosity[face] * (tangential + turned))
 

@@ -55,8 +55,9 @@ class ForceBudget:
         lines = ["artificial force",
                  f"  net         {row(self.net)}  N",
                  f"  moment      {row(self.moment)}  N m",
-                 f"  power       {self.power:.4g} W, {self.power / max(self.dissipation, 1e-300):.2%}"
-                 f" of the flow's dissipation of {self.dissipation:.4g} W",
+                 f"  power       {self.power:.4g} W, "
+                 f"{self.power / max(self.dissipation, 1e-300):.2%} of the flow's dissipation of "
+                 f"{self.dissipation:.4g} W",
                  f"  where       90 % of it in {self.volume_share:.2%} of the volume",
                  f"  kind        {self.solenoidal_share:.0%} moves fluid, the rest only pressure"]
         if self.body:
