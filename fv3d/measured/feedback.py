@@ -30,7 +30,7 @@ from .readings import Readings, linearised_direction, predict
 
 REFRESH_EARLY = (0, 2, 5, 10, 20)  # responses are renewed at these iterations,
 REFRESH_EVERY = 30                 # then at every multiple of this
-BITES_FROM = 3.0                   # gain * radius / speed above which the passing fluid is corrected
+BITES_FROM = 3.0                   # gain * radius / speed above which passing fluid is corrected
 
 
 @dataclass(frozen=True)
@@ -96,8 +96,8 @@ class Feedback:
         strength = np.zeros(fed.n_components)
         if isinstance(earlier, FeedbackState) and len(earlier.strength) == len(strength):
             strength = earlier.strength
-        direction = linearised_direction(fed, velocity)
-        return FeedbackState(fed, layout, gain, strength, direction)
+        return FeedbackState(fed, layout, gain, strength, linearised_direction(fed, velocity),
+                             local_speed(fed, velocity))
 
     def _gains(self, problem: Problem, fed: Readings, layout: Layout,
                velocity: np.ndarray) -> np.ndarray:
@@ -117,20 +117,21 @@ class Feedback:
         if not active.any():
             return own, change, 0.0
         due = own.count in REFRESH_EARLY or own.count % REFRESH_EVERY == 0
-        if due or own.response is None:
-            own = replace(own, response=_response(problem, own.layout, relax))
-        assert own.response is not None
+        response = own.response
+        if due or response is None:
+            response = _response(problem, own.layout, relax)
         slack = np.divide(own.strength, own.gain, out=np.zeros_like(own.gain), where=active)
         before = own.layout.sample(problem, state.velocity, state.boundary_velocity)
         misfit = np.where(active, own.misfit(before) - slack, 0.0)
         after = before + own.layout.sample_change(problem, change)
         error = np.where(active, own.misfit(after) - slack, 0.0)
-        own = replace(own, direction=linearised_direction(own.readings, after))
-        matrix = own.response.between(own)[np.ix_(active, active)]
+        own = replace(own, response=response,
+                      direction=linearised_direction(own.readings, after))
+        matrix = response.between(own)[np.ix_(active, active)]
         matrix[np.diag_indices(len(matrix))] += 1.0 / own.gain[active]
         step = np.zeros_like(own.strength)
         step[active] = np.linalg.lstsq(matrix, error[active], rcond=1e-13)[0]
-        change = change - own.response.apply(own.place_strength(step, sign=1.0))
+        change = change - response.apply(own.place_strength(step, sign=1.0))
         scale = max(float(np.abs(own.readings.component_value).max()),
                     float(np.linalg.norm(before, axis=1).max()), 1e-300)
         own = replace(own, strength=own.strength + step, count=own.count + 1)
@@ -152,11 +153,10 @@ class Feedback:
             lines.append("           the fed readings are met far closer than their uncertainty: "
                          "a lower gain would not fit their noise")
         if self.radius is not None and gain.any():
-            speed = local_speed(own.readings, own.layout.home_speed)[own.readings.component_place]
-            bite = gain * self.radius / np.maximum(speed, 1e-300)
+            bite = gain * self.radius / own.speed[own.readings.component_place]
             if bite.min() < BITES_FROM:
-                lines.append(f"           gain * radius / speed is {bite.min():.2g} at one reading, "
-                             f"below {BITES_FROM:g}: the fluid passes uncorrected there")
+                lines.append(f"           gain * radius / speed is {bite.min():.2g} at one "
+                             f"reading, below {BITES_FROM:g}: the fluid passes uncorrected there")
         return lines
 
 
@@ -164,7 +164,7 @@ def local_speed(readings: Readings, velocity: np.ndarray) -> np.ndarray:
     """(n_places,) larger of the measured and the computed speed [m/s], floored by their mean."""
     square = np.bincount(readings.component_place, readings.component_value ** 2, len(readings))
     speed = np.maximum(np.sqrt(square), np.linalg.norm(velocity, axis=1))
-    return np.maximum(speed, 0.1 * speed.mean())
+    return np.maximum(speed, max(0.1 * float(speed.mean()), 1e-300))
 
 
 @dataclass(frozen=True, eq=False)
@@ -180,7 +180,6 @@ class Layout:
     cell: sparse.csr_matrix
     drop: sparse.csr_matrix
     regions: tuple[np.ndarray, ...]
-    home_speed: np.ndarray
 
     def force(self, strength: np.ndarray) -> Force:
         """Force of strengths (n_places, 3) [m/s^2]."""
@@ -232,13 +231,17 @@ class Response:
 
 @dataclass(frozen=True, eq=False)
 class FeedbackState:
-    """Strengths ``a`` (m,) [m/s^2] with what is needed to go on."""
+    """Strengths ``a`` (m,) [m/s^2] with what is needed to go on.
+
+    ``speed`` (n_places,) [m/s] is the local speed the default gain was made from.
+    """
 
     readings: Readings
     layout: Layout
     gain: np.ndarray
     strength: np.ndarray
     direction: np.ndarray
+    speed: np.ndarray
     response: Response | None = None
     count: int = 0
 
@@ -287,9 +290,8 @@ def make_layout(problem: Problem, readings: Readings, kernel: Kernel, *,
         cells.append(at_cell)
         drops.append(at_face)
         regions.append(near.within(np.unique(at_cell.nonzero()[0] // 3), layers))
-    home = np.linalg.norm(np.zeros((len(readings), 3)), axis=1)
     return Layout(to_points, edges, sparse.hstack(cells).tocsr(), sparse.hstack(drops).tocsr(),
-                  tuple(regions), home[:, None] * np.ones(3))
+                  tuple(regions))
 
 
 def _columns(problem: Problem, to_points: PointInterpolation, edges: np.ndarray, place: int,
@@ -312,7 +314,8 @@ def _columns(problem: Problem, to_points: PointInterpolation, edges: np.ndarray,
         if own == 0.0:
             raise ReadingError("The force of a reading does not reach the reading.",
                                where=f"reading '{readings.name[place]}'",
-                               got=f"share {own:.2g}", remedy="Move it off the wall, or withhold it.")
+                               got=f"share {own:.2g}",
+                               remedy="Move it off the wall, or withhold it.")
         rows = (3 * touched[:, None] + np.arange(3)).ravel()
         columns.append(sparse.csc_matrix((push.ravel() / own, (rows, np.zeros(len(rows), int))),
                                          shape=(3 * mesh.n_cells, 1)))
