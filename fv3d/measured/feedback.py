@@ -30,6 +30,7 @@ from .readings import Readings, linearised_direction, predict
 
 REFRESH_EARLY = (0, 2, 5, 10, 20)  # responses are renewed at these iterations,
 REFRESH_EVERY = 30                 # then at every multiple of this
+REACHES_FROM = 0.02                # least share of a kernel's largest force at its own reading
 BITES_FROM = 3.0                   # gain * radius / speed above which passing fluid is corrected
 
 
@@ -272,7 +273,7 @@ def make_layout(problem: Problem, readings: Readings, kernel: Kernel, *,
     Raises
     ------
     ReadingError
-        A reading lies outside the mesh, or so close to a wall that its kernel vanishes there.
+        A reading lies outside the mesh, on a wall or inlet, or where its own force does not reach.
     """
     mesh = problem.mesh
     try:
@@ -281,6 +282,7 @@ def make_layout(problem: Problem, readings: Readings, kernel: Kernel, *,
     except CaseError as error:
         raise ReadingError("A fed reading lies outside the mesh.", where=error.where,
                            got=error.got, remedy=error.remedy) from None
+    _check_off_walls(problem, readings, to_points.home)
     near = Neighbourhood.of(mesh)
     edges = np.unique(to_points.edges.indices)
     cells, drops, regions = [], [], []
@@ -309,13 +311,9 @@ def _columns(problem: Problem, to_points: PointInterpolation, edges: np.ndarray,
         edge[edges] = edge_change(problem, edges, whole)
         own = float((to_points.cells[[place]] @ whole + to_points.edges[[place]] @ edge)[0, axis])
         largest = float(np.abs(push).max())
-        if not own > 1e-3 * largest:
-            own = np.inf if _pinned(problem, to_points, place) else 0.0
-        if own == 0.0:
-            raise ReadingError("The force of a reading does not reach the reading.",
-                               where=f"reading '{readings.name[place]}'",
-                               got=f"share {own:.2g}",
-                               remedy="Move it off the wall, or withhold it.")
+        if own < REACHES_FROM * largest:
+            _check_not_fed(readings, place, axis, own / largest)
+            own = np.inf
         rows = (3 * touched[:, None] + np.arange(3)).ravel()
         columns.append(sparse.csc_matrix((push.ravel() / own, (rows, np.zeros(len(rows), int))),
                                          shape=(3 * mesh.n_cells, 1)))
@@ -324,9 +322,33 @@ def _columns(problem: Problem, to_points: PointInterpolation, edges: np.ndarray,
     return sparse.hstack(columns).tocsc(), sparse.hstack(drops).tocsc()
 
 
-def _pinned(problem: Problem, to_points: PointInterpolation, place: int) -> bool:
-    """Whether boundary faces take part in the interpolation to a reading."""
-    return to_points.edges[[place]].nnz > 0
+def _check_not_fed(readings: Readings, place: int, axis: int, share: float) -> None:
+    """A force along this axis does not reach the reading: the reading must not need it."""
+    fed = readings.component_place == place
+    along = np.abs(readings.component_direction[fed, axis])
+    if np.any(np.isnan(along) | (along > 1e-6)):
+        raise ReadingError("The force of a reading does not reach the reading.",
+                           where=f"reading '{readings.name[place]}', along {'xyz'[axis]}",
+                           got=f"{share:.2g} of the largest force arrives",
+                           remedy="Move it away from the wall or corner, give a smaller radius, "
+                                  "or withhold it.")
+
+
+def _check_off_walls(problem: Problem, readings: Readings, home: np.ndarray) -> None:
+    """No reading on a boundary that gives the velocity itself."""
+    mesh, table, n = problem.mesh, problem.table, problem.mesh.n_internal
+    offsets, around, _ = mesh.cell_faces
+    for place, cell in enumerate(home):
+        faces = around[offsets[cell]:offsets[cell + 1]]
+        faces = faces[faces >= n]
+        faces = faces[(table.keep_tangential[faces - n] == 0) & (table.keep_normal[faces - n] == 0)]
+        arm = mesh.face_centre[faces] - readings.point[place]
+        off = np.einsum("ij,ij->i", arm, mesh.face_normal[faces])
+        if np.any(off <= 1e-6 * np.cbrt(mesh.cell_volume[cell])):
+            raise ReadingError("A fed reading lies on a boundary whose velocity is given.",
+                               where=f"reading '{readings.name[place]}'",
+                               got=f"{readings.point[place].tolist()} m",
+                               remedy="Move it into the fluid, or withhold it.")
 
 
 def _response(problem: Problem, layout: Layout, relax: Callable[..., Any]) -> Response:
