@@ -73,8 +73,9 @@ def main() -> None:
           f"{peak():.2f} GiB", flush=True)
     times = []
     began = time.perf_counter()
-    for state, record in fv3d.iterate(case):
+    for state, last in fv3d.iterate(case):
         times.append(time.perf_counter() - began)
+        effort = last.pressure_iterations
         if state.iteration == 1:
             print(f"set-up      {times[0]:.1f} s with the first iteration", flush=True)
         if state.iteration > chosen.iterations:
@@ -85,7 +86,7 @@ def main() -> None:
     bound = case.mesh.n_cells * BYTES_PER_CELL_AND_ITERATION / (rate * 1e9)
     print(f"iteration   median {one * 1e3:.0f} ms, {one / bound:.1f} times the bound of "
           f"{bound * 1e3:.0f} ms at {rate:.1f} GB/s")
-    print(f"pressure    {record.pressure_iterations} conjugate-gradient iterations in the last")
+    print(f"pressure    {effort} conjugate-gradient iterations in the last")
     print(f"memory      peak {peak():.2f} GiB, {peak() * 2**30 / case.mesh.n_cells:.0f} bytes per "
           "cell")
 

@@ -184,6 +184,17 @@ class Symmetry:
         table.pressure_flat[rows] = True
 
 
+@dataclass(frozen=True)
+class Slip:
+    """Wall without friction, flat or curved: no flow across it, no shear along it."""
+
+    def fill(self, table: BoundaryTable, rows: slice, centre: np.ndarray,
+             normal: np.ndarray) -> None:
+        """Tangential velocity from inside, normal stress only, pressure from inside."""
+        table.keep_tangential[rows] = 1.0
+        table.shear_normal[rows] = 2.0
+
+
 def boundary_table(mesh: Mesh, boundaries: Mapping[str, Boundary]) -> BoundaryTable:
     """Coefficients of every boundary face.
 
@@ -209,7 +220,7 @@ def boundary_table(mesh: Mesh, boundaries: Mapping[str, Boundary]) -> BoundaryTa
     if missing:
         raise BoundaryError("A boundary of the mesh has no condition.", where="Case(boundaries=)",
                             got=f"no entry for '{missing[0]}'",
-                            remedy="Give every boundary an Inlet, Outlet, Wall or Symmetry.")
+                            remedy="Give every boundary an Inlet, Outlet, Wall, Slip or Symmetry.")
     table = BoundaryTable.empty(mesh.n_boundary)
     for name, condition in boundaries.items():
         faces = mesh.boundaries[name]

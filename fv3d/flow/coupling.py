@@ -122,9 +122,9 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     state = replace(state, velocity=velocity, sources=tuple(sources))
     force = total_force(problem, state)
     edge = boundary_velocity(problem, velocity, gradient, edge_flux)
-    flux = interpolated_flux(problem, velocity, gradient, edge, fields, force, equation.diagonal,
-                             np.zeros(mesh.n_faces))
-    record_mass = mass_residual(problem, flux, velocity)
+    flux = interpolated_flux(problem, velocity, gradient, edge, fields, force,
+                             equation.diagonal, np.zeros(mesh.n_faces))
+    record_mass = mass_residual(problem, flux, velocity, fields.cell)
     state, effort = _correct_pressure(problem, state, flux, equation, gradient, workspace)
     record = Record(state.iteration, float(np.abs(residual).sum() / scale), record_mass, misfit,
                     effort)
@@ -157,13 +157,14 @@ def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, equation
     edge = boundary_velocity(problem, velocity, gradient, flux[n:])
     if workspace.response.fine_steps:
         pressure = _fine_supplement(problem, replace(state, velocity=velocity, pressure=pressure),
-                                    gradient, edge, flux[n:], equation, workspace)
+                                    gradient, edge, flux[n:], equation.diagonal,
+                                    workspace)
     return replace(state, velocity=velocity, pressure=pressure, mass_flux=flux,
                    boundary_velocity=edge), result.iterations
 
 
 def _fine_supplement(problem: Problem, state: State, gradient: np.ndarray, edge: np.ndarray,
-                     edge_flux: np.ndarray, equation: Momentum,
+                     edge_flux: np.ndarray, diagonal: np.ndarray,
                      workspace: Workspace) -> np.ndarray:
     """Pressure with its cell-scale part brought nearer to the end of the iteration.
 
@@ -172,12 +173,12 @@ def _fine_supplement(problem: Problem, state: State, gradient: np.ndarray, edge:
     the imbalance make up for that.  They change the path, not the solution.
     """
     mesh, force = problem.mesh, total_force(problem, state)
-    unrelaxed = correction_matrix(problem, mesh.cell_volume / equation.diagonal)[0].diagonal()
+    unrelaxed = correction_matrix(problem, mesh.cell_volume / diagonal)[0].diagonal()
     pressure, memory = state.pressure, np.zeros(mesh.n_faces)
     for size in workspace.response.fine_steps:
         fields = pressure_fields(problem, pressure, edge_flux)
         flux = interpolated_flux(problem, state.velocity, gradient, edge, fields, force,
-                                 equation.diagonal, memory)
+                                 diagonal, memory)
         pressure = pressure - size * (mesh.outflow @ flux) / unrelaxed
     if problem.closed:
         pressure -= np.average(pressure, weights=mesh.cell_volume)
@@ -201,19 +202,25 @@ def solve_pressure(problem: Problem, workspace: Workspace, matrix: Any, rhs: np.
     return result
 
 
-def mass_residual(problem: Problem, flux: np.ndarray, velocity: np.ndarray) -> float:
+def mass_residual(problem: Problem, flux: np.ndarray, velocity: np.ndarray,
+                  pressure: np.ndarray) -> float:
     """Sum of the cells' mass imbalance over the reference flux."""
     imbalance = np.abs(problem.mesh.outflow @ flux).sum()
-    return float(imbalance / reference_flux(problem, flux, velocity))
+    return float(imbalance / reference_flux(problem, flux, velocity, pressure))
 
 
-def reference_flux(problem: Problem, flux: np.ndarray, velocity: np.ndarray) -> float:
-    """Inflow [kg/s]; in a domain without inflow the rms speed over a mean cross-section."""
+def reference_flux(problem: Problem, flux: np.ndarray, velocity: np.ndarray,
+                   pressure: np.ndarray) -> float:
+    """Inflow [kg/s]; in a domain without inflow the rms speed over a mean cross-section.
+
+    A fluid at rest is measured against a millionth of the speed its pressures could cause.
+    """
     mesh, density = problem.mesh, problem.case.fluid.density
     inflow = -np.minimum(flux[mesh.n_internal:], 0.0).sum()
     volume = mesh.cell_volume.sum()
-    square = np.einsum("ij,ij,i->", velocity, velocity, mesh.cell_volume) / volume
-    circulating = density * np.sqrt(square) * volume ** (2 / 3)
+    speed = np.sqrt(np.einsum("ij,ij,i->", velocity, velocity, mesh.cell_volume) / volume)
+    speed += 1e-6 * np.sqrt(np.ptp(pressure) / density)
+    circulating = density * speed * volume ** (2 / 3)
     return float(max(inflow if inflow > 1e-3 * circulating else circulating, 1e-300))
 
 

@@ -173,12 +173,28 @@ def _boundary_momentum(problem: Problem, velocity: np.ndarray, gradient: np.ndar
     nn = np.stack([x * x, y * y, z * z, x * y, x * z, y * z], axis=1)
     block = (c * (across - along))[:, None] * nn
     block[:, :3] += (c * (along - common))[:, None]
-    total = boundary_traction(problem, velocity, gradient, edge) - flux[:, None] * (edge - own)
+    carried = boundary_carried(problem, velocity, gradient, edge, flux)
+    total = boundary_traction(problem, velocity, gradient, edge) - flux[:, None] * (carried - own)
     acting = np.empty_like(own)
     acting[:, 0] = block[:, 0] * own[:, 0] + block[:, 3] * own[:, 1] + block[:, 4] * own[:, 2]
     acting[:, 1] = block[:, 3] * own[:, 0] + block[:, 1] * own[:, 1] + block[:, 5] * own[:, 2]
     acting[:, 2] = block[:, 4] * own[:, 0] + block[:, 5] * own[:, 1] + block[:, 2] * own[:, 2]
     return implicit, block, total + implicit[:, None] * own + acting
+
+
+def boundary_carried(problem: Problem, velocity: np.ndarray, gradient: np.ndarray,
+                     edge: np.ndarray, flux: np.ndarray) -> np.ndarray:
+    """(n_boundary, 3) velocity that the mass flux carries through each boundary face [m/s].
+
+    Fluid that leaves through a boundary of given velocity carries the value extrapolated from
+    inside, as convection asks for; the given value acts by diffusion.
+    """
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    scheme, owner = problem.case.numerics.convection, mesh.left[n:]
+    share = min(scheme.upwind_share + scheme.central_share, 1.0)
+    inner = velocity[owner] + share * np.einsum("fij,fj->fi", gradient[owner], mesh.delta[n:])
+    leaving = (flux > 0) & ~problem.table.pressure_given
+    return np.where(leaving[:, None], inner, edge)
 
 
 def _shear_coefficients(problem: Problem) -> tuple[np.ndarray, ...]:

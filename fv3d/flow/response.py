@@ -26,10 +26,13 @@ class PressureResponse:
     """Largest answers, relative to the compact operator (``whole``) and its diagonal (``fine``).
 
     ``whole`` includes the velocity's answer; ``fine`` is that of the flux smoothing alone.
+    ``decoupled``: nearly all cells are hexahedra, whose pressure gradient does not see a pressure
+    that alternates from cell to cell.
     """
 
     whole: float
     fine: float
+    decoupled: bool
 
     @property
     def skewed(self) -> bool:
@@ -48,11 +51,13 @@ class PressureResponse:
 
     @property
     def fine_steps(self) -> tuple[float, ...]:
-        """Steps of the fine-scale pressure supplement; none on a skewed mesh.
+        """Steps of the fine-scale pressure supplement.
+
+        None on a skewed mesh, nor where the velocity answers at cell scale too (tetrahedra).
 
         The pair damps answers between a third of the largest and the largest to a fifth.
         """
-        return () if self.skewed else (1.1 / self.fine, 2.0 / self.fine)
+        return () if self.skewed or not self.decoupled else (1.1 / self.fine, 2.0 / self.fine)
 
 
 def pressure_response(problem: Problem, *, steps: int = 12) -> PressureResponse:
@@ -64,10 +69,12 @@ def pressure_response(problem: Problem, *, steps: int = 12) -> PressureResponse:
         Power iterations for each number.
     """
     mesh, n = problem.mesh, problem.mesh.n_internal
+    hexahedra = sum(len(cells) for kind, _, cells in mesh.cell_blocks if kind == "hexahedron")
+    decoupled = hexahedra > 0.95 * mesh.n_cells
     cosine = np.einsum("ij,ij->i", mesh.face_normal, mesh.delta)
     cosine /= np.linalg.norm(mesh.delta, axis=1)
     if cosine.min() > 0.996:
-        return PressureResponse(1.0, 2.0)
+        return PressureResponse(1.0, 2.0, decoupled)
     g = problem.orthogonal
     outer = np.where(problem.table.pressure_given, g[n:], 0.0)
     matrix = symmetric_matrix(mesh, problem.pattern, g[:n], outer)
@@ -85,7 +92,7 @@ def pressure_response(problem: Problem, *, steps: int = 12) -> PressureResponse:
 
     whole = _largest(whole_answer, mesh.n_cells, steps)
     fine = _largest(fine_answer, mesh.n_cells, steps)
-    return PressureResponse(max(1.1 * whole, 1.0), max(1.1 * fine, 1.0))
+    return PressureResponse(max(1.1 * whole, 1.0), max(1.1 * fine, 1.0), decoupled)
 
 
 def _answer(problem: Problem, pressure: np.ndarray, outer: np.ndarray,

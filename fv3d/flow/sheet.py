@@ -30,7 +30,7 @@ def run_sheet(run: Any) -> str:
     if last:
         lines.append(f"  residuals  momentum {last['momentum']:.1e}, mass {last['mass']:.1e}"
                      + (f", readings {last['misfit']:.1e}" if run.problem.sources else ""))
-    imbalance = mass_residual(run.problem, run.mass_flux, run.velocity)
+    imbalance = mass_residual(run.problem, run.mass_flux, run.velocity, run.state.pressure)
     lines.append(f"  mass       summed imbalance {imbalance:.1e} of the reference flux")
     speed = np.linalg.norm(run.velocity, axis=1)
     lines.append(f"  speed      mean {np.average(speed, weights=mesh.cell_volume):.4g} m/s, "

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..errors import CaseError
-from ..flow.equations import boundary_traction
+from ..flow.equations import boundary_carried, boundary_traction
 from ..flow.run import Run
 from ..operators.interpolation import checked_points
 
@@ -143,7 +143,9 @@ def momentum_budget(run: Run) -> MomentumBudget:
     for name, faces in mesh.boundaries.items():
         rows = slice(faces.start - n, faces.stop - n)
         boundaries[name] = (traction[rows] - push[rows]).sum(axis=0)
-    convected = -(run.mass_flux[n:, None] * run.state.boundary_velocity).sum(axis=0)
+    carried = boundary_carried(run.problem, run.velocity, run.velocity_gradient(),
+                               run.state.boundary_velocity, run.mass_flux[n:])
+    convected = -(run.mass_flux[n:, None] * carried).sum(axis=0)
     volume = mesh.cell_volume[:, None]
     body = np.zeros(3)
     if run.problem.force is not None:
