@@ -13,8 +13,8 @@ import numpy as np
 from .coupling import Record
 from .problem import Problem
 
-BYTES_PER_CELL = 3300.0  # peak of a steady run on hexahedra, measured with cases/memory.py
-GRADIENTS_PER_ITERATION = 14.0  # cost of an iteration in vector gradients, measured likewise
+BYTES_PER_CELL = 3500.0  # peak of a steady run on hexahedra, see cases/benchmark/run.py
+GRADIENTS_PER_ITERATION = 55.0  # cost of an iteration in vector gradients, measured likewise
 
 
 def estimate(problem: Problem, max_iterations: int) -> tuple[float, float]:

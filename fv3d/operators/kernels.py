@@ -235,7 +235,7 @@ def sweep(indptr, indices, data, inverse, rhs, rows, backward, x):
 def momentum_face_flux(left, right, weight, skew, area, delta, orthogonal, density, velocity,
                        gradient, net_gradient, pressure, force_drop, interpolation_d, memory,
                        out):
-    """Mass flux by momentum interpolation, see :mod:`fv3d.flow.pressure`."""
+    """Mass flux by momentum interpolation, see :mod:`fv3d.flow.equations`."""
     for face in numba.prange(right.shape[0]):
         a = left[face]
         b = right[face]
