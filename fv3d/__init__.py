@@ -16,9 +16,11 @@ from .errors import (
 )
 from .flow.boundary import Inlet, Outlet, Symmetry, Wall
 from .flow.fluid import Fluid, moist_air, water
+from .flow.monitors import ForceMonitor, PointMonitor
 from .flow.numerics import SIMPLE, SIMPLEC, Numerics
 from .flow.problem import Case
-from .flow.run import Run, iterate, solve_steady
+from .flow.run import Run
+from .flow.steady import iterate, solve_steady
 from .measured.compare import Comparison, compare
 from .measured.feedback import Feedback
 from .measured.readings import Readings, observe, read_readings
@@ -42,9 +44,9 @@ from .results.pictures import picture, picture_readings
 __all__ = [
     "SIMPLE", "SIMPLEC", "Blended", "BoundaryError", "BoundaryForce", "ByAnisotropy", "Case",
     "CaseError", "Central", "Classical", "Comparison", "DivergenceError", "Feedback", "FileError",
-    "Fluid", "ForceBudget",
+    "Fluid", "ForceBudget", "ForceMonitor",
     "Fv3dError", "Fv3dWarning", "Inlet", "LeastSquares", "Mesh", "MeshError", "MomentumBudget",
-    "Numerics", "OneSided", "Outcome", "Outlet", "ReadingError", "Readings", "Run",
+    "Numerics", "OneSided", "Outcome", "Outlet", "PointMonitor", "ReadingError", "Readings", "Run",
     "SecondOrderUpwind", "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided", "Uniform",
     "Upwind", "Wall", "box", "build_mesh", "channel_with_block", "channel_with_cylinder",
     "check_mesh", "compare", "force", "force_budget", "get_threads", "iterate", "moist_air",

@@ -39,6 +39,7 @@ class Record:
     mass: float
     misfit: float
     pressure_iterations: int
+    time: float = float("nan")
 
     @property
     def residual(self) -> float:

@@ -117,6 +117,8 @@ class State:
     boundary_velocity: np.ndarray
     sources: tuple[Any, ...] = ()
     iteration: int = 0
+    time: float = float("nan")
+    older: State | None = None
 
 
 @dataclass(frozen=True, eq=False)

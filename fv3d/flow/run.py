@@ -1,36 +1,19 @@
-"""The one loop, and what it returns."""
+"""What a run returns: fields, history, outcome, and values at points."""
 
 from __future__ import annotations
 
-import time
-import warnings
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from functools import cached_property
-from types import MappingProxyType
-from typing import Any, Protocol
 
 import numpy as np
 
-from .. import errors
-from ..errors import CaseError, DivergenceError, Fv3dWarning, Outcome, as_number
+from ..errors import Outcome
 from ..mesh.mesh import Mesh
 from ..operators.interpolation import PointInterpolation, point_interpolation
-from . import coupling
-from .coupling import Record, Workspace, make_workspace
 from .equations import PressureFields, pressure_fields
-from .problem import Case, Force, Problem, Source, State, make_problem
-from .start import start_state
-
-
-class Monitor(Protocol):
-    """Sees every step and may stop the run by returning a sentence."""
-
-    name: str
-
-    def see(self, problem: Problem, state: State, record: Record) -> str | None:
-        """Called after each iteration; a non-empty sentence ends the run."""
-        ...
+from .monitors import Series
+from .problem import Case, Force, Problem, State
 
 
 @dataclass(frozen=True, eq=False)
@@ -54,6 +37,7 @@ class Run:
     outcome: Outcome
     name: str
     seconds: float = 0.0
+    series: Mapping[str, Series] = field(default_factory=dict, repr=False)
 
     @property
     def case(self) -> Case:
@@ -150,150 +134,6 @@ class Run:
     def __str__(self) -> str:
         from .sheet import run_sheet
         return run_sheet(self)
-
-
-def iterate(case: Case, *, sources: Sequence[Source] = (),
-            start: Any = None) -> Iterator[tuple[State, Record]]:
-    """Steady iterations without end: the open door the verbs are built on.
-
-    Yields
-    ------
-    state, record
-        The state after each iteration and the record of the one before it.
-
-    Raises
-    ------
-    CaseError
-        The start does not fit.
-    """
-    problem = make_problem(case, tuple(sources))
-    workspace = make_workspace(problem)
-    yield from _loop(problem, start_state(problem, start, workspace), workspace)
-
-
-def _loop(problem: Problem, state: State, workspace: Workspace) -> Iterator[tuple[State, Record]]:
-    while True:
-        with np.errstate(all="ignore"):
-            state, record = coupling.step(problem, state, workspace)
-        yield state, record
-
-
-def solve_steady(case: Case, *, tolerance: float, max_iterations: int,
-                 sources: Sequence[Source] = (), start: Any = None, name: str | None = None,
-                 monitors: Sequence[Monitor] = (), progress: bool = True) -> Run:
-    """Iterate to a steady solution.
-
-    Parameters
-    ----------
-    case : Case
-    tolerance : float
-        On the largest of momentum, mass and misfit residual (see :class:`Record`).
-    max_iterations : int
-    sources : sequence of sources such as :class:`Feedback`
-    start : Run (of any mesh), velocity vector, function of points, or None
-        None: irrotational flow through the given fluxes.
-    name : str, optional
-        Default: ``"plain"`` without sources, else ``"guided"``.
-    monitors : sequence of Monitor
-    progress : bool
-        Estimate of memory and time before, bar with time left during the run.
-
-    Returns
-    -------
-    Run
-        Also when the iteration did not converge: see ``run.outcome``; a warning says so.
-
-    Raises
-    ------
-    CaseError, BoundaryError
-        Something does not fit, before the first iteration.
-    DivergenceError
-        The fields stopped being finite; carries the last finite run.
-    """
-    _check_limits(tolerance, max_iterations)
-    _check_kind(sources, ("start", "force", "correct"), "sources")
-    _check_kind(monitors, ("see",), "monitors")
-    began = time.perf_counter()
-    problem = make_problem(case, tuple(sources))
-    workspace = make_workspace(problem)
-    state = start_state(problem, start, workspace)
-    name = name or ("guided" if sources else "plain")
-    records: list[Record] = []
-    outcome = None
-    from .progress import Progress
-    with Progress(problem, name, tolerance, max_iterations, progress) as bar:
-        try:
-            last = state
-            for state, record in _loop(problem, last, workspace):
-                if not (np.isfinite(record.residual) and _finite(state)):
-                    outcome, state = errors.diverged(len(records) + 1), last
-                    break
-                records.append(record)
-                last = state
-                bar.show(record)
-                reason = next(filter(None, (m.see(problem, state, record) for m in monitors)), None)
-                if record.residual <= tolerance:
-                    outcome = errors.converged(len(records), tolerance)
-                elif reason:
-                    outcome = errors.stopped_by_monitor(len(records), reason)
-                elif len(records) >= max_iterations:
-                    outcome = errors.iteration_limit(len(records), record.residual, tolerance)
-                if outcome:
-                    break
-        except KeyboardInterrupt:
-            outcome, state = errors.interrupted(len(records)), last
-    assert outcome is not None
-    if outcome.name != "diverged":
-        state = coupling.conserve(problem, state, workspace)
-    run = Run(problem, state, _history(records), outcome, name, time.perf_counter() - began)
-    _report(run)
-    return run
-
-
-def _check_limits(tolerance: float, max_iterations: int) -> None:
-    if not 0.0 < as_number(tolerance) < np.inf:
-        raise CaseError("The tolerance must be positive.", where="solve_steady(tolerance=)",
-                        got=tolerance, remedy="Give 1e-6, say.")
-    if not (as_number(max_iterations) >= 1 and as_number(max_iterations) % 1 == 0):
-        raise CaseError("The limit of iterations is a whole number from 1.", got=max_iterations,
-                        where="solve_steady(max_iterations=)", remedy="Give 2000, say.")
-
-
-def _check_kind(given: Any, needs: tuple[str, ...], name: str) -> None:
-    """Refuse what is no sequence of objects with the methods a source or monitor has."""
-    whole = isinstance(given, Sequence) and not isinstance(given, str)
-    for one in given if whole else [given]:
-        if not whole or isinstance(one, type) or not all(hasattr(one, need) for need in needs):
-            raise CaseError(f"The {name} must be a list of objects with the methods "
-                            f"{', '.join(needs)}.", where=f"solve_steady({name}=)", got=repr(one),
-                            remedy=f"Give {name}=[...], with instances, not classes.")
-
-
-def _finite(state: State) -> bool:
-    return bool(np.isfinite(state.velocity.sum()) and np.isfinite(state.pressure.sum()))
-
-
-def _history(records: list[Record]) -> Mapping[str, np.ndarray]:
-    columns = {
-        "iteration": np.array([r.iteration for r in records], dtype=int),
-        "momentum": np.array([r.momentum for r in records]),
-        "mass": np.array([r.mass for r in records]),
-        "misfit": np.array([r.misfit for r in records]),
-        "pressure_iterations": np.array([r.pressure_iterations for r in records], dtype=int),
-    }
-    return MappingProxyType(columns)
-
-
-def _report(run: Run) -> None:
-    if run.outcome.name == "diverged":
-        raise DivergenceError("The iteration diverged.", run=run, where=f"run '{run.name}'",
-                              got=run.outcome.sentence, remedy=run.outcome.next_step)
-    if not run.outcome.good:
-        warnings.warn(f"Run '{run.name}' ended with {run.outcome}", Fv3dWarning, stacklevel=3)
-    share = reverse_flow_share(run)
-    if share > 1e-3:
-        warnings.warn(f"Run '{run.name}': {share:.1%} of the outlet flux flows inwards. Move the "
-                      "outlet downstream, away from recirculation.", Fv3dWarning, stacklevel=3)
 
 
 def reverse_flow_share(run: Run) -> float:

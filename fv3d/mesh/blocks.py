@@ -1,4 +1,4 @@
-"""Structured blocks joined into one mesh, and hexahedra cut into tetrahedra."""
+"""Structured blocks of hexahedra joined into one mesh."""
 
 from __future__ import annotations
 
@@ -10,9 +10,9 @@ import scipy.sparse as sparse
 from scipy.sparse.csgraph import connected_components
 
 from ..errors import MeshError
+from .cut import cut_hexes
 from .geometry import signed_volumes
 from .mesh import Mesh, build_mesh
-from .topology import LOCAL_FACES
 
 BLOCK_SIDES = ("i_min", "i_max", "j_min", "j_max", "k_min", "k_max")
 
@@ -33,7 +33,7 @@ class Block:
     sides: Mapping[str, str] = field(default_factory=dict)
 
 
-def join_blocks(blocks: Sequence[Block], *, tetra: bool = False,
+def join_blocks(blocks: Sequence[Block], *, tetra: bool = False, wedge: bool = False,
                 source: str = "generated mesh") -> Mesh:
     """Join structured blocks at their coinciding points.
 
@@ -42,6 +42,8 @@ def join_blocks(blocks: Sequence[Block], *, tetra: bool = False,
     blocks : sequence of Block
     tetra : bool
         Cut every hexahedron into six tetrahedra.
+    wedge : bool
+        Cut every hexahedron into two wedges along the k direction of the blocks.
     source : str
         Named in error messages.
 
@@ -54,6 +56,16 @@ def join_blocks(blocks: Sequence[Block], *, tetra: bool = False,
     MeshError
         Blocks that do not fit together, or an inverted cell.
     """
+    points, hexes, quads = hexes_of_blocks(blocks)
+    return mesh_of_hexes(points, hexes, quads, tetra=tetra, wedge=wedge, source=source)
+
+
+def hexes_of_blocks(blocks: Sequence[Block]) -> tuple[np.ndarray, np.ndarray,
+                                                      dict[str, np.ndarray]]:
+    """Points (n, 3) [m], hexahedra (n, 8) and boundary quadrilaterals (m, 4) of each name.
+
+    The hexahedra of each block come in the order of its cells, k running fastest.
+    """
     points, numbers = _merged_points(blocks)
     hexes: list[np.ndarray] = []
     boundaries: dict[str, list[np.ndarray]] = {}
@@ -61,53 +73,24 @@ def join_blocks(blocks: Sequence[Block], *, tetra: bool = False,
         hexes.append(_oriented(points, _block_cells(number)))
         for side, name in block.sides.items():
             boundaries.setdefault(name, []).append(_side_quads(number, side))
-    quads = {name: np.concatenate(parts) for name, parts in boundaries.items()}
-    return mesh_of_hexes(points, np.concatenate(hexes), quads, tetra=tetra, source=source)
+    return points, np.concatenate(hexes), {name: np.concatenate(parts)
+                                           for name, parts in boundaries.items()}
 
 
 def mesh_of_hexes(points: np.ndarray, hexes: np.ndarray, quads: Mapping[str, np.ndarray], *,
-                  tetra: bool = False, source: str = "generated mesh") -> Mesh:
-    """Build a mesh from hexahedra (n, 8) and the boundary quadrilaterals (m, 4) of each name."""
-    if not tetra:
-        return build_mesh(points, [("hexahedron", hexes)],
-                          {name: [faces] for name, faces in quads.items()}, source=source)
-    tets, triangles = to_tetra(hexes, quads)
-    return build_mesh(points, [("tetra", tets)],
-                      {name: [faces] for name, faces in triangles.items()}, source=source)
+                  tetra: bool = False, wedge: bool = False,
+                  source: str = "generated mesh") -> Mesh:
+    """Build a mesh from hexahedra (n, 8) and the boundary quadrilaterals (m, 4) of each name.
 
-
-def to_tetra(hexes: np.ndarray,
-             quads: Mapping[str, np.ndarray]) -> tuple[np.ndarray, dict[str, np.ndarray]]:
-    """Cut hexahedra into six tetrahedra each.
-
-    Every quadrilateral is cut along the diagonal through its smallest point number, so the
-    cells conform whatever the arrangement of the hexahedra; the tetrahedra of a hexahedron
-    are cones from its smallest point (after Dompierre et al., 1999).
-
-    Parameters
-    ----------
-    hexes : (n, 8) point numbers in VTK order
-    quads : mapping of name to (m, 4) point numbers
-
-    Returns
-    -------
-    tets : (6 n, 4) point numbers
-    triangles : mapping of name to (2 m, 3) point numbers
+    ``tetra`` cuts all into six tetrahedra, ``wedge`` into two wedges along the third direction.
     """
-    hexes = np.asarray(hexes, dtype=np.int64)
-    tets = np.empty((len(hexes), 6, 4), dtype=np.int64)
-    smallest = np.argmin(hexes, axis=1)
-    for apex in range(8):
-        chosen = np.flatnonzero(smallest == apex)
-        opposite = [f for f in LOCAL_FACES["hexahedron"] if apex not in f]
-        for k, local in enumerate(opposite):
-            pair = _two_triangles(hexes[chosen][:, list(local)])
-            for half in range(2):
-                tets[chosen, 2 * k + half, :3] = pair[:, half, ::-1]
-        tets[chosen, :, 3] = hexes[chosen, apex][:, None]
-    triangles = {name: _two_triangles(np.asarray(q, dtype=np.int64)).reshape(-1, 3)
-                 for name, q in quads.items()}
-    return tets.reshape(-1, 4), triangles
+    if tetra and wedge:
+        raise MeshError("Cells cannot be tetrahedra and wedges at once.", where=source,
+                        got="tetra=True, wedge=True", remedy="Set one of the two.")
+    every = np.ones(len(hexes), dtype=bool)
+    points, cells, boundaries = cut_hexes(points, hexes, quads, tetra=every if tetra else None,
+                                          wedge=every if wedge else None, source=source)
+    return build_mesh(points, cells, boundaries, source=source)
 
 
 def extrude(plane: np.ndarray, levels: np.ndarray) -> np.ndarray:
@@ -176,10 +159,3 @@ def _side_quads(number: np.ndarray, side: str) -> np.ndarray:
     face = np.take(number, 0 if side.endswith("min") else -1, axis=axis)
     corners = [face[:-1, :-1], face[1:, :-1], face[1:, 1:], face[:-1, 1:]]
     return np.stack([c.ravel() for c in corners], axis=1)
-
-
-def _two_triangles(quads: np.ndarray) -> np.ndarray:
-    """(n, 2, 3) triangles of quadrilaterals (n, 4), cut through the smallest point number."""
-    start = np.argmin(quads, axis=1)[:, None]
-    turned = np.take_along_axis(quads, (start + np.arange(4)) % 4, axis=1)
-    return turned[:, [[0, 1, 2], [0, 2, 3]]]

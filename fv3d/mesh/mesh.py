@@ -8,7 +8,7 @@ boundary as one slice.  The area vector of a face points from its ``left`` to it
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import cached_property
 from types import MappingProxyType
 
@@ -59,6 +59,8 @@ class Mesh:
     warp : (n_faces, 3, 3) [m^3], or (0, 3, 3) where all faces are flat
         ``[f, j, i]`` the integral of (x - face centre)_j dS_i, which vanishes on flat faces.
     boundaries : mapping of name to slice into the faces.
+    zones : mapping of name to (n,) int32
+        Named groups of cells, in the mesh's own numbering and rising order; may overlap.
     """
 
     points: np.ndarray
@@ -75,6 +77,7 @@ class Mesh:
     weight: np.ndarray
     warp: np.ndarray
     boundaries: Mapping[str, slice]
+    zones: Mapping[str, np.ndarray] = field(default_factory=lambda: MappingProxyType({}))
 
     @property
     def n_cells(self) -> int:
@@ -153,7 +156,8 @@ class Mesh:
 
     def __repr__(self) -> str:
         kinds = ", ".join(f"{len(cells)} {kind}" for kind, _, cells in self.cell_blocks)
-        return f"Mesh({kinds}; boundaries: {', '.join(self.boundaries)})"
+        zones = f"; zones: {', '.join(self.zones)}" if self.zones else ""
+        return f"Mesh({kinds}; boundaries: {', '.join(self.boundaries)}{zones})"
 
     def __str__(self) -> str:
         from .quality import mesh_sheet
@@ -161,7 +165,8 @@ class Mesh:
 
 
 def build_mesh(points: np.ndarray, cells: Sequence[tuple[str, np.ndarray]],
-               boundaries: Mapping[str, Sequence[np.ndarray]], *, renumber: bool = True,
+               boundaries: Mapping[str, Sequence[np.ndarray]], *,
+               zones: Mapping[str, np.ndarray] | None = None, renumber: bool = True,
                source: str = "arrays") -> Mesh:
     """Build a mesh from points, cells and the faces of each named boundary.
 
@@ -172,6 +177,8 @@ def build_mesh(points: np.ndarray, cells: Sequence[tuple[str, np.ndarray]],
         ``kind`` is one of ``tetra, hexahedron, wedge, pyramid``; VTK point order.
     boundaries : mapping of name to arrays of faces
         Each array is (n, 3) or (n, 4) point indices, in any order around the face.
+    zones : mapping of name to cells, optional
+        Indices of the cells of each zone, or a mask (n_cells,), in the order of ``cells``.
     renumber : bool
         Number the cells by reverse Cuthill-McKee (Cuthill and McKee, 1969).
     source : str
@@ -185,7 +192,8 @@ def build_mesh(points: np.ndarray, cells: Sequence[tuple[str, np.ndarray]],
     ------
     MeshError
         An inverted cell, a face of more than two cells, a boundary face without a name
-        or with two, a name on something that is no boundary face.
+        or with two, a name on something that is no boundary face, a zone of cells that do
+        not exist.
     """
     points = np.array(points, dtype=np.float64, order="C")
     cells = [(kind, np.array(conn)) for kind, conn in cells if len(conn)]
@@ -217,7 +225,25 @@ def build_mesh(points: np.ndarray, cells: Sequence[tuple[str, np.ndarray]],
     splits = np.cumsum([len(conn) for _, conn in cells])[:-1]
     blocks = tuple((kind, _read_only(conn), _read_only(number)) for (kind, conn), number
                    in zip(cells, np.split(new_number, splits)))
-    return _with_geometry(points, blocks, face_points, left, right, slices)
+    groups = MappingProxyType({name: _zone(name, chosen, new_number, source)
+                               for name, chosen in (zones or {}).items()})
+    return _with_geometry(points, blocks, face_points, left, right, slices, groups)
+
+
+def _zone(name: str, chosen: np.ndarray, new_number: np.ndarray, source: str) -> np.ndarray:
+    """(n,) cells of a zone in the new numbering."""
+    cells, n_cells = np.asarray(chosen), len(new_number)
+    if cells.dtype == bool and cells.shape == (n_cells,):
+        cells = np.flatnonzero(cells)
+    if (not isinstance(name, str) or not name or cells.ndim != 1 or not cells.size
+            or cells.dtype.kind not in "iu" or cells.min() < 0 or cells.max() >= n_cells):
+        got = f"{cells.dtype} of shape {cells.shape}"
+        if cells.ndim == 1 and cells.size and cells.dtype.kind in "iu":
+            got = f"cells {cells.min()} to {cells.max()} of {n_cells}"
+        raise MeshError("A zone must be a name with some cells of the mesh.",
+                        where=f"{source}, zone {name!r}", got=got,
+                        remedy="Give cell indices, or a mask with one entry per cell.")
+    return _read_only(np.unique(new_number[cells]))
 
 
 def _check_blocks(points: np.ndarray, cells: list[tuple[str, np.ndarray]], source: str) -> None:
@@ -261,7 +287,8 @@ def _check_volumes(points: np.ndarray, kind: str, conn: np.ndarray, source: str)
 
 
 def _with_geometry(points: np.ndarray, blocks: tuple, face_points: np.ndarray,
-                   left: np.ndarray, right: np.ndarray, slices: dict[str, slice]) -> Mesh:
+                   left: np.ndarray, right: np.ndarray, slices: dict[str, slice],
+                   zones: Mapping[str, np.ndarray]) -> Mesh:
     n_cells, n_internal = sum(len(cells) for _, _, cells in blocks), len(right)
     apex, new_number = np.empty((n_cells, 3)), np.concatenate([cells for _, _, cells in blocks])
     for _, conn, cells in blocks:
@@ -281,4 +308,4 @@ def _with_geometry(points: np.ndarray, blocks: tuple, face_points: np.ndarray,
                 face_centre=_read_only(centre), cell_volume=_read_only(volume),
                 cell_centre=_read_only(cell_centre), delta=_read_only(delta),
                 weight=_read_only(far / np.maximum(near + far, 1e-300)), warp=_read_only(warp),
-                boundaries=MappingProxyType(slices))
+                boundaries=MappingProxyType(slices), zones=zones)

@@ -139,6 +139,8 @@ def mesh_sheet(mesh: Mesh) -> str:
     for name, where in mesh.boundaries.items():
         area = mesh.face_area_magnitude[where].sum()
         lines.append(f"  {name:<{width}}  {where.stop - where.start:>8}  {area:>12.6g}")
+    for name, chosen in mesh.zones.items():
+        lines.append(f"  zone '{name}': {len(chosen)} cells, {volume[chosen].sum():.6g} m^3")
     lines.append(f"  {'cells':<24}  {'median':>8}  {'worst':>8}  at [m]")
     lines += _worst_lines(mesh)
     return "\n".join(lines)
