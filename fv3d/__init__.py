@@ -21,6 +21,7 @@ from .flow.numerics import SIMPLE, SIMPLEC, Numerics
 from .flow.problem import Case
 from .flow.run import Run
 from .flow.steady import iterate, solve_steady
+from .flow.transient import solve_transient
 from .measured.compare import Comparison, compare
 from .measured.feedback import Feedback
 from .measured.readings import Readings, observe, read_readings
@@ -52,6 +53,6 @@ __all__ = [
     "check_mesh", "compare", "force", "force_budget", "get_threads", "iterate", "moist_air",
     "momentum_budget",
     "nozzle", "observe", "picture", "picture_readings", "quality", "read_mesh", "read_readings",
-    "set_threads", "solve_steady", "water", "write_history", "write_mesh", "write_readings",
-    "write_vtk",
+    "set_threads", "solve_steady", "solve_transient", "water", "write_history", "write_mesh",
+    "write_readings", "write_vtk",
 ]

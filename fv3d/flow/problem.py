@@ -118,7 +118,7 @@ class State:
     sources: tuple[Any, ...] = ()
     iteration: int = 0
     time: float = float("nan")
-    older: State | None = None
+    older: Any = None
 
 
 @dataclass(frozen=True, eq=False)

@@ -9,8 +9,7 @@ import numpy as np
 from ..errors import MeshError
 from .topology import LOCAL_FACES, face_keys
 
-_FACES = np.array(LOCAL_FACES["hexahedron"])
-_ENDS = (0, 1)                                          # local faces 0123 and 4567
+_FACES = np.array(LOCAL_FACES["hexahedron"])          # the first two are 0123 and 4567
 
 
 def to_tetra(hexes: np.ndarray,
@@ -102,9 +101,14 @@ def cut_hexes(points: np.ndarray, hexes: np.ndarray, quads: Mapping[str, np.ndar
     """
     none = np.zeros(len(hexes), dtype=bool)
     tetra, wedge, centre = (none if mask is None else mask for mask in (tetra, wedge, centre))
-    face_of, split = _split_faces(hexes, tetra, wedge)
-    stiff = split[face_of] & ~(tetra | centre)[:, None]
-    stiff[:, _ENDS] &= ~wedge[:, None]
+    if not np.any(tetra | wedge | centre):
+        return points, [("hexahedron", hexes)], {name: [faces] for name, faces in quads.items()}
+    if np.all(tetra):
+        tets, triangles = to_tetra(hexes, quads)
+        return points, [("tetra", tets)], {name: [faces] for name, faces in triangles.items()}
+    split, split_quads = _split_faces(hexes, quads, tetra, wedge)
+    stiff = split & ~(tetra | centre)[:, None]
+    stiff[:, :2] &= ~wedge[:, None]
     if np.any(stiff):
         place = np.round(points[hexes[np.argmax(stiff.any(axis=1))]].mean(axis=0), 6).tolist()
         raise MeshError("A face is cut on one side only.", where=f"{source}, near {place}",
@@ -116,28 +120,25 @@ def cut_hexes(points: np.ndarray, hexes: np.ndarray, quads: Mapping[str, np.ndar
     if np.any(centre):
         apex = len(points) + np.arange(np.count_nonzero(centre))
         points = np.concatenate([points, points[hexes[centre]].mean(axis=1)])
-        cells += _cones(hexes[centre], apex, split[face_of[centre]])
-    lookup = dict(zip(map(tuple, face_keys(hexes[:, _FACES].reshape(-1, 4)).tolist()),
-                      split[face_of].ravel().tolist()))
+        cells += _cones(hexes[centre], apex, split[centre])
     boundaries = {}
-    for name, faces in quads.items():
-        cut = np.array([lookup.get(tuple(key), False) for key in face_keys(faces).tolist()],
-                       dtype=bool)
-        parts = [_two_triangles(faces[cut]).reshape(-1, 3), faces[~cut]]
+    for name, cut in split_quads.items():
+        parts = [_two_triangles(quads[name][cut]).reshape(-1, 3), quads[name][~cut]]
         boundaries[name] = [part for part in parts if len(part)]
     return points, [(kind, conn) for kind, conn in cells if len(conn)], boundaries
 
 
-def _split_faces(hexes: np.ndarray, tetra: np.ndarray,
-                 wedge: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Number (n, 6) of each local face, and whether each face is cut in two triangles."""
-    keys = face_keys(hexes[:, _FACES].reshape(-1, 4))
-    _, face_of = np.unique(keys, axis=0, return_inverse=True)
-    face_of = face_of.reshape(-1, 6)
-    split = np.zeros(face_of.max() + 1, dtype=bool)
+def _split_faces(hexes: np.ndarray, quads: Mapping[str, np.ndarray], tetra: np.ndarray,
+                 wedge: np.ndarray) -> tuple[np.ndarray, dict[str, np.ndarray]]:
+    """Whether each local face (n, 6), and each quadrilateral of each name, is cut in two."""
+    tables = [hexes[:, _FACES].reshape(-1, 4), *quads.values()]
+    _, number = np.unique(face_keys(np.concatenate(tables)), axis=0, return_inverse=True)
+    parts = np.split(number.ravel(), np.cumsum([len(table) for table in tables])[:-1])
+    face_of = parts[0].reshape(-1, 6)
+    split = np.zeros(number.max() + 1, dtype=bool)
     split[face_of[tetra]] = True
-    split[face_of[wedge][:, _ENDS]] = True
-    return face_of, split
+    split[face_of[wedge][:, :2]] = True
+    return split[face_of], {name: split[part] for name, part in zip(quads, parts[1:])}
 
 
 def _cones(hexes: np.ndarray, apex: np.ndarray,
