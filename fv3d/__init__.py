@@ -41,18 +41,19 @@ from .results.diagnostics import BoundaryForce, MomentumBudget, force, momentum_
 from .results.files import write_history, write_readings, write_vtk
 from .results.force_budget import ForceBudget, force_budget
 from .results.pictures import picture, picture_readings
+from .signals import Estimate, dominant_frequency, lag, mean_value, strouhal_number
 
 __all__ = [
     "SIMPLE", "SIMPLEC", "Blended", "BoundaryError", "BoundaryForce", "ByAnisotropy", "Case",
-    "CaseError", "Central", "Classical", "Comparison", "DivergenceError", "Feedback", "FileError",
-    "Fluid", "ForceBudget", "ForceMonitor",
-    "Fv3dError", "Fv3dWarning", "Inlet", "LeastSquares", "Mesh", "MeshError", "MomentumBudget",
-    "Numerics", "OneSided", "Outcome", "Outlet", "PointMonitor", "ReadingError", "Readings", "Run",
-    "SecondOrderUpwind", "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided", "Uniform",
-    "Upwind", "Wall", "box", "build_mesh", "channel_with_block", "channel_with_cylinder",
-    "check_mesh", "compare", "force", "force_budget", "get_threads", "iterate", "moist_air",
-    "momentum_budget",
-    "nozzle", "observe", "picture", "picture_readings", "quality", "read_mesh", "read_readings",
-    "set_threads", "solve_steady", "solve_transient", "water", "write_history", "write_mesh",
+    "CaseError", "Central", "Classical", "Comparison", "DivergenceError", "Estimate",
+    "Feedback", "FileError", "Fluid", "ForceBudget", "ForceMonitor", "Fv3dError", "Fv3dWarning",
+    "Inlet", "LeastSquares", "Mesh", "MeshError", "MomentumBudget", "Numerics", "OneSided",
+    "Outcome", "Outlet", "PointMonitor", "ReadingError", "Readings", "Run", "SecondOrderUpwind",
+    "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided", "Uniform", "Upwind", "Wall",
+    "box", "build_mesh", "channel_with_block", "channel_with_cylinder", "check_mesh", "compare",
+    "dominant_frequency", "force", "force_budget", "get_threads", "iterate", "lag",
+    "mean_value", "moist_air", "momentum_budget", "nozzle", "observe", "picture",
+    "picture_readings", "quality", "read_mesh", "read_readings", "set_threads", "solve_steady",
+    "solve_transient", "strouhal_number", "water", "write_history", "write_mesh",
     "write_readings", "write_vtk",
 ]
