@@ -5,7 +5,7 @@ One step from level n to n+1, with ``c = 3/2`` (1 in the first step) and extrapo
 
     (c rho / dt) u* + A(F~) u* = (rho / dt)(2 u_n - u_{n-1} / 2) - grad p_n + rho f + deferred(u~)
     div (dt / (c rho)) grad p' = div U*,      u = u* - (dt / (c rho)) grad p'
-    p_{n+1} = p_n + p' - mu div u*
+    p_{n+1} = p_n + p' - mu div u*     (the last term reduced in very thin cells)
 
 The face flux ``U*`` is the time-consistent momentum interpolation of
 :mod:`fv3d.flow.equations`: the older levels' difference between face flux and interpolated velocity
@@ -130,8 +130,8 @@ class TimeStep:
         flux = corrected_flux(problem, flux, result.solution, inner, outer)
         moved = pressure_fields(problem, pressure + result.solution, guess.mass_flux[n:])
         velocity = velocity - d[:, None] * (moved.gradient - fields.gradient)
-        pressure = pressure + result.solution - problem.viscosity * imbalance / (
-            density * mesh.cell_volume)
+        pressure = pressure + result.solution - _viscous_share(problem, d) * (
+            problem.viscosity / density) * imbalance / mesh.cell_volume
         if problem.closed:
             pressure = pressure - np.average(pressure, weights=mesh.cell_volume)
         edge = boundary_velocity(problem, velocity, guess.gradient, flux[n:])
@@ -157,6 +157,19 @@ class TimeStep:
                 break
             change = change + sweeps(left)
         return change
+
+
+def _viscous_share(problem: Problem, d: np.ndarray) -> np.ndarray:
+    """(n_cells,) share of the viscous pressure term kept.
+
+    In cells much thinner than the diffusion length of a step the full term feeds on itself from
+    step to step; it is reduced there to what the time derivative can balance.
+    """
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    conductance = problem.face_viscosity * problem.orthogonal
+    total = (np.bincount(mesh.left, conductance, mesh.n_cells)
+             + np.bincount(mesh.right, conductance[:n], mesh.n_cells))
+    return 1.0 / (1.0 + d * total / mesh.cell_volume)
 
 
 def current_level(problem: Problem, state: State) -> Level:
