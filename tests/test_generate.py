@@ -10,7 +10,8 @@ import numpy as np
 import pytest
 
 from fv3d.errors import MeshError
-from fv3d.mesh.blocks import Block, join_blocks, to_tetra
+from fv3d.mesh.blocks import Block, join_blocks
+from fv3d.mesh.cut import to_tetra
 from fv3d.mesh.generate import box
 from fv3d.mesh.generate_channel import channel_with_block, channel_with_cylinder
 from fv3d.mesh.generate_nozzle import nozzle

@@ -309,3 +309,34 @@ def test_check_mesh_finds_open_and_empty_cells() -> None:
     with pytest.raises(MeshError, match="no positive volume") as caught:
         check_mesh(dataclasses.replace(mesh, cell_volume=volume))
     assert f"cell {mesh.file_index[5]} " in caught.value.where
+
+
+# ---- zones
+
+@pytest.mark.parametrize("renumber", [False, True])
+def test_zones_follow_the_numbering(renumber: bool) -> None:
+    points, cells, names = four_kinds()
+    zones = {"core": np.array([3, 0]), "tip": np.array([False, False, True, False])}
+    mesh = build_mesh(points, cells, names, zones=zones, renumber=renumber)
+    assert list(mesh.zones) == ["core", "tip"]
+    assert mesh.file_index[mesh.zones["tip"]].tolist() == [2]
+    assert sorted(mesh.file_index[mesh.zones["core"]].tolist()) == [0, 3]
+    assert np.all(np.diff(mesh.zones["core"]) > 0) and mesh.zones["core"].dtype == np.int32
+    assert not mesh.zones["core"].flags.writeable
+    with pytest.raises(TypeError):
+        mesh.zones["more"] = np.array([0])
+    volume = float(mesh.cell_volume[mesh.zones["tip"]].sum())
+    assert f"zone 'tip': 1 cells, {volume:.6g} m^3" in str(mesh)
+    assert "zones: core, tip" in repr(mesh)
+    assert not build_mesh(points, cells, names).zones
+
+
+@pytest.mark.parametrize("zone", [
+    {"a": np.array([0, 4])}, {"a": np.array([-1])}, {"a": np.array([], dtype=int)},
+    {"a": np.array([0.5])}, {"a": np.array([[0, 1]])}, {"a": np.array([True, False])},
+    {"": np.array([0])}, {"a": np.zeros(4, dtype=bool)}], ids=str)
+def test_bad_zones_are_refused(zone: dict[str, np.ndarray]) -> None:
+    points, cells, names = four_kinds()
+    with pytest.raises(MeshError, match="A zone must be") as caught:
+        build_mesh(points, cells, names, zones=zone)
+    assert caught.value.got and caught.value.remedy

@@ -115,12 +115,12 @@ def cut_hexes(points: np.ndarray, hexes: np.ndarray, quads: Mapping[str, np.ndar
                         got=f"{np.count_nonzero(stiff)} faces",
                         remedy="Put cells cut about their centre between whole and cut ones.")
     cells = [("hexahedron", hexes[~(tetra | wedge | centre)]),
-             ("wedge", to_wedges(hexes[wedge], source=source)),
-             ("tetra", to_tetra(hexes[tetra], {})[0])]
-    if np.any(centre):
-        apex = len(points) + np.arange(np.count_nonzero(centre))
-        points = np.concatenate([points, points[hexes[centre]].mean(axis=1)])
-        cells += _cones(hexes[centre], apex, split[centre])
+             ("wedge", to_wedges(hexes[wedge], source=source))]
+    apex = len(points) + np.arange(np.count_nonzero(centre))
+    points = np.concatenate([points, points[hexes[centre]].mean(axis=1)])
+    pyramids, tets = _cones(hexes[centre], apex, split[centre])
+    cells += [("pyramid", pyramids),
+              ("tetra", np.concatenate([to_tetra(hexes[tetra], {})[0], tets]))]
     boundaries = {}
     for name, cut in split_quads.items():
         parts = [_two_triangles(quads[name][cut]).reshape(-1, 3), quads[name][~cut]]
@@ -142,14 +142,14 @@ def _split_faces(hexes: np.ndarray, quads: Mapping[str, np.ndarray], tetra: np.n
 
 
 def _cones(hexes: np.ndarray, apex: np.ndarray,
-           split: np.ndarray) -> list[tuple[str, np.ndarray]]:
-    """Pyramids and tetrahedra from the centre of each hexahedron to its faces."""
+           split: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Pyramids (n, 5) and tetrahedra (m, 4) from the centre of each hexahedron to its faces."""
     faces = hexes[:, _FACES]                            # outward
     top = np.broadcast_to(apex[:, None], split.shape)
     whole, cut = faces[~split][:, ::-1], _two_triangles(faces[split])[..., ::-1]
     pyramids = np.concatenate([whole, top[~split][:, None]], axis=1)
     tips = np.repeat(top[split], 2)[:, None]
-    return [("pyramid", pyramids), ("tetra", np.concatenate([cut.reshape(-1, 3), tips], axis=1))]
+    return pyramids, np.concatenate([cut.reshape(-1, 3), tips], axis=1)
 
 
 def _two_triangles(quads: np.ndarray) -> np.ndarray:

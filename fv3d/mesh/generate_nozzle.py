@@ -14,12 +14,14 @@ from .mesh import Mesh
 
 _CORE = 0.45
 _BULGE = 0.14
+_Lines = Grading | np.ndarray | None
 
 
 def nozzle(sections: Sequence[tuple[float, float]], *, core: int = 4,
-           axial: Spacing | Sequence[tuple[int, Grading | None]] | None = None,
+           axial: Spacing | Sequence[tuple[int, _Lines]] | None = None,
            wall_share: float = 0.4, growth: float = 1.15, quadrants: int = 4,
-           equal_area: bool = False, refinement: int = 1, tetra: bool = False) -> Mesh:
+           equal_area: bool = False, refinement: int = 1, tetra: bool = False,
+           wedge: bool = False) -> Mesh:
     """Body of revolution about z, for instance pipe, cone, throat and a sudden expansion.
 
     The cross-section is a square with bulged sides inside a ring of hexahedra; behind a
@@ -52,6 +54,8 @@ def nozzle(sections: Sequence[tuple[float, float]], *, core: int = 4,
     tetra : bool
         Cut every hexahedron into six tetrahedra; good ones need axial cells not much longer
         than wide, and ``wall_share=1``.
+    wedge : bool
+        Cut every hexahedron into two wedges with their triangles across z.
 
     Returns
     -------
@@ -83,7 +87,7 @@ def nozzle(sections: Sequence[tuple[float, float]], *, core: int = 4,
             names["k_max"] = "outlet"
         edge = radius[step] / radius[step + 1] if part else None
         parts += _part_blocks(section, levels, outer, edge, names, quadrants)
-    return join_blocks(parts, tetra=tetra, source="nozzle")
+    return join_blocks(parts, tetra=tetra, wedge=wedge, source="nozzle")
 
 
 @dataclass(frozen=True)
@@ -167,14 +171,14 @@ def _swept(patch: np.ndarray, levels: np.ndarray, radius: np.ndarray, quadrant: 
 
 
 def _axial_nodes(z: np.ndarray, radius: np.ndarray,
-                 axial: Spacing | Sequence[tuple[int, Grading | None]] | None, first: int,
+                 axial: Spacing | Sequence[tuple[int, _Lines]] | None, first: int,
                  n_sections: int, step: int, refinement: int) -> np.ndarray:
     """Nodes along z through all sections of the stretch before or behind the step."""
     pieces = [z[:1]]
     for k in range(len(z) - 1):
         low, high = z[k], z[k + 1]
         if axial is None or isinstance(axial, Spacing):
-            grading: Grading | None = axial or _corner_spacing(low, high, radius[k:k + 2])
+            grading: _Lines = axial or _corner_spacing(low, high, radius[k:k + 2])
             assert isinstance(grading, Spacing)
             cells = grading.wanted_cells(low, high)
         else:
