@@ -1,7 +1,7 @@
 """The lagged feedback law, a reference for tests only: it is unstable above a critical gain.
 
-The strengths follow from the last iteration's misfit, ``a = K (H u - u*)``, and act as a given
-force.  Momentum relaxed by ``alpha`` answers ``u' = (1 - alpha - alpha q) u`` with
+The strengths ``a = K (H u - u*)`` of the velocity at the end of one momentum step act as a given
+force in the next.  Momentum relaxed by ``alpha`` answers ``u' = (1 - alpha - alpha q) u`` with
 ``q = density K volume / a_P``, so it is stable for ``q < (2 - alpha) / alpha`` and overshoots
 above ``(1 - alpha) / alpha`` (derived: Patankar's relaxation with the source on the old side).
 """
@@ -33,8 +33,8 @@ class Lagged:
 
     def correct(self, own: FeedbackState, problem: Problem, state: State, change: np.ndarray,
                 relax: Callable[..., Any]) -> tuple[FeedbackState, np.ndarray, float]:
-        computed = own.layout.sample(problem, state.velocity, state.boundary_velocity)
-        misfit = own.misfit(computed)
-        off = misfit - own.strength / own.gain
+        before = own.layout.sample(problem, state.velocity, state.boundary_velocity)
+        off = own.misfit(before) - own.strength / own.gain
+        misfit = own.misfit(before + own.layout.sample_change(problem, change))
         scale = max(float(np.abs(own.readings.component_value).max()), 1e-300)
         return replace(own, strength=own.gain * misfit), change, float(np.abs(off).max()) / scale

@@ -22,7 +22,7 @@ from typing import Any
 import numpy as np
 import scipy.sparse as sparse
 
-from ..errors import CaseError, ReadingError
+from ..errors import CaseError, ReadingError, as_number
 from ..flow.problem import Force, Problem, State, balanced_force_near
 from ..operators.interpolation import PointInterpolation, point_interpolation
 from .kernel import Gaussian, Kernel, Neighbourhood, SingleCell
@@ -63,11 +63,15 @@ class Feedback:
 
     def __post_init__(self) -> None:
         for name, value, low in (("gain", self.gain, 0.0), ("radius", self.radius, 1e-300)):
-            if value is not None and not (np.isfinite(value) and value >= low):
+            if value is not None and not low <= as_number(value) < np.inf:
                 raise CaseError(f"The {name} must be a finite number, not negative.",
                                 where=f"Feedback({name}=)", got=value,
                                 remedy="Leave it out for the default." if name == "gain" else
                                 "Give the width of the force [m], about the probe spacing.")
+        if not isinstance(self.readings, Readings):
+            raise ReadingError("Only readings can be fed.", where="Feedback(readings)",
+                               got=type(self.readings).__name__,
+                               remedy="Make them with read_readings(path or DataFrame).")
         fed = self.readings.velocity_only()
         if fed.n_components == 0:
             raise ReadingError("Only velocities can be fed, and there are none.",
