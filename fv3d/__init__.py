@@ -14,13 +14,13 @@ from .errors import (
     Outcome,
     ReadingError,
 )
-from .flow.boundary import Inlet, Outlet, Symmetry, Wall
+from .flow.boundary import Inlet, Outlet, Slip, Symmetry, Wall
 from .flow.fluid import Fluid, moist_air, water
 from .flow.monitors import ForceMonitor, PointMonitor
-from .flow.numerics import SIMPLE, SIMPLEC, Numerics
+from .flow.numerics import SIMPLE, SIMPLEC, GlobalStep, LocalStep, Numerics
 from .flow.problem import Case
 from .flow.run import Run
-from .flow.steady import iterate, solve_steady
+from .flow.steady import iterate, solve_pseudo_transient, solve_steady
 from .flow.transient import solve_transient
 from .measured.compare import Comparison, compare
 from .measured.feedback import Feedback
@@ -34,7 +34,7 @@ from .mesh.quality import check_mesh, quality
 from .mesh.read import read_mesh
 from .mesh.write import write_mesh
 from .operators.fluxes import Blended, Central, SecondOrderUpwind, Upwind
-from .operators.gradient import LeastSquares
+from .operators.gradient import GreenGauss, LeastSquares
 from .operators.kernels import get_threads, set_threads
 from .operators.linear import ByAnisotropy, Classical, SmoothedAggregation
 from .results.diagnostics import BoundaryForce, MomentumBudget, force, momentum_budget
@@ -47,13 +47,14 @@ __all__ = [
     "SIMPLE", "SIMPLEC", "Blended", "BoundaryError", "BoundaryForce", "ByAnisotropy", "Case",
     "CaseError", "Central", "Classical", "Comparison", "DivergenceError", "Estimate",
     "Feedback", "FileError", "Fluid", "ForceBudget", "ForceMonitor", "Fv3dError", "Fv3dWarning",
-    "Inlet", "LeastSquares", "Mesh", "MeshError", "MomentumBudget", "Numerics", "OneSided",
-    "Outcome", "Outlet", "PointMonitor", "ReadingError", "Readings", "Run", "SecondOrderUpwind",
-    "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided", "Uniform", "Upwind", "Wall",
-    "box", "build_mesh", "channel_with_block", "channel_with_cylinder", "check_mesh", "compare",
+    "GlobalStep", "GreenGauss", "Inlet", "LeastSquares", "LocalStep", "Mesh", "MeshError",
+    "MomentumBudget", "Numerics", "OneSided", "Outcome", "Outlet", "PointMonitor",
+    "ReadingError", "Readings", "Run", "SecondOrderUpwind", "Slip", "SmoothedAggregation",
+    "Spacing", "Symmetry", "TwoSided", "Uniform", "Upwind", "Wall", "box", "build_mesh",
+    "channel_with_block", "channel_with_cylinder", "check_mesh", "compare",
     "dominant_frequency", "force", "force_budget", "get_threads", "iterate", "lag",
     "mean_value", "moist_air", "momentum_budget", "nozzle", "observe", "picture",
-    "picture_readings", "quality", "read_mesh", "read_readings", "set_threads", "solve_steady",
-    "solve_transient", "strouhal_number", "water", "write_history", "write_mesh",
-    "write_readings", "write_vtk",
+    "picture_readings", "quality", "read_mesh", "read_readings", "set_threads",
+    "solve_pseudo_transient", "solve_steady", "solve_transient", "strouhal_number", "water",
+    "write_history", "write_mesh", "write_readings", "write_vtk",
 ]

@@ -19,6 +19,7 @@ from .equations import (
     momentum,
     pressure_fields,
 )
+from .numerics import GlobalStep, LocalStep
 from .problem import Force, Problem, State
 from .response import PressureResponse, pressure_response
 
@@ -32,6 +33,7 @@ class Record:
     ``momentum``: sum of |unrelaxed residual| over sum of |a u|, with the newest fluxes.
     ``mass``: sum of |imbalance| of the predicted fluxes over the reference flux.
     ``misfit``: largest relative misfit of the sources' own equations.
+    ``tracer``: one number that follows the velocity field, a sum with random signs.
     """
 
     iteration: int
@@ -40,6 +42,7 @@ class Record:
     misfit: float
     pressure_iterations: int
     time: float = float("nan")
+    tracer: float = 0.0
 
     @property
     def residual(self) -> float:
@@ -52,6 +55,10 @@ class Workspace:
     """What iterations share and may rebuild at any time."""
 
     response: PressureResponse
+    tracer: np.ndarray
+    pseudo_step: LocalStep | GlobalStep | None = None
+    first_residual: float = 0.0
+    residual: float = 0.0
     prepared: linear.Prepared | None = None
     best_iterations: int = 0
     setups: int = 0
@@ -77,9 +84,24 @@ class Sweeps:
         return x
 
 
-def make_workspace(problem: Problem) -> Workspace:
+def make_workspace(problem: Problem,
+                   pseudo_step: LocalStep | GlobalStep | None = None) -> Workspace:
     """Workspace of a problem, before the first iteration."""
-    return Workspace(pressure_response(problem))
+    signs = np.random.default_rng(0).choice(np.array([-1.0, 1.0]), (problem.mesh.n_cells, 3))
+    return Workspace(pressure_response(problem), signs, pseudo_step)
+
+
+def pseudo_inertia(problem: Problem, equation: Momentum, workspace: Workspace) -> np.ndarray:
+    """(n_cells,) mass over pseudo-time step [kg/s].
+
+    A relaxation factor a is the step whose inertia is ``(1 - a) / a`` times the diagonal.
+    """
+    alpha = problem.case.numerics.coupling.velocity_relaxation
+    if workspace.pseudo_step is None:
+        return (1.0 / alpha - 1.0) * equation.diagonal
+    mass = problem.case.fluid.density * problem.mesh.cell_volume
+    ratio = workspace.first_residual / max(workspace.residual, 1e-300)
+    return np.asarray(workspace.pseudo_step.inertia(equation.diagonal, mass, ratio))
 
 
 def total_force(problem: Problem, state: State) -> Force | None:
@@ -99,7 +121,7 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     Returns the new state and the record of the state it started from.
     """
     mesh, numerics = problem.mesh, problem.case.numerics
-    n, coupling = mesh.n_internal, numerics.coupling
+    n = mesh.n_internal
     edge_flux = state.mass_flux[n:]
     gradient = problem.velocity_gradient(state.velocity, state.boundary_velocity)
     edge = boundary_velocity(problem, state.velocity, gradient, edge_flux)
@@ -109,9 +131,9 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     push = momentum_push(problem, fields, force)
     residual = equation.rows.residual(state.velocity) + push
     scale = _momentum_scale(problem, equation, state.velocity, push, fields)
-    alpha = coupling.velocity_relaxation
+    inertia = pseudo_inertia(problem, equation, workspace)
     relaxed = equation.rows.block.copy()
-    relaxed[:, :3] += ((1.0 / alpha - 1.0) * equation.diagonal)[:, None]
+    relaxed[:, :3] += inertia[:, None]
     sweeps = Sweeps(problem.pattern, equation.rows.data, inverse_blocks(relaxed), numerics.sweeps)
     change = sweeps(residual)
     sources, misfit = [], 0.0
@@ -126,9 +148,12 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     flux = interpolated_flux(problem, velocity, gradient, edge, fields, force,
                              equation.diagonal, np.zeros(mesh.n_faces))
     record_mass = mass_residual(problem, flux, velocity, fields.cell)
-    state, effort = _correct_pressure(problem, state, flux, equation, gradient, workspace)
+    state, effort = _correct_pressure(problem, state, flux, equation, gradient, inertia, workspace)
+    tracer = float(np.einsum("ij,ij->", workspace.tracer, state.velocity))
     record = Record(state.iteration, float(np.abs(residual).sum() / scale), record_mass, misfit,
-                    effort)
+                    effort, tracer=tracer)
+    workspace.first_residual = workspace.first_residual or record.residual
+    workspace.residual = record.residual
     return replace(state, iteration=state.iteration + 1), record
 
 
@@ -141,10 +166,12 @@ def momentum_push(problem: Problem, fields: PressureFields, force: Force | None)
 
 
 def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, equation: Momentum,
-                      gradient: np.ndarray, workspace: Workspace) -> tuple[State, int]:
+                      gradient: np.ndarray, inertia: np.ndarray,
+                      workspace: Workspace) -> tuple[State, int]:
     mesh, numerics = problem.mesh, problem.case.numerics
     n, coupling = mesh.n_internal, numerics.coupling
-    d = mesh.cell_volume / coupling.correction_diagonal(equation.diagonal, equation.neighbours, 0.0)
+    d = mesh.cell_volume / coupling.correction_diagonal(equation.diagonal, equation.neighbours,
+                                                      inertia)
     matrix, inner, outer = correction_matrix(problem, d)
     result = solve_pressure(problem, workspace, matrix, -(mesh.outflow @ flux),
                             numerics.pressure_tolerance)

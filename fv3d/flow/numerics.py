@@ -36,7 +36,7 @@ class SIMPLE:
 
     def correction_diagonal(self, diagonal: Any, neighbours: Any, inertia: Any) -> Any:
         """Diagonal [kg/s] that turns a pressure correction into a velocity correction."""
-        return diagonal / self.velocity_relaxation + inertia
+        return diagonal + inertia
 
     @property
     def pressure_share(self) -> float:
@@ -58,7 +58,7 @@ class SIMPLEC:
 
     def correction_diagonal(self, diagonal: Any, neighbours: Any, inertia: Any) -> Any:
         """Diagonal [kg/s] that turns a pressure correction into a velocity correction."""
-        return diagonal / self.velocity_relaxation - neighbours + inertia
+        return diagonal - neighbours + inertia
 
     @property
     def pressure_share(self) -> float:
@@ -72,6 +72,76 @@ _METHODS = {  # what a method of each kind must have, and an example
     "gradient": ("weights", "LeastSquares()"),
     "multigrid": ("prolongations", "ByAnisotropy()"),
 }
+
+
+@dataclass(frozen=True)
+class LocalStep:
+    """Pseudo-time step of every cell from a Courant number: ``courant`` times mass over diagonal.
+
+    The same as a relaxation factor ``courant / (1 + courant)`` (Van Doormaal and Raithby, 1984).
+    ``ramp`` lets the step grow as the residual falls, to this power of their ratio (switched
+    evolution relaxation: Mulder, W. A. and Van Leer, B. 1985, J. Comput. Phys. 59, 232-246), up to
+    ``largest`` times the first step.
+
+    Raises
+    ------
+    CaseError
+        A number that is not positive, a negative ramp.
+    """
+
+    courant: float = 9.0
+    ramp: float = 0.0
+    largest: float = 10.0
+
+    def __post_init__(self) -> None:
+        _positive(self.courant, "LocalStep(courant=)")
+        _ramp(self.ramp, self.largest, "LocalStep")
+
+    def inertia(self, diagonal: Any, mass: Any, ratio: float) -> Any:
+        """Mass over pseudo-time step [kg/s]; ``ratio`` is first over present residual."""
+        return diagonal / (self.courant * _growth(self.ramp, self.largest, ratio))
+
+
+@dataclass(frozen=True)
+class GlobalStep:
+    """One pseudo-time step for all cells; ``size`` has the unit of a time but is none.
+
+    ``ramp`` and ``largest`` as in :class:`LocalStep`.
+
+    Raises
+    ------
+    CaseError
+        A number that is not positive, a negative ramp.
+    """
+
+    size: float
+    ramp: float = 0.0
+    largest: float = 10.0
+
+    def __post_init__(self) -> None:
+        _positive(self.size, "GlobalStep(size=)")
+        _ramp(self.ramp, self.largest, "GlobalStep")
+
+    def inertia(self, diagonal: Any, mass: Any, ratio: float) -> Any:
+        """Mass over pseudo-time step [kg/s]; ``ratio`` is first over present residual."""
+        return mass / (self.size * _growth(self.ramp, self.largest, ratio))
+
+
+def _positive(value: Any, where: str) -> None:
+    if not 0.0 < as_number(value) < float("inf"):
+        raise CaseError("A pseudo-time step must be positive.", where=where, got=value,
+                        remedy="Give 9.0 for a Courant number, say.")
+
+
+def _ramp(ramp: Any, largest: Any, where: str) -> None:
+    if not (as_number(ramp) >= 0.0 and as_number(largest) >= 1.0):
+        raise CaseError("A ramp is a power from 0, its limit a factor from 1.",
+                        where=f"{where}(ramp=, largest=)", got=(ramp, largest),
+                        remedy="Give ramp=1.0, largest=10.0, say.")
+
+
+def _growth(ramp: float, largest: float, ratio: float) -> float:
+    return float(min(max(ratio, 1.0) ** ramp, largest))
 
 
 @dataclass(frozen=True)

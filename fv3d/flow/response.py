@@ -47,7 +47,8 @@ class PressureResponse:
         """
         if not self.skewed:
             return coupling.pressure_share
-        return min(coupling.pressure_share, DAMPED / coupling.correction_diagonal(1.0, 1.0, 0.0))
+        return min(coupling.pressure_share, DAMPED / coupling.correction_diagonal(
+            1.0, 1.0, 1.0 / coupling.velocity_relaxation - 1.0))
 
     @property
     def fine_steps(self) -> tuple[float, ...]:

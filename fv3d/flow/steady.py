@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -13,10 +14,12 @@ from . import coupling
 from .coupling import Record, make_workspace
 from .loop import check_kind, drive
 from .monitors import Monitor
+from .numerics import GlobalStep, LocalStep
 from .problem import Case, Source, State, make_problem
 from .progress import Progress
 from .run import Run
 from .start import start_state
+from .watch import oscillating, repeating_period
 
 
 def iterate(case: Case, *, sources: Sequence[Source] = (),
@@ -77,14 +80,61 @@ def solve_steady(case: Case, *, tolerance: float, max_iterations: int,
     _check_limits(tolerance, max_iterations)
     check_kind(sources, ("start", "force", "correct"), "sources")
     check_kind(monitors, ("see",), "monitors")
-    problem = make_problem(case, tuple(sources))
-    workspace = make_workspace(problem)
-    state = start_state(problem, start, workspace)
+    return _iterate_to_end(case, tolerance, max_iterations, tuple(sources), start, name, monitors,
+                           progress, None)
+
+
+def solve_pseudo_transient(case: Case, *, tolerance: float, max_iterations: int,
+                           pseudo_step: LocalStep | GlobalStep, sources: Sequence[Source] = (),
+                           start: Any = None, name: str | None = None,
+                           monitors: Sequence[Monitor] = (), progress: bool = True) -> Run:
+    """Iterate to a steady solution with pseudo-time steps in place of relaxation factors.
+
+    The steps imitate time but are none: history and monitors count iterations.
+
+    Parameters
+    ----------
+    pseudo_step : LocalStep or GlobalStep
+        Takes the place of the coupling's velocity relaxation; with ``ramp`` it grows as the
+        residual falls.
+    case, tolerance, max_iterations, sources, start, name, monitors, progress
+        As in :func:`solve_steady`.
+
+    Returns
+    -------
+    Run
+
+    Raises
+    ------
+    CaseError, BoundaryError, DivergenceError
+        As :func:`solve_steady`; also where ``pseudo_step`` is no such object.
+    """
+    if not isinstance(pseudo_step, LocalStep | GlobalStep):
+        raise CaseError("A pseudo-transient run needs its step.", got=repr(pseudo_step),
+                        where="solve_pseudo_transient(pseudo_step=)",
+                        remedy="Give LocalStep(courant=9.0), or GlobalStep(size=0.01).")
+    _check_limits(tolerance, max_iterations)
+    check_kind(sources, ("start", "force", "correct"), "sources")
+    check_kind(monitors, ("see",), "monitors")
+    return _iterate_to_end(case, tolerance, max_iterations, tuple(sources), start, name, monitors,
+                           progress, pseudo_step)
+
+
+def _iterate_to_end(case: Case, tolerance: float, max_iterations: int,
+                    sources: tuple[Source, ...], start: Any, name: str | None,
+                    monitors: Sequence[Monitor], progress: bool,
+                    pseudo_step: LocalStep | GlobalStep | None) -> Run:
+    problem = make_problem(case, sources)
+    workspace = make_workspace(problem, pseudo_step)
+    state = replace(start_state(problem, start, workspace), time=float("nan"), older=None)
     name = name or ("guided" if sources else "plain")
 
     def stop(records: list[Record]) -> Outcome | None:
         if records[-1].residual <= tolerance:
             return errors.converged(len(records), tolerance)
+        period = repeating_period(records)
+        if period is not None:
+            return oscillating(period, records)
         if len(records) >= max_iterations:
             return errors.iteration_limit(len(records), records[-1].residual, tolerance)
         return None

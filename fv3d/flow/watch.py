@@ -1,0 +1,55 @@
+"""Does an iteration go round in circles?  Looks at records only, never at the fields."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from ..errors import Outcome
+from .coupling import Record
+
+LOOK_EVERY = 50     # iterations
+WINDOW = 240        # records looked at
+ALIKE = 0.85        # correlation with itself one period later
+STANDING = 0.7      # later residuals over earlier ones: below, the run still converges
+CYCLES = 3          # whole periods the window must hold
+
+
+def repeating_period(records: list[Record]) -> float | None:
+    """Period in iterations of a run whose residual stands while its field repeats, or None.
+
+    The field is followed by ``Record.tracer``, one number per iteration.
+    """
+    if len(records) < WINDOW or len(records) % LOOK_EVERY:
+        return None
+    window = records[-WINDOW:]
+    residual = np.log(np.maximum([r.residual for r in window], 1e-300))
+    half = WINDOW // 2
+    if residual[half:].mean() - residual[:half].mean() < np.log(STANDING):
+        return None
+    tracer = np.array([r.tracer for r in window])
+    grid = np.arange(WINDOW)
+    tracer = tracer - np.polynomial.Polynomial.fit(grid, tracer, 1)(grid)
+    power = float(np.einsum("i,i->", tracer, tracer))
+    if power == 0.0:
+        return None
+    longest = WINDOW // CYCLES
+    alike = np.array([np.corrcoef(tracer[:-k], tracer[k:])[0, 1] for k in range(1, longest + 1)])
+    below = np.flatnonzero(alike < 0.0)
+    if below.size == 0:
+        return None
+    peak = int(below[0] + np.argmax(alike[below[0]:]))
+    if alike[peak] < ALIKE or peak == longest - 1:
+        return None
+    left, middle, right = alike[peak - 1:peak + 2] if peak > 0 else (alike[0],) * 3
+    bend = left - 2 * middle + right
+    return float(peak + 1 + (0.5 * (left - right) / bend if bend else 0.0))
+
+
+def oscillating(period: float, records: list[Record]) -> Outcome:
+    """Outcome of an iteration that repeats itself."""
+    return Outcome(
+        "oscillating",
+        f"The residual stands at {records[-1].residual:.1e} and the field repeats itself every "
+        f"{period:.1f} iterations (iterations, no time).",
+        "Either the flow itself is unsteady, or the iteration makes it so: run solve_transient "
+        "from this run, or change the relaxation and see whether the period follows.", False)
