@@ -189,12 +189,8 @@ def _missing_cell(raw: meshio.Mesh) -> None:
     raw.cell_data["tag"][0] = raw.cell_data["tag"][0][1:]
 
 
-def _no_tags(raw: meshio.Mesh) -> None:
-    raw.cell_data = {}
-
-
-def _no_surface(raw: meshio.Mesh) -> None:
-    del raw.cells[1], raw.cell_data["tag"][1]
+def _collapsed(raw: meshio.Mesh) -> None:
+    raw.cells[0].data[1, 3] = raw.cells[0].data[1, 2]
 
 
 def _surface_only(raw: meshio.Mesh) -> None:
@@ -246,7 +242,7 @@ def _flat(raw: meshio.Mesh) -> None:
 @pytest.mark.parametrize("damage, words", [
     (_nan, "not finite"), (_inverted, "1 cell.* no positive volume"),
     (_duplicate_cell, "more than two cells"), (_missing_cell, "have no name|no face of any"),
-    (_no_tags, "No boundary has a name"), (_no_surface, "no surface elements"),
+    (_collapsed, "use a point twice"),
     (_surface_only, "no volume cells"), (_missing_face, "3 boundary face.* have no name"),
     (_two_names, "two names"), (_inner_face, "inside the domain"),
     (_foreign_face, "no face of any cell"), (_missing_point, "does not exist"),
@@ -301,8 +297,12 @@ def test_cut_off_and_damaged_files_end_in_our_error(tmp_path: Path, name: str,
     cut = tmp_path / f"cut{Path(name).suffix}"
     for share in np.linspace(0.02, 0.9, 12):
         cut.write_bytes(whole[:int(share * len(whole))])
-        with pytest.raises(MeshError):
-            read_mesh(cut)
+        try:                                # cut behind the elements of a format with sets,
+            mesh = read_mesh(cut)           # all names are lost but not the mesh
+        except MeshError:
+            continue
+        assert name.endswith(".inp") and mesh.cell_volume.sum() == pytest.approx(6.0)
+        assert all(boundary.startswith("surface") for boundary in mesh.boundaries)
     random = np.random.default_rng(7)
     for _ in range(12):
         damaged = bytearray(whole)
@@ -315,20 +315,22 @@ def test_cut_off_and_damaged_files_end_in_our_error(tmp_path: Path, name: str,
             assert error.where and error.remedy
 
 
-def test_second_order_and_plane_meshes_are_refused(tmp_path: Path, capsys: Any) -> None:
-    points = np.array([[0, 0, 0], [2, 0, 0], [0, 2, 0], [0, 0, 2], [1, 0, 0], [1, 1, 0],
-                       [0, 1, 0], [0, 0, 1], [1, 0, 1], [0, 1, 1.0]])
-    meshio.Mesh(points, [("tetra10", [list(range(10))])]).write(tmp_path / "second.vtu")
-    assert "tetra10" in str(_refused(tmp_path / "second.vtu", "cannot be used", capsys).got)
+def test_plane_meshes_and_other_elements_are_refused(tmp_path: Path, capsys: Any) -> None:
+    points = np.array([[0, 0, 0], [2, 0, 0], [0, 2, 0], [0, 0, 2.0]])
     meshio.Mesh(points[:3, :2], [("triangle", [[0, 1, 2]])]).write(tmp_path / "plane.mesh")
     _refused(tmp_path / "plane.mesh", "is plane|no volume cells", capsys)
+    meshio.Mesh(points, [("tetra", [[0, 1, 2, 3]]), ("polygon", [[0, 1, 2]])]).write(
+        tmp_path / "polygon.vtu")
+    error = _refused(tmp_path / "polygon.vtu", "cannot be used", capsys)
+    assert "polygon" in str(error.got)
 
 
 @pytest.mark.parametrize("options, words", [
     ({"scale": 0.0}, "scale"), ({"scale": np.nan}, "scale"), ({"scale": -1e-3}, "scale"),
     ({"names": {12: "inlet"}}, "no such boundary to rename"),
     ({"names": {"inflow": "inlet"}}, "no such boundary to rename"),
-    ({"names": {1: ""}}, "must be text"), ({"names": {1: 5}}, "must be text")])
+    ({"names": {1: ""}}, "must be text"), ({"names": {1: 5}}, "must be text"),
+    ({"names": {"zone 7": "screen", "zone 8": "x"}}, "no such boundary to rename")])
 def test_bad_options_are_refused(tmp_path: Path, capsys: Any, options: dict[str, Any],
                                  words: str) -> None:
     write_mesh(small(), tmp_path / "a.vtu")

@@ -268,7 +268,20 @@ def _check_blocks(points: np.ndarray, cells: list[tuple[str, np.ndarray]], sourc
             raise MeshError("A cell refers to a point that does not exist.", where=source,
                             got=f"point {bad} of {len(points)}",
                             remedy="The file is damaged: write the mesh again.")
+        _check_corners(points, kind, conn, source)
         _check_volumes(points, kind, conn, source)
+
+
+def _check_corners(points: np.ndarray, kind: str, conn: np.ndarray, source: str) -> None:
+    """Refuse collapsed cells, such as a hexahedron that stands for a wedge."""
+    row = np.sort(conn, axis=1)
+    bad = np.flatnonzero(np.any(row[:, 1:] == row[:, :-1], axis=1))
+    if bad.size:
+        cell = int(bad[0])
+        place = np.round(points[conn[cell]].mean(axis=0), 6).tolist()
+        raise MeshError(f"{bad.size} cell(s) use a point twice.",
+                        where=f"{source}, {kind} {cell} at {place}", got=conn[cell].tolist(),
+                        remedy="Export collapsed cells as wedges, pyramids or tetrahedra.")
 
 
 def _check_volumes(points: np.ndarray, kind: str, conn: np.ndarray, source: str) -> None:

@@ -58,6 +58,15 @@ def _hashes(keys: np.ndarray) -> np.ndarray:
     return total
 
 
+def match_faces(keys: np.ndarray, wanted: np.ndarray) -> np.ndarray:
+    """(m,) row of ``keys`` (n, 4) that equals each row of ``wanted`` (m, 4), -1 if none does."""
+    hashes = _hashes(keys)
+    order = np.argsort(hashes)
+    at = np.minimum(np.searchsorted(hashes, _hashes(wanted), sorter=order), len(keys) - 1)
+    rows = order[at]
+    return np.where(np.all(keys[rows] == wanted, axis=1), rows, -1)
+
+
 def pair_faces(faces: np.ndarray, points: np.ndarray, *,
                source: str) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     """Join the faces of the cells in pairs.
