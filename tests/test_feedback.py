@@ -26,7 +26,7 @@ LAWS: dict[str, Law] = {
 }
 MESHES: dict[str, Callable[[], fv3d.Mesh]] = {
     "hex": lambda: box((0, 0, 0), (2, 1, 1), cells=(12, 8, 8), skew=0.2),
-    "tet": lambda: box((0, 0, 0), (2, 1, 1), cells=(6, 4, 4), tetra=True, skew=0.1),
+    "tet": lambda: box((0, 0, 0), (2, 1, 1), cells=(7, 5, 5), tetra=True, skew=0.1),
 }
 PLACES = np.array([[0.6, 0.3, 0.4], [0.6, 0.7, 0.6], [1.2, 0.3, 0.65], [1.2, 0.62, 0.35],
                    [0.9, 0.5, 0.5], [1.6, 0.5, 0.5]])
@@ -98,11 +98,10 @@ def order_and_units_of_the_table_do_not_matter(law: Law, kind: str) -> None:
     scaled = frame.rename(columns={f"{a} [m]": f"{a} [mm]" for a in "xyz"})
     for axis in "xyz":
         scaled[f"{axis} [mm]"] *= 1e3
-    runs = [guided(kind, law(fv3d.Readings(f), gain=20.0), tolerance=1e-8)
-            for f in (frame, frame.sample(frac=1, random_state=3), scaled)]
-    for other in runs[1:]:
-        assert np.abs(other.velocity - runs[0].velocity).max() <= 1e-10
-        assert np.abs(other.pressure - runs[0].pressure).max() <= 1e-10
+    one, other = (guided(kind, law(fv3d.Readings(f), gain=20.0), tolerance=1e-8)
+                  for f in (frame, scaled.sample(frac=1, random_state=3)))
+    assert np.abs(other.velocity - one.velocity).max() <= 1e-10
+    assert np.abs(other.pressure - one.pressure).max() <= 1e-10
 
 
 def withheld_readings_change_nothing(law: Law, kind: str) -> None:
@@ -154,15 +153,29 @@ def test_contract(check: Any, law: Law, kind: str) -> None:
 
 @pytest.mark.parametrize("kind, law", [
     pytest.param("hex", LAWS["kernel"], marks=pytest.mark.xfail(
-        reason="71 iterations, plain 57: a kernel's pressure answers one iteration late")),
+        reason="71 iterations, plain 57 with SIMPLEC 0.9: strengths and pressure are corrected in "
+               "turn, which converges slowly where most of a kernel's force is irrotational")),
     ("tet", LAWS["kernel"]), ("hex", LAWS["single cell"]),
     pytest.param("tet", LAWS["single cell"], marks=pytest.mark.xfail(
-        reason="158 iterations, plain 76, on cells of a quarter of the duct"))])
+        reason="139 iterations, plain 91; on 4, 5 and 6 cells across the duct 2.1, 1.5 and 1.0 "
+               "times the plain run's: forces of few, badly resolved cells"))])
 def test_iterations_stay_near_those_of_the_plain_run(law: Law, kind: str) -> None:
     bare = len(plain(kind).history["mass"])
     count = [len(guided(kind, law(readings_off(kind), gain=gain)).history["mass"])
              for gain in (1.0, 1e2, 1e4, 1e6)]
     assert max(count) <= 1.2 * bare, (count, bare)
+
+
+@pytest.mark.xfail(raises=fv3d.DivergenceError, reason=(
+    "the divergence-free part of one of these single-cell forces moves its own reading backwards "
+    "(eigenvalue -0.4 of the projected kernels at the readings)"))
+def test_single_cells_on_four_skewed_tetrahedra_across_the_duct() -> None:
+    """Too coarse a mesh for the law; its instability is not excused by that."""
+    mesh = box((0, 0, 0), (2, 1, 1), cells=(6, 4, 4), tetra=True, skew=0.1)
+    case = duct(mesh, numerics=fv3d.Numerics(coupling=fv3d.SIMPLEC(velocity_relaxation=0.5)))
+    velocity = solved(case, tolerance=1e-4).sample(PLACES).velocity + OFF
+    solved(case, tolerance=1e-4, sources=[LAWS["single cell"](
+        fv3d.Readings(table(PLACES, velocity)), gain=1e4)])
 
 
 METHODS = [fv3d.SIMPLEC(velocity_relaxation=a) for a in (0.5, 0.7, 0.9)] + \
