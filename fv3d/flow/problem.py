@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import warnings
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from typing import Any, Protocol
@@ -214,6 +215,7 @@ def make_problem(case: Case, sources: tuple[Source, ...] = ()) -> Problem:
     known = BoundaryKnowledge(table.pressure_given, table.pressure_flat)
     fixed_flux = case.fluid.density * np.einsum("ij,ij->i", table.fixed, mesh.face_area[inside:])
     closed = not bool(table.pressure_given.any())
+    _warn_of_suction(case, fixed_flux, closed)
     if closed:
         fixed_flux = _balanced_flux(mesh, table, fixed_flux)
     cell_force = body_force_cells(case)
@@ -224,13 +226,23 @@ def make_problem(case: Case, sources: tuple[Source, ...] = ()) -> Problem:
                    fixed_flux, closed, sources)
 
 
+def _warn_of_suction(case: Case, flux: np.ndarray, closed: bool) -> None:
+    """Say it where fluid leaves through an inlet though there is an outlet: often a wrong sign."""
+    mesh = case.mesh
+    for name, faces in mesh.boundaries.items():
+        part = flux[faces.start - mesh.n_internal:faces.stop - mesh.n_internal]
+        if not closed and part.sum() > 0.5 * np.abs(part).sum() > 0.0:
+            warnings.warn(f"The velocity given on '{name}' points out of the domain: "
+                          f"{part.sum():.3g} kg/s leave there. Check its sign, unless suction is "
+                          "meant.", Fv3dWarning, stacklevel=2)
+
+
 def _balanced_flux(mesh: Mesh, table: BoundaryTable, flux: np.ndarray) -> np.ndarray:
     """Given fluxes of a domain without outlet, made to cancel to rounding.
 
     A velocity *function* carries its own flux only to the order of the mesh: an imbalance below
     1 % is spread over these faces; anything else is an error.
     """
-    import warnings
     net, gross = float(flux.sum()), float(np.abs(flux).sum())
     if gross == 0.0 or abs(net) <= 1e-10 * gross:
         return flux

@@ -252,8 +252,8 @@ def compare(runs: Sequence[Any] | Any, withheld: Readings, *,
     Raises
     ------
     ReadingError
-        No withheld value at all, a fed reading without value, or fed and withheld share
-        a place.
+        No withheld value at all, a fed reading without value, or a withheld reading at the
+        place of one that was fed, here or to one of the runs.
     """
     listed = list(runs) if isinstance(runs, Sequence) else [runs]
     judged = ~np.isnan(withheld.component_value)
@@ -264,6 +264,9 @@ def compare(runs: Sequence[Any] | Any, withheld: Readings, *,
     computed: dict[str, np.ndarray] = {}
     for run in listed:
         computed[_free_name(str(run.name), computed)] = observe(run, withheld)
+        for source in getattr(getattr(run, "problem", None), "sources", ()):
+            if isinstance(getattr(source, "readings", None), Readings):
+                _check_fed(source.readings, withheld)
     if fed is not None:
         _check_fed(fed, withheld)
         for name, estimator in COMPETITORS:

@@ -47,7 +47,8 @@ class Feedback:
         reading (the corrected volume then shrinks with the cell).
     gain : float or None
         Rate at which a reading relaxes [1/s]; None: 5 times the local speed over the radius
-        (the cell size without radius). Zero leaves the run as it is, bit for bit.
+        (the cell size without radius), the local speed being the larger of the measured one and
+        that of the start field. Zero leaves the run as it is, bit for bit.
 
     Raises
     ------
@@ -102,7 +103,22 @@ class Feedback:
         if isinstance(earlier, FeedbackState) and len(earlier.strength) == len(strength):
             strength = earlier.strength
         return FeedbackState(fed, layout, gain, strength, linearised_direction(fed, velocity),
-                             local_speed(fed, velocity))
+                             local_speed(fed, velocity), self._advice(problem, layout))
+
+    def _advice(self, problem: Problem, layout: Layout) -> tuple[str, ...]:
+        """What to say of a radius that fits neither the cells nor the domain."""
+        if self.radius is None:
+            return ()
+        mesh = problem.mesh
+        cell = float(np.cbrt(mesh.cell_volume[layout.to_points.home]).max())
+        thinnest = float(np.ptp(mesh.points, axis=0).min())
+        if self.radius < 0.5 * cell:
+            return (f"the radius is small beside the cells of {cell:.2g} m: the force acts over "
+                    "a cell, as with radius=None",)
+        if self.radius > 0.5 * thinnest and mesh.n_cells > 1:
+            return (f"the radius is more than half of the domain's least extent of "
+                    f"{thinnest:.2g} m: readings are not told apart across it",)
+        return ()
 
     def _gains(self, problem: Problem, fed: Readings, layout: Layout,
                velocity: np.ndarray) -> np.ndarray:
@@ -157,6 +173,10 @@ class Feedback:
         if share < 0.3 and gain.any():
             lines.append("           the fed readings are met far closer than their uncertainty: "
                          "a lower gain would not fit their noise")
+        if share > 3.0:
+            lines.append("           the fed readings are NOT met: they contradict each other, "
+                         "lie on a wall or in other units, or the gain is low")
+        lines += [f"           {sentence}" for sentence in own.advice]
         if self.radius is not None and gain.any():
             bite = gain * self.radius / own.speed[own.readings.component_place]
             if bite.min() < BITES_FROM:
@@ -238,7 +258,8 @@ class Response:
 class FeedbackState:
     """Strengths ``a`` (m,) [m/s^2] with what is needed to go on.
 
-    ``speed`` (n_places,) [m/s] is the local speed the default gain was made from.
+    ``speed`` (n_places,) [m/s] is the local speed the default gain was made from; ``advice`` goes
+    to the sheet.
     """
 
     readings: Readings
@@ -247,6 +268,7 @@ class FeedbackState:
     strength: np.ndarray
     direction: np.ndarray
     speed: np.ndarray
+    advice: tuple[str, ...] = ()
     response: Response | None = None
     count: int = 0
 

@@ -10,7 +10,7 @@ from ..flow.equations import surface_gradient
 from ..flow.run import Run
 from .diagnostics import force, net_artificial_force
 
-USABLE_BELOW = 0.10  # net artificial force over the body's force (common practice, no source)
+USABLE_BELOW = 0.10  # share of the body's force and of the dissipation (our choice, no source)
 
 
 @dataclass(frozen=True, eq=False)
@@ -20,7 +20,9 @@ class ForceBudget:
     Attributes
     ----------
     net : (3,) net force on the fluid without the irrotational part [N]
-    moment : (3,) its moment about ``centre`` [N m]
+    whole : (3,) net force with it [N]; in a duct the net streamwise force is all irrotational
+    moment : (3,) moment of the part that moves fluid about ``centre`` [N m]
+    centre : (3,) [m]
     power : work done on the fluid per time [W]
     dissipation : viscous dissipation of the whole flow [W], for comparison
     volume_share : share of the domain's volume that holds 90 % of the force
@@ -30,7 +32,9 @@ class ForceBudget:
     """
 
     net: np.ndarray
+    whole: np.ndarray
     moment: np.ndarray
+    centre: np.ndarray
     power: float
     dissipation: float
     volume_share: float
@@ -40,30 +44,45 @@ class ForceBudget:
 
     @property
     def over_body(self) -> float:
-        """Net artificial force over the force on the body; nan without a body."""
+        """Larger of both net forces over the force on the body; nan without a body."""
         size = float(np.linalg.norm(self.body_force))
-        return float(np.linalg.norm(self.net)) / size if size > 0 else float("nan")
+        largest = max(float(np.linalg.norm(self.net)), float(np.linalg.norm(self.whole)))
+        return largest / size if size > 0 else float("nan")
+
+    @property
+    def over_dissipation(self) -> float:
+        """Magnitude of the power over the flow's own dissipation."""
+        return abs(self.power) / max(self.dissipation, 1e-300)
 
     @property
     def usable(self) -> bool:
-        """Whether forces of this run can be used: the artificial one is small beside them."""
-        return not self.over_body > USABLE_BELOW
+        """Whether forces of this run can be used.
+
+        The net artificial force, with or without its irrotational part, must stay below a tenth of
+        the body's force, and its power below a tenth of the flow's dissipation.
+        """
+        return not (self.over_body > USABLE_BELOW or self.over_dissipation > USABLE_BELOW)
 
     def __str__(self) -> str:
+        if not self.power and not np.any(self.whole):
+            return "artificial force\n  none: a plain run"
+
         def row(vector: np.ndarray) -> str:
             return " ".join(f"{value:11.4g}" for value in vector)
-        lines = ["artificial force",
-                 f"  net         {row(self.net)}  N",
-                 f"  moment      {row(self.moment)}  N m",
-                 f"  power       {self.power:.4g} W, "
-                 f"{self.power / max(self.dissipation, 1e-300):.2%} of the flow's dissipation of "
-                 f"{self.dissipation:.4g} W",
-                 f"  where       90 % of it in {self.volume_share:.2%} of the volume",
-                 f"  kind        {self.solenoidal_share:.0%} moves fluid, the rest only pressure"]
+
+        about = ", ".join(f"{value:g}" for value in self.centre)
+        lines = ["artificial force on the fluid  x, y, z",
+                 f"  net         {row(self.net)}  N, the part that moves fluid",
+                 f"  whole       {row(self.whole)}  N, with the part that only loads the pressure",
+                 f"  moment      {row(self.moment)}  N m about ({about}) m",
+                 f"  power       {self.power:.4g} W, {self.over_dissipation:.2%} of the flow's "
+                 f"dissipation of {self.dissipation:.4g} W",
+                 f"  where       90% of it in {self.volume_share:.2%} of the volume",
+                 f"  kind        {self.solenoidal_share:.0%} of its square moves fluid"]
         if self.body:
             verdict = "forces usable" if self.usable else \
-                "FORCES NOT USABLE: the artificial force is too large a part of them"
-            lines.append(f"  beside      {self.over_body:.2%} of the force on '{self.body}': "
+                "FORCES NOT USABLE: the artificial force is too large beside them"
+            lines.append(f"  verdict     {self.over_body:.2%} of the force on '{self.body}': "
                          f"{verdict}")
         return "\n".join(lines)
 
@@ -100,10 +119,12 @@ def force_budget(run: Run, body: str = "", *,
     arm = mesh.cell_centre - np.asarray(centre)
     moment = density * np.einsum("ci,c->i", np.cross(arm, moving), volume)
     power = density * float(np.einsum("ci,ci,c->", moving, run.velocity, volume))
+    raw = density * np.einsum("ci,c->i", run.artificial_force, volume)
     whole = float(np.einsum("ci,ci,c->", run.artificial_force, run.artificial_force, volume))
     part = float(np.einsum("ci,ci,c->", moving, moving, volume))
-    return ForceBudget(net_artificial_force(run), moment, power, _dissipation(run),
-                       _volume_share(run), part / whole if whole > 0 else 0.0, body,
+    return ForceBudget(net_artificial_force(run), raw, moment, np.asarray(centre, dtype=float),
+                       power, _dissipation(run), _volume_share(run),
+                       part / whole if whole > 0 else 0.0, body,
                        force(run, body).total if body else np.zeros(3))
 
 
