@@ -131,10 +131,12 @@ def test_skew_keeps_the_sides_and_is_repeatable() -> None:
 @pytest.mark.parametrize("bad", [
     {"cells": (2, 0, 2)}, {"cells": (2, 2, 2), "names": {"top": "lid"}},
     {"cells": (2, 2, 2), "skew": 0.5}, {"cells": (2, 2, 2), "skew": -0.1},
+    {"cells": (2, 2)}, {"cells": 4}, {"cells": (2, 2, 2), "grading": (None, None)},
+    {"cells": (2, 2, 2), "upper": (1, 1)}, {"cells": (2, 2, "many")},
     {"cells": (2, 2, 2), "grading": (np.linspace(0, 2, 3), None, None)}])
 def test_bad_boxes_are_refused(bad: dict[str, Any]) -> None:
     with pytest.raises(MeshError):
-        box((0, 0, 0), (1, 1, 1), **bad)
+        box(**{"lower": (0, 0, 0), "upper": (1, 1, 1), **bad})
 
 
 # ---- tetrahedra

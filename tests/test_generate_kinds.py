@@ -11,10 +11,10 @@ import pytest
 
 from fv3d.errors import MeshError
 from fv3d.mesh.cut import cut_hexes, to_wedges
-from fv3d.mesh.generate import box, mixed_box, pyramid_box, wedge_box
+from fv3d.mesh.generate import box, mixed_box, pyramid_box, skewed, wedge_box
 from fv3d.mesh.generate_duct import backward_step, pipe
 from fv3d.mesh.grading import OneSided, TwoSided
-from fv3d.mesh.mesh import Mesh
+from fv3d.mesh.mesh import Mesh, build_mesh
 from fv3d.mesh.quality import check_mesh, quality
 
 BOXES: dict[str, Callable[..., Mesh]] = {"hexahedra": box, "wedges": wedge_box,
@@ -234,3 +234,36 @@ def test_bad_ducts_are_refused(bad: Callable[[], Mesh]) -> None:
     with pytest.raises(MeshError) as caught:
         bad()
     assert caught.value.where and caught.value.remedy
+
+
+# ---- skew of any mesh
+
+@pytest.mark.parametrize("mesh", [pipe(**PIPE, wedge=True), backward_step(**STEP, layers=3),
+                                  mixed_box((0, 0, 0), (1, 1, 1), cells=(5, 4, 4))],
+                         ids=["pipe", "step", "mixed"])
+def test_skew_moves_inner_points_only(mesh: Mesh) -> None:
+    mesh = build_mesh(mesh.points, [(kind, conn) for kind, conn, _ in mesh.cell_blocks],
+                      {"all": [part for part in (
+                          mesh.face_points[mesh.n_internal:][:, :width][chosen] for width, chosen in
+                          ((3, mesh.face_points[mesh.n_internal:, 3] < 0),
+                           (4, mesh.face_points[mesh.n_internal:, 3] >= 0)))]},
+                      zones={"half": np.arange(mesh.n_cells // 2)})
+    other, same = skewed(mesh, 0.15, seed=3), skewed(mesh, 0.15, seed=3)
+    np.testing.assert_array_equal(other.points, same.points)
+    assert_sound(other, mesh.cell_volume.sum())
+    outer = mesh.face_points[mesh.n_internal:]
+    fixed = np.zeros(len(mesh.points), dtype=bool)
+    fixed[outer[outer >= 0]] = True
+    moved = np.any(other.points != mesh.points, axis=1)
+    np.testing.assert_array_equal(moved, ~fixed)
+    np.testing.assert_array_equal(other.left, mesh.left)
+    np.testing.assert_array_equal(other.zones["half"], mesh.zones["half"])
+    assert quality(other).non_orthogonality.mean() > quality(mesh).non_orthogonality.mean() + 1
+    assert np.abs(other.points - mesh.points).max() <= 0.15 * 0.25
+    np.testing.assert_array_equal(skewed(mesh, 0.0).cell_volume, mesh.cell_volume)
+
+
+@pytest.mark.parametrize("share", [-0.1, 0.5, float("nan")])
+def test_bad_shares_are_refused(share: float) -> None:
+    with pytest.raises(MeshError, match="out of range"):
+        skewed(box((0, 0, 0), (1, 1, 1), cells=(3, 3, 3)), share)

@@ -229,6 +229,22 @@ def _broken(which: str) -> tuple[np.ndarray, list, dict]:
         cells[0] = ("hexahedron", np.array([[0, 1, 2, 3, 4, 5, 6, 99]]))
     elif which == "unknown kind":
         cells[0] = ("hexahedron", np.array([[0, 1, 2, 3, 4, 5, 6]]))
+    elif which == "text":
+        points = [["a", "b", "c"]]
+    elif which == "fractions":
+        cells[2] = ("tetra", np.array([[5.0, 6.0, 8.0, 9.5]]))
+    elif which == "twice":
+        cells[0] = ("hexahedron", np.array([[0, 1, 2, 2, 4, 5, 6, 6]]))
+    elif which == "far":
+        points[4, 1] = 1e120
+    elif which == "five corners":
+        names["low"].append(np.array([[0, 1, 2, 3, 4]]))
+    elif which == "face of fractions":
+        names["low"] = [np.array([[0.0, 1.0, 2.0, 3.0]])]
+    elif which == "face beyond":
+        names["low"].append(np.array([[0, 1, 2, 99]]))
+    elif which == "nameless":
+        names[""] = names.pop("low")
     elif which == "no cells":
         cells = []
     return points, cells, names
@@ -240,7 +256,10 @@ def _broken(which: str) -> tuple[np.ndarray, list, dict]:
     ("three cells", "more than two cells"), ("no name", "have no name"),
     ("two names", "two names"), ("inside", "inside the domain"),
     ("no face", "no face of any cell"), ("missing point", "does not exist"),
-    ("unknown kind", "not of a known kind"), ("no cells", "no volume cells")])
+    ("unknown kind", "not of a known kind"), ("no cells", "no volume cells"),
+    ("text", "table of numbers"), ("fractions", "not of a known kind"), ("twice", "point twice"),
+    ("far", "too far away"), ("five corners", "is damaged"), ("face of fractions", "is damaged"),
+    ("face beyond", "does not exist"), ("nameless", "must be text")])
 def test_bad_meshes_are_refused(which: str, words: str) -> None:
     with pytest.raises(MeshError, match=words) as caught:
         build_mesh(*_broken(which))
@@ -304,6 +323,10 @@ def test_check_mesh_finds_open_and_empty_cells() -> None:
     area[3] *= 1.001
     with pytest.raises(MeshError, match="are not closed"):
         check_mesh(dataclasses.replace(mesh, face_area=area))
+    delta = mesh.delta.copy()
+    delta[2] *= -1.0
+    with pytest.raises(MeshError, match="wrong sides"):
+        check_mesh(dataclasses.replace(mesh, delta=delta))
     volume = mesh.cell_volume.copy()
     volume[5] = -1e-3
     with pytest.raises(MeshError, match="no positive volume") as caught:

@@ -189,6 +189,19 @@ def _missing_cell(raw: meshio.Mesh) -> None:
     raw.cell_data["tag"][0] = raw.cell_data["tag"][0][1:]
 
 
+def _far(raw: meshio.Mesh) -> None:
+    raw.points[5, 1] = 1e200
+
+
+def _negative(raw: meshio.Mesh) -> None:
+    raw.cells[0].data[0, 0] = -1
+
+
+def _folded(raw: meshio.Mesh) -> None:
+    """Two neighbouring points of a side exchanged: volumes stay positive."""
+    raw.points[[7, 8]] = raw.points[[8, 7]]
+
+
 def _collapsed(raw: meshio.Mesh) -> None:
     raw.cells[0].data[1, 3] = raw.cells[0].data[1, 2]
 
@@ -242,7 +255,8 @@ def _flat(raw: meshio.Mesh) -> None:
 @pytest.mark.parametrize("damage, words", [
     (_nan, "not finite"), (_inverted, "1 cell.* no positive volume"),
     (_duplicate_cell, "more than two cells"), (_missing_cell, "have no name|no face of any"),
-    (_collapsed, "use a point twice"),
+    (_collapsed, "use a point twice"), (_far, "too far away"), (_negative, "does not exist"),
+    (_folded, "wrong sides"),
     (_surface_only, "no volume cells"), (_missing_face, "3 boundary face.* have no name"),
     (_two_names, "two names"), (_inner_face, "inside the domain"),
     (_foreign_face, "no face of any cell"), (_missing_point, "does not exist"),
@@ -326,6 +340,7 @@ def test_plane_meshes_and_other_elements_are_refused(tmp_path: Path, capsys: Any
 
 
 @pytest.mark.parametrize("options, words", [
+    ({"scale": "mm"}, "scale"), ({"scale": np.inf}, "scale"),
     ({"scale": 0.0}, "scale"), ({"scale": np.nan}, "scale"), ({"scale": -1e-3}, "scale"),
     ({"names": {12: "inlet"}}, "no such boundary to rename"),
     ({"names": {"inflow": "inlet"}}, "no such boundary to rename"),

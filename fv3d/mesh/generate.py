@@ -111,6 +111,58 @@ def mixed_box(lower: Sequence[float], upper: Sequence[float], *, cells: tuple[in
     return build_mesh(points, blocks, boundaries, source="mixed_box")
 
 
+def skewed(mesh: Mesh, share: float, *, seed: int = 0) -> Mesh:
+    """The mesh with its inner points moved at random; those of the boundaries stay.
+
+    Parameters
+    ----------
+    mesh : Mesh
+        Of any kind of cells, for instance a pipe.
+    share : float
+        Largest move along each axis over the shortest edge at the point, below 0.5.  Flat
+        cells turn over sooner than cubes.
+    seed : int
+        Of the random moves.
+
+    Returns
+    -------
+    Mesh
+        The same cells in the same numbering, boundaries and zones.
+
+    Raises
+    ------
+    MeshError
+        The share is out of range, or a cell turns inside out.
+    """
+    if not 0.0 <= share < 0.5:
+        raise MeshError("The skew is out of range.", where="skewed", got=share,
+                        remedy="Give a share from 0 to below 0.5.")
+    shortest = np.full(len(mesh.points), np.inf)
+    for corner in range(4):
+        one, other = mesh.face_points[:, corner], mesh.face_points[:, (corner + 1) % 4]
+        one, other = (np.where(p < 0, mesh.face_points[:, 0], p) for p in (one, other))
+        length = np.linalg.norm(mesh.points[one] - mesh.points[other], axis=1)
+        length[length == 0] = np.inf                    # the fourth edge of triangles is none
+        np.minimum.at(shortest, one, length)
+        np.minimum.at(shortest, other, length)
+    outer = mesh.face_points[mesh.n_internal:]
+    shortest[outer[outer >= 0]] = 0.0
+    move = np.random.default_rng(seed).uniform(-share, share, mesh.points.shape)
+    return _with_points(mesh, mesh.points + move * shortest[:, None])
+
+
+def _with_points(mesh: Mesh, points: np.ndarray) -> Mesh:
+    boundaries = {}
+    for name, where in mesh.boundaries.items():
+        faces = mesh.face_points[where]
+        three = faces[:, 3] < 0
+        boundaries[name] = [faces[three, :3], faces[~three]]
+    return build_mesh(points, [(kind, conn) for kind, conn, _ in mesh.cell_blocks], boundaries,
+                      zones={name: mesh.file_index[cells] for name, cells in mesh.zones.items()},
+                      renumber=not np.array_equal(mesh.file_index, np.arange(mesh.n_cells)),
+                      source="skewed mesh")
+
+
 def _box_hexes(where: str, lower: Sequence[float], upper: Sequence[float],
                cells: tuple[int, int, int], grading: _Gradings, names: Mapping[str, str] | None,
                skew: float, warp: float, seed: int) -> _Hexes:
@@ -121,6 +173,11 @@ def _box_hexes(where: str, lower: Sequence[float], upper: Sequence[float],
             raise MeshError("A box has no such side.", where=f"{where}, names", got=side,
                             remedy=f"Use {', '.join(BOX_SIDES)}.")
         sides[side] = name
+    for what, given in (("lower", lower), ("upper", upper), ("cells", cells),
+                        ("grading", (None,) * 3 if grading is None else grading)):
+        if not hasattr(given, "__len__") or len(given) != 3:
+            raise MeshError("A box needs three entries, one per axis.", where=f"{where}, {what}",
+                            got=given, remedy="Give x, y and z.")
     if not 0.0 <= skew < 0.5:
         raise MeshError("The skew is out of range.", where=where, got=skew,
                         remedy="Give a share from 0 to below 0.5.")

@@ -16,16 +16,9 @@ import numpy as np
 import scipy.sparse as sparse
 
 from ..errors import MeshError
-from .geometry import face_and_cell_geometry, signed_volumes
-from .topology import (
-    CELL_KINDS,
-    POINTS_PER_CELL,
-    local_faces,
-    name_faces,
-    number_cells,
-    pair_faces,
-    reversed_faces,
-)
+from .checks import as_points, check_blocks, check_faces
+from .geometry import face_and_cell_geometry
+from .topology import local_faces, name_faces, number_cells, pair_faces, reversed_faces
 
 
 def _read_only(array: np.ndarray) -> np.ndarray:
@@ -195,9 +188,10 @@ def build_mesh(points: np.ndarray, cells: Sequence[tuple[str, np.ndarray]],
         or with two, a name on something that is no boundary face, a zone of cells that do
         not exist.
     """
-    points = np.array(points, dtype=np.float64, order="C")
+    points = as_points(points, source)
     cells = [(kind, np.array(conn)) for kind, conn in cells if len(conn)]
-    _check_blocks(points, cells, source)
+    check_blocks(points, cells, source)
+    check_faces(len(points), boundaries, source)
     cells = [(kind, conn.astype(np.int32)) for kind, conn in cells]
     faces, owner = local_faces(cells)
     keys, first, second = pair_faces(faces, points, source=source)
@@ -244,59 +238,6 @@ def _zone(name: str, chosen: np.ndarray, new_number: np.ndarray, source: str) ->
                         where=f"{source}, zone {name!r}", got=got,
                         remedy="Give cell indices, or a mask with one entry per cell.")
     return _read_only(np.unique(new_number[cells]))
-
-
-def _check_blocks(points: np.ndarray, cells: list[tuple[str, np.ndarray]], source: str) -> None:
-    if points.ndim != 2 or points.shape[1] != 3:
-        raise MeshError("Mesh points must be a table of three coordinates.", where=source,
-                        got=f"shape {points.shape}", remedy="Give an (n, 3) array.")
-    if not np.all(np.isfinite(points)):
-        bad = int(np.flatnonzero(~np.isfinite(points).all(axis=1))[0])
-        raise MeshError("A mesh point is not finite.", where=f"{source}, point {bad}",
-                        got=points[bad].tolist(), remedy="Write the mesh again from the mesher.")
-    if not cells:
-        raise MeshError("The mesh has no volume cells.", where=source,
-                        got="no tetra, hexahedron, wedge or pyramid",
-                        remedy="Export the volume mesh, not only its surface.")
-    for kind, conn in cells:
-        if conn.ndim != 2 or conn.shape[1] != POINTS_PER_CELL.get(kind, 0):
-            raise MeshError("A block of cells is not of a known kind.", where=source,
-                            got=f"{kind} with shape {conn.shape}",
-                            remedy=f"Use {', '.join(CELL_KINDS)}.")
-        if conn.min() < 0 or conn.max() >= len(points):
-            bad = int(conn.min() if conn.min() < 0 else conn.max())
-            raise MeshError("A cell refers to a point that does not exist.", where=source,
-                            got=f"point {bad} of {len(points)}",
-                            remedy="The file is damaged: write the mesh again.")
-        _check_corners(points, kind, conn, source)
-        _check_volumes(points, kind, conn, source)
-
-
-def _check_corners(points: np.ndarray, kind: str, conn: np.ndarray, source: str) -> None:
-    """Refuse collapsed cells, such as a hexahedron that stands for a wedge."""
-    row = np.sort(conn, axis=1)
-    bad = np.flatnonzero(np.any(row[:, 1:] == row[:, :-1], axis=1))
-    if bad.size:
-        cell = int(bad[0])
-        place = np.round(points[conn[cell]].mean(axis=0), 6).tolist()
-        raise MeshError(f"{bad.size} cell(s) use a point twice.",
-                        where=f"{source}, {kind} {cell} at {place}", got=conn[cell].tolist(),
-                        remedy="Export collapsed cells as wedges, pyramids or tetrahedra.")
-
-
-def _check_volumes(points: np.ndarray, kind: str, conn: np.ndarray, source: str) -> None:
-    """Refuse cells inside out and cells flat to rounding."""
-    volume = signed_volumes(points, kind, conn)
-    suspect = np.flatnonzero(~(volume > 1e-9 * np.max(np.abs(volume))))
-    extent = np.ptp(points[conn[suspect]], axis=1).max(axis=1)
-    bad = suspect[~(volume[suspect] > 1e-13 * extent ** 3)]
-    if bad.size:
-        cell = int(bad[0])
-        place = np.round(points[conn[cell]].mean(axis=0), 6).tolist()
-        raise MeshError(f"{bad.size} cell(s) have no positive volume.",
-                        where=f"{source}, {kind} {cell} at {place}",
-                        got=f"volume {volume[cell]:.3e} m^3",
-                        remedy="Mend the mesh there; check the point order of the export.")
 
 
 def _with_geometry(points: np.ndarray, blocks: tuple, face_points: np.ndarray,

@@ -74,7 +74,7 @@ def _aspect_ratio(mesh: Mesh) -> np.ndarray:
 
 
 def check_mesh(mesh: Mesh, *, source: str = "mesh") -> None:
-    """Refuse a mesh with cells that are not closed or have no positive volume.
+    """Refuse cells that are not closed, folded over or without positive volume.
 
     Parameters
     ----------
@@ -103,6 +103,13 @@ def check_mesh(mesh: Mesh, *, source: str = "mesh") -> None:
     if not gap[worst] < 1e-9:
         _refuse(mesh, worst, f"{np.count_nonzero(~(gap < 1e-9))} cell(s) are not closed.", source,
                 f"area vectors sum to {gap[worst]:.1e} of the surface")
+    inside = slice(0, mesh.n_internal)
+    across = np.einsum("ij,ij->i", mesh.delta[inside], mesh.face_area[inside])
+    folded = np.flatnonzero(~(across > 0))
+    if folded.size:
+        _refuse(mesh, int(mesh.left[folded[0]]),
+                f"{folded.size} face(s) have their cells on the wrong sides.", source,
+                f"face at {_place(mesh.face_centre[folded[0]])} turned by more than 90 degrees")
 
 
 def _refuse(mesh: Mesh, cell: int, what: str, source: str, got: str) -> None:

@@ -14,7 +14,7 @@ import numpy as np
 import scipy.sparse as sparse
 from scipy.sparse.csgraph import connected_components
 
-from ..errors import MeshError
+from ..errors import MeshError, as_number
 from .geometry import signed_volumes
 from .mesh import Mesh, build_mesh
 from .quality import check_mesh
@@ -83,8 +83,12 @@ def read_mesh(path: str | os.PathLike[str], *, scale: float = 1.0,
       got:    no file
       remedy: Check the path.
     """
+    if not isinstance(path, str | os.PathLike) or not isinstance(names or {}, Mapping):
+        raise MeshError("The arguments make no sense.", where="read_mesh",
+                        got=f"path {path!r}, names {names!r}",
+                        remedy="Give the path of a file and names={3: 'inlet', ...}.")
     path = Path(path)
-    if not (np.isfinite(scale) and scale > 0):
+    if not 0.0 < as_number(scale) < np.inf:
         raise MeshError("The scale must be a positive number.", where=str(path), got=scale,
                         remedy="Give the metres per unit of the file, 1e-3 for millimetres.")
     raw = _read_raw(path)
@@ -92,8 +96,8 @@ def read_mesh(path: str | os.PathLike[str], *, scale: float = 1.0,
     points = _checked_points(raw.points, source) * float(scale)
     names = names or {}
     elements = sorted_elements(raw.cells, source)
-    groups = cell_zones(raw, elements, source, wanted=names)
     found = named_surfaces(raw, elements, source)
+    groups = cell_zones(raw, elements, source, wanted=[key for key in names if key not in found])
     points, cells, found = _compact(points, [(kind, conn) for _, kind, conn in elements.cells],
                                     found, source)
     cells = [(kind, _outward(points, kind, conn)) for kind, conn in cells]

@@ -160,7 +160,12 @@ def _tags(raw: Any, sizes: list[tuple[int, int]]) -> dict[int, np.ndarray]:
             if (tags.shape == (size,) and tags.dtype.kind in "iuf"
                     and np.all(np.isfinite(tags)) and np.array_equal(tags, np.round(tags))):
                 found[position] = tags.astype(np.int64)
-        if found and (key not in _GROUP_KEYS or any(np.any(tags) for tags in found.values())):
+        every = np.concatenate([*found.values()]) if found else np.empty(0)
+        if key in _GROUP_KEYS and not np.any(every):
+            continue
+        if key not in _TAG_KEYS and len(every) > 6 and len(np.unique(every)) == len(every):
+            continue                                    # a numbering of the elements
+        if found:
             return found
     return {}
 
