@@ -25,13 +25,15 @@ from .flow.transient import solve_transient
 from .measured.compare import Comparison, compare
 from .measured.feedback import Feedback
 from .measured.readings import Readings, observe, read_readings
-from .mesh.generate import box
+from .mesh.generate import box, mixed_box, pyramid_box, skewed, wedge_box
 from .mesh.generate_channel import channel_with_block, channel_with_cylinder
+from .mesh.generate_duct import backward_step, pipe
 from .mesh.generate_nozzle import nozzle
 from .mesh.grading import OneSided, Spacing, TwoSided, Uniform
 from .mesh.mesh import Mesh, build_mesh
 from .mesh.quality import check_mesh, quality
 from .mesh.read import read_mesh
+from .mesh.surfaces import boundary_map
 from .mesh.write import write_mesh
 from .operators.fluxes import Blended, Central, SecondOrderUpwind, Upwind
 from .operators.gradient import GreenGauss, LeastSquares
@@ -50,11 +52,12 @@ __all__ = [
     "GlobalStep", "GreenGauss", "Inlet", "LeastSquares", "LocalStep", "Mesh", "MeshError",
     "MomentumBudget", "Numerics", "OneSided", "Outcome", "Outlet", "PointMonitor",
     "ReadingError", "Readings", "Run", "SecondOrderUpwind", "Slip", "SmoothedAggregation",
-    "Spacing", "Symmetry", "TwoSided", "Uniform", "Upwind", "Wall", "box", "build_mesh",
-    "channel_with_block", "channel_with_cylinder", "check_mesh", "compare",
-    "dominant_frequency", "force", "force_budget", "get_threads", "iterate", "lag",
-    "mean_value", "moist_air", "momentum_budget", "nozzle", "observe", "picture",
-    "picture_readings", "quality", "read_mesh", "read_readings", "set_threads",
-    "solve_pseudo_transient", "solve_steady", "solve_transient", "strouhal_number", "water",
-    "write_history", "write_mesh", "write_readings", "write_vtk",
+    "Spacing", "Symmetry", "TwoSided", "Uniform", "Upwind", "Wall", "backward_step",
+    "boundary_map", "box", "build_mesh", "channel_with_block", "channel_with_cylinder",
+    "check_mesh", "compare", "dominant_frequency", "force", "force_budget", "get_threads",
+    "iterate", "lag", "mean_value", "mixed_box", "moist_air", "momentum_budget", "nozzle",
+    "observe", "picture", "picture_readings", "pipe", "pyramid_box", "quality", "read_mesh",
+    "read_readings", "set_threads", "skewed", "solve_pseudo_transient", "solve_steady",
+    "solve_transient", "strouhal_number", "water", "wedge_box", "write_history", "write_mesh",
+    "write_readings", "write_vtk",
 ]

@@ -178,8 +178,16 @@ def momentum_imbalance(problem: Any) -> tuple[np.ndarray, float]:
     gained = equation.rows.residual(velocity)
     # the rows hold div(F u) - u div F: the imbalance of these random fluxes belongs to the cells
     own = (mesh.outflow @ flux)[:, None] * velocity
+    # what leaves through a side of given velocity carries the value from inside
+    out = flux[mesh.n_internal:] > 0
+    owner = mesh.left[mesh.n_internal:]
+    scheme = problem.case.numerics.convection
+    second = scheme.upwind_share + scheme.central_share
+    inner = velocity[owner] + second * np.einsum("fij,fj->fi", gradient[owner],
+                                                 mesh.delta[mesh.n_internal:])
+    carried = np.where(out[:, None], inner, edge)
     entering = (boundary_traction(problem, velocity, gradient, edge)
-                - flux[mesh.n_internal:, None] * edge)
+                - flux[mesh.n_internal:, None] * carried)
     return (gained - own).sum(axis=0) - entering.sum(axis=0), float(np.abs(gained).sum())
 
 

@@ -61,7 +61,16 @@ def _evaluate(value: Any, centre: np.ndarray, what: str) -> np.ndarray:
     """A vector, or a function of points (n, 3) -> (n, 3), at the face centres."""
     if callable(value):
         try:
-            result = np.asarray(value(centre.copy()), dtype=float)
+            given = value(centre.copy())
+        except Exception as error:
+            raise BoundaryError(f"The {what} function failed.", where=f"{what}, called with the "
+                                f"{len(centre)} face centres of the boundary, shape "
+                                f"{centre.shape} [m]",
+                                got=f"{type(error).__name__}: {error}",
+                                remedy="Mend the function; points[:, 0] is x, points[:, 1] y, "
+                                       "points[:, 2] z.") from error
+        try:
+            result = np.asarray(given, dtype=float)
         except (TypeError, ValueError):
             result = np.empty(0)
         if result.shape != centre.shape:
@@ -129,6 +138,11 @@ class Outlet:
 
     Where fluid enters, its tangential velocity is taken as zero and ``pressure`` as the total
     pressure; the share of such flux is reported.
+
+    Raises
+    ------
+    BoundaryError
+        The pressure is not one finite number.
     """
 
     pressure: float = 0.0
@@ -150,7 +164,14 @@ class Outlet:
 
 @dataclass(frozen=True)
 class Wall:
-    """No slip; ``velocity`` [m/s] (vector or function of points) of a wall moving in itself."""
+    """No slip; ``velocity`` [m/s] (vector or function of points) of a wall moving in itself.
+
+    Raises
+    ------
+    BoundaryError
+        The velocity is not a vector of three finite numbers nor a function; when the case is
+        made, also for a velocity that is not tangential to the wall.
+    """
 
     velocity: Any = (0.0, 0.0, 0.0)
 
@@ -174,7 +195,10 @@ class Wall:
 
 @dataclass(frozen=True)
 class Symmetry:
-    """Plane of symmetry: no flow and no shear across it."""
+    """Plane of symmetry: no flow and no shear across it.
+
+    For flat boundaries only; use :class:`Slip` on a curved one.
+    """
 
     def fill(self, table: BoundaryTable, rows: slice, centre: np.ndarray,
              normal: np.ndarray) -> None:

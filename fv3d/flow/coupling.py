@@ -275,7 +275,29 @@ def potential_start(problem: Problem, workspace: Workspace) -> State:
         flux = corrected_flux(problem, flux, potential.solution, inner, outer)
     velocity = velocity_from_flux(problem, flux)
     edge = boundary_velocity(problem, velocity, np.zeros((mesh.n_cells, 3, 3)), flux[n:])
-    return State(velocity, np.zeros(mesh.n_cells), flux, edge)
+    return State(velocity, start_pressure(problem), flux, edge)
+
+
+def start_pressure(problem: Problem) -> np.ndarray:
+    """(n_cells,) pressure that outlets and body force alone would cause [Pa].
+
+    A constant pressure level, or a force that pressure can balance, then costs no iteration.
+    """
+    mesh, n, table = problem.mesh, problem.mesh.n_internal, problem.table
+    given = np.where(table.pressure_given, table.pressure, 0.0)
+    if problem.force is None and not given.any():
+        return np.zeros(mesh.n_cells)
+    drop = np.zeros(mesh.n_faces) if problem.force is None \
+        else problem.case.fluid.density * problem.force.drop
+    outer = np.where(table.pressure_given, problem.orthogonal[n:], 0.0)
+    matrix = symmetric_matrix(mesh, problem.pattern, problem.orthogonal[:n], outer)
+    flux = np.concatenate([problem.orthogonal[:n] * drop[:n], outer * (drop[n:] - given)])
+    prepared = linear.prepare(matrix, singular=problem.closed)
+    pressure = linear.solve(prepared, -(mesh.outflow @ flux), matrix=matrix,
+                            tolerance=1e-10).solution
+    if problem.closed:
+        pressure -= np.average(pressure, weights=mesh.cell_volume)
+    return pressure
 
 
 def velocity_from_flux(problem: Problem, flux: np.ndarray) -> np.ndarray:

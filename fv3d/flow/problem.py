@@ -219,11 +219,27 @@ def make_problem(case: Case, sources: tuple[Source, ...] = ()) -> Problem:
     if closed:
         fixed_flux = _balanced_flux(mesh, table, fixed_flux)
     cell_force = body_force_cells(case)
+    _check_symmetry(case, table, cell_force)
     return Problem(case, table, assembly.pattern(mesh), assembly.orthogonal_factor(mesh), foot,
                    numerics.gradient.weights(mesh, BoundaryKnowledge.everywhere(mesh)),
                    numerics.gradient.weights(mesh, known), viscosity, face_viscosity, full,
                    None if cell_force is None else balanced_force(mesh, cell_force),
                    fixed_flux, closed, sources)
+
+
+def _check_symmetry(case: Case, table: BoundaryTable, cell_force: np.ndarray | None) -> None:
+    """A body force across a plane of symmetry is no symmetry."""
+    if cell_force is None:
+        return
+    mesh, n = case.mesh, case.mesh.n_internal
+    across = np.einsum("ij,ij->i", cell_force[mesh.left[n:]], mesh.face_normal[n:])
+    across = np.where(table.pressure_flat, np.abs(across), 0.0)
+    if across.max(initial=0.0) > 1e-6 * np.abs(cell_force).max(initial=0.0):
+        face = int(np.argmax(across))
+        raise BoundaryError("The body force points across a plane of symmetry.",
+                            where=f"boundary '{mesh.boundary_of_face(n + face)}'",
+                            got=f"{across[face]:.3g} m/s2 normal to it",
+                            remedy="Give that boundary Slip(), which carries the pressure.")
 
 
 def _warn_of_suction(case: Case, flux: np.ndarray, closed: bool) -> None:

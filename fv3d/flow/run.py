@@ -137,10 +137,15 @@ class Run:
 
 
 def reverse_flow_share(run: Run) -> float:
-    """Inward share of the flux through pressure boundaries."""
-    flux = run.state.mass_flux[run.mesh.n_internal:][run.problem.table.pressure_given]
-    total = float(np.abs(flux).sum())
-    return float(-np.minimum(flux, 0.0).sum() / total) if total > 0 else 0.0
+    """Share of the flux through pressure boundaries that returns through the same boundary."""
+    mesh, total, back = run.mesh, 0.0, 0.0
+    for faces in mesh.boundaries.values():
+        rows = slice(faces.start - mesh.n_internal, faces.stop - mesh.n_internal)
+        if run.problem.table.pressure_given[rows].any():
+            flux = run.mass_flux[faces]
+            total += float(np.abs(flux).sum())
+            back += float(min(np.maximum(flux, 0.0).sum(), -np.minimum(flux, 0.0).sum()))
+    return back / total if total > 0 else 0.0
 
 
 def renamed(run: Run, name: str) -> Run:

@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 
 from ..errors import CaseError
-from .coupling import Workspace, potential_start
+from .coupling import Workspace, potential_start, start_pressure
 from .equations import boundary_velocity
 from .problem import Problem, State
 
@@ -49,7 +49,7 @@ def _from_values(problem: Problem, start: Any) -> State:
         raise CaseError("The start must be a run, a finite vector or a function of points.",
                         where="start=", got=f"{type(start).__name__}, shape {value.shape}",
                         remedy="Give start=plain, start=(1.0, 0.0, 0.0) or leave it out.")
-    return _with_fluxes(problem, np.array(value), np.zeros(len(centre)))
+    return _with_fluxes(problem, np.array(value), start_pressure(problem))
 
 
 def _from_run(problem: Problem, run: Any) -> State:

@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+import warnings
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any, Protocol
 
 import numpy as np
 
-from ..errors import ReadingError
+from ..errors import Fv3dWarning, ReadingError, did_you_mean, expect_readings, expect_run
 from .quantities import COMPONENT, PRESSURE, SPEED
 from .readings import Readings, observe
 from .table import VALUES
@@ -198,10 +199,12 @@ class Comparison:
     def _total(self, competitor: str, unit: str, column: str) -> float:
         rows = self.totals[(self.totals.competitor == competitor) & (self.totals.unit == unit)]
         if len(rows) != 1:
+            names = self.totals.competitor.unique()
+            hint = "" if competitor in names else did_you_mean(competitor, names)
             raise ReadingError("The comparison holds no such total.", where="Comparison",
                                got=f"{competitor!r} in {unit!r}",
-                               remedy="Competitors: " + ", ".join(self.totals.competitor.unique())
-                                      + "; units: " + ", ".join(self.totals.unit.unique()) + ".")
+                               remedy="Competitors: " + ", ".join(names) + "; units: "
+                                      + ", ".join(self.totals.unit.unique()) + "." + hint)
         return float(rows[column].iloc[0])
 
     def __str__(self) -> str:
@@ -226,7 +229,15 @@ class Comparison:
                          f"{_figure(row.rms_std):>9}")
         if self.skipped:
             lines.append(f"{self.skipped} withheld component(s) without a value left out")
+        lines += self._uneven()
         return "\n".join(line.rstrip() for line in lines if line)
+
+    def _uneven(self) -> list[str]:
+        """A line for each total whose competitors were not judged at the same components."""
+        return [f"totals [{unit}] rest on unlike counts ({rows['count'].min()} to "
+                f"{rows['count'].max()}): compare them with care"
+                for unit, rows in self.totals.groupby("unit", sort=False)
+                if rows["count"].nunique() > 1]
 
 
 def _figure(number: float) -> str:
@@ -253,9 +264,21 @@ def compare(runs: Sequence[Any] | Any, withheld: Readings, *,
     ------
     ReadingError
         No withheld value at all, a fed reading without value, or a withheld reading at the
-        place of one that was fed, here or to one of the runs.
+        place of one that was fed, here or to one of the runs; no table of readings, or a
+        reading outside the mesh of a run; neither runs nor fed readings.
+    CaseError
+        Something among the runs that is no run.
     """
-    listed = list(runs) if isinstance(runs, Sequence) else [runs]
+    call = "compare([run, ...], withheld)"
+    listed = list(runs) if isinstance(runs, Sequence) and not isinstance(runs, str) else [runs]
+    for run in listed:
+        expect_run(run, call)
+    expect_readings(withheld, call)
+    if fed is not None:
+        expect_readings(fed, "compare(fed=)")
+    elif not listed:
+        raise ReadingError("There is nothing to judge.", where=call, got="no runs, no fed readings",
+                           remedy="Give at least one run, or fed=.")
     judged = ~np.isnan(withheld.component_value)
     if not judged.any():
         raise ReadingError("There is nothing to compare with.", where="compare(withheld)",
@@ -290,7 +313,10 @@ def _check_fed(fed: Readings, withheld: Readings) -> None:
               zip(fed.point.tolist(), np.nan_to_num(fed.time).tolist())}
     for name, point, time in zip(withheld.name, withheld.point.tolist(),
                                  np.nan_to_num(withheld.time).tolist()):
-        if (*point, time) in places and name in fed.name:
+        if (*point, time) in places and name not in fed.name:
+            warnings.warn(f"The withheld reading '{name}' lies at the place of a fed one: it is "
+                          "no independent evidence.", Fv3dWarning, stacklevel=3)
+        elif (*point, time) in places:
             raise ReadingError("A withheld reading is also fed.", where=f"compare, '{name}'",
                                got=f"the same place {point}",
                                remedy="Take both from readings.split(withheld=[...]).")

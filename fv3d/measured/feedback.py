@@ -23,14 +23,15 @@ import numpy as np
 import scipy.sparse as sparse
 
 from ..errors import CaseError, ReadingError, as_number
-from ..flow.problem import Force, Problem, State, balanced_force_near
-from ..operators.interpolation import PointInterpolation, point_interpolation
-from .kernel import Gaussian, Kernel, Neighbourhood, SingleCell
+from ..flow.problem import Force, Problem, State
+from .kernel import Gaussian, Kernel, SingleCell
+from .layout import Layout, Response, make_layout, sweep_response
 from .readings import Readings, linearised_direction, predict
 
 REFRESH_EARLY = (0, 2, 5, 10, 20)  # responses are renewed at these iterations,
 REFRESH_EVERY = 30                 # then at every multiple of this
-REACHES_FROM = 0.02                # least share of a kernel's largest force at its own reading
+TURNED_AT = (0, 1, 2, 10, 30, 60)  # iterations at which a speed reading's direction follows,
+TURNED_LEAST = 0.5                 # unless it has turned further than this cosine
 BITES_FROM = 3.0                   # gain * radius / speed above which passing fluid is corrected
 
 
@@ -99,11 +100,14 @@ class Feedback:
         layout = make_layout(problem, fed, self.kernel)
         velocity = layout.sample(problem, state.velocity, state.boundary_velocity)
         gain = self._gains(problem, fed, layout, velocity)
-        strength = np.zeros(fed.n_components)
-        if isinstance(earlier, FeedbackState) and len(earlier.strength) == len(strength):
-            strength = earlier.strength
-        return FeedbackState(fed, layout, gain, strength, linearised_direction(fed, velocity),
-                             local_speed(fed, velocity), self._advice(problem, layout))
+        begun = FeedbackState(fed, layout, gain, np.zeros(fed.n_components),
+                              linearised_direction(fed, velocity), local_speed(fed, velocity),
+                              self._advice(problem, layout))
+        if isinstance(earlier, FeedbackState) and len(earlier.strength) == fed.n_components:
+            begun = replace(begun, gain=earlier.gain, strength=earlier.strength,
+                            direction=earlier.direction, speed=earlier.speed,
+                            count=TURNED_AT[-1] + 1)
+        return begun
 
     def _advice(self, problem: Problem, layout: Layout) -> tuple[str, ...]:
         """What to say of a radius that fits neither the cells nor the domain."""
@@ -140,22 +144,23 @@ class Feedback:
         due = own.count in REFRESH_EARLY or own.count % REFRESH_EVERY == 0
         response = own.response
         if due or response is None:
-            response = _response(problem, own.layout, relax)
+            response = sweep_response(problem, own.layout, relax)
+        own = _turned(own, problem, state)
+        acting = active & (np.abs(own.direction).max(axis=1) > 0)
         slack = np.divide(own.strength, own.gain, out=np.zeros_like(own.gain), where=active)
         before = own.layout.sample(problem, state.velocity, state.boundary_velocity)
         misfit = np.where(active, own.misfit(before) - slack, 0.0)
         after = before + own.layout.sample_change(problem, change)
         error = np.where(active, own.misfit(after) - slack, 0.0)
-        own = replace(own, response=response,
-                      direction=linearised_direction(own.readings, after))
-        matrix = response.between(own)[np.ix_(active, active)]
-        matrix[np.diag_indices(len(matrix))] += 1.0 / own.gain[active]
+        matrix = response.between(own.spread())[np.ix_(acting, acting)]
+        matrix[np.diag_indices(len(matrix))] += 1.0 / own.gain[acting]
         step = np.zeros_like(own.strength)
-        step[active] = np.linalg.lstsq(matrix, error[active], rcond=1e-13)[0]
+        if acting.any():
+            step[acting] = np.linalg.lstsq(matrix, error[acting], rcond=1e-13)[0]
         change = change - response.apply(own.place_strength(step, sign=1.0))
         scale = max(float(np.abs(own.readings.component_value).max()),
                     float(np.linalg.norm(before, axis=1).max()), 1e-300)
-        own = replace(own, strength=own.strength + step, count=own.count + 1)
+        own = replace(own, strength=own.strength + step, response=response, count=own.count + 1)
         return own, change, float(np.abs(misfit).max()) / scale
 
     def describe(self, own: FeedbackState) -> list[str]:
@@ -185,73 +190,26 @@ class Feedback:
         return lines
 
 
+def _turned(own: FeedbackState, problem: Problem, state: State) -> FeedbackState:
+    """Directions of speed readings brought up to date, at a few iterations only.
+
+    A direction that followed the field in every iteration would turn the strength it has gathered
+    with it, and a speed well below the computed one would never be reached.
+    """
+    if own.count not in TURNED_AT:
+        return own
+    velocity = own.layout.sample(problem, state.velocity, state.boundary_velocity)
+    fresh = linearised_direction(own.readings, velocity)
+    still = np.abs(own.direction).max(axis=1) == 0
+    near = np.einsum("ij,ij->i", fresh, own.direction) > TURNED_LEAST
+    return replace(own, direction=np.where((still | near)[:, None], fresh, own.direction))
+
+
 def local_speed(readings: Readings, velocity: np.ndarray) -> np.ndarray:
     """(n_places,) larger of the measured and the computed speed [m/s], floored by their mean."""
     square = np.bincount(readings.component_place, readings.component_value ** 2, len(readings))
     speed = np.maximum(np.sqrt(square), np.linalg.norm(velocity, axis=1))
     return np.maximum(speed, max(0.1 * float(speed.mean()), 1e-300))
-
-
-@dataclass(frozen=True, eq=False)
-class Layout:
-    """Kernels of all readings on one mesh, three directions each.
-
-    ``cell`` (3 n_cells, 3 n_places) and ``drop`` (n_faces, 3 n_places) sparse, scaled so that the
-    interpolation of each kernel's own component at its reading is one.
-    """
-
-    to_points: PointInterpolation
-    edges: np.ndarray
-    cell: sparse.csr_matrix
-    drop: sparse.csr_matrix
-    regions: tuple[np.ndarray, ...]
-
-    def force(self, strength: np.ndarray) -> Force:
-        """Force of strengths (n_places, 3) [m/s^2]."""
-        flat = strength.ravel()
-        if not flat.any():
-            return Force(np.zeros((self.cell.shape[0] // 3, 3)), np.zeros(self.drop.shape[0]))
-        return Force((self.cell @ flat).reshape(-1, 3), self.drop @ flat)
-
-    def sample(self, problem: Problem, velocity: np.ndarray, edge: np.ndarray) -> np.ndarray:
-        """(n_places, 3) velocity at the readings [m/s]."""
-        return self.to_points(velocity, edge)
-
-    def sample_change(self, problem: Problem, change: np.ndarray) -> np.ndarray:
-        """(n_places, 3) velocity change at the readings, boundary values following the cells."""
-        edge = np.zeros((problem.mesh.n_boundary, 3))
-        edge[self.edges] = edge_change(problem, self.edges, change)
-        return self.to_points(change, edge)
-
-
-def edge_change(problem: Problem, rows: np.ndarray, change: np.ndarray) -> np.ndarray:
-    """(k, 3) change of the boundary velocity on some boundary faces."""
-    mesh, n = problem.mesh, problem.mesh.n_internal
-    normal, inner = mesh.face_normal[n + rows], change[mesh.left[n + rows]]
-    across = np.einsum("ij,ij->i", inner, normal)[:, None] * normal
-    table = problem.table
-    return (table.keep_tangential[rows, None] * (inner - across)
-            + table.keep_normal[rows, None] * across)
-
-
-@dataclass(frozen=True, eq=False)
-class Response:
-    """Answer of the momentum sweeps to a unit strength of each kernel.
-
-    ``velocity`` (3 n_cells, 3 n_places) sparse; ``at_places`` (3 n_places, 3 n_places).
-    """
-
-    velocity: sparse.csr_matrix
-    at_places: np.ndarray
-
-    def apply(self, strength: np.ndarray) -> np.ndarray:
-        """(n_cells, 3) velocity change for strengths (n_places, 3)."""
-        return np.asarray(self.velocity @ strength.ravel()).reshape(-1, 3)
-
-    def between(self, own: FeedbackState) -> np.ndarray:
-        """(m, m) response of each component to the strength of each."""
-        spread = own.spread()
-        return np.asarray(spread.T @ (spread.T @ self.at_places.T).T)
 
 
 @dataclass(frozen=True, eq=False)
@@ -290,121 +248,3 @@ class FeedbackState:
         columns = np.repeat(np.arange(m), 3)
         return sparse.csr_matrix((self.direction.ravel(), (rows.ravel(), columns)),
                                  shape=(3 * len(self.readings), m))
-
-
-def make_layout(problem: Problem, readings: Readings, kernel: Kernel, *,
-                layers: int = 4) -> Layout:
-    """Kernels of readings, balanced like the pressure gradient and scaled.
-
-    Raises
-    ------
-    ReadingError
-        A reading lies outside the mesh, on a wall or inlet, or where its own force does not reach.
-    """
-    mesh = problem.mesh
-    try:
-        to_points = point_interpolation(mesh, problem.velocity_gradient, readings.point,
-                                        where="readings", names=list(readings.name))
-    except CaseError as error:
-        raise ReadingError("A fed reading lies outside the mesh.", where=error.where,
-                           got=error.got, remedy=error.remedy) from None
-    _check_off_walls(problem, readings, to_points.home)
-    near = Neighbourhood.of(mesh)
-    edges = np.unique(to_points.edges.indices)
-    cells, drops, regions = [], [], []
-    for place in range(len(readings)):
-        where, value = kernel.shape(mesh, near, readings.point[place], int(to_points.home[place]))
-        at_cell, at_face = _columns(problem, to_points, edges, place, where, value, readings)
-        cells.append(at_cell)
-        drops.append(at_face)
-        regions.append(near.within(np.unique(at_cell.nonzero()[0] // 3), layers))
-    return Layout(to_points, edges, sparse.hstack(cells).tocsr(), sparse.hstack(drops).tocsr(),
-                  tuple(regions))
-
-
-def _columns(problem: Problem, to_points: PointInterpolation, edges: np.ndarray, place: int,
-             where: np.ndarray, value: np.ndarray,
-             readings: Readings) -> tuple[sparse.csc_matrix, sparse.csc_matrix]:
-    mesh = problem.mesh
-    columns, drops = [], []
-    for axis in range(3):
-        force = np.zeros((len(where), 3))
-        force[:, axis] = value
-        touched, push, faces, drop = balanced_force_near(mesh, where, force)
-        whole = np.zeros((mesh.n_cells, 3))
-        whole[touched] = push
-        edge = np.zeros((mesh.n_boundary, 3))
-        edge[edges] = edge_change(problem, edges, whole)
-        own = float((to_points.cells[[place]] @ whole + to_points.edges[[place]] @ edge)[0, axis])
-        largest = float(np.abs(push).max())
-        if own < REACHES_FROM * largest:
-            _check_not_fed(readings, place, axis, own / largest)
-            own = np.inf
-        rows = (3 * touched[:, None] + np.arange(3)).ravel()
-        columns.append(sparse.csc_matrix((push.ravel() / own, (rows, np.zeros(len(rows), int))),
-                                         shape=(3 * mesh.n_cells, 1)))
-        drops.append(sparse.csc_matrix((drop / own, (faces, np.zeros(len(faces), int))),
-                                       shape=(mesh.n_faces, 1)))
-    return sparse.hstack(columns).tocsc(), sparse.hstack(drops).tocsc()
-
-
-def _check_not_fed(readings: Readings, place: int, axis: int, share: float) -> None:
-    """A force along this axis does not reach the reading: the reading must not need it."""
-    fed = readings.component_place == place
-    along = np.abs(readings.component_direction[fed, axis])
-    if np.any(np.isnan(along) | (along > 1e-6)):
-        raise ReadingError("The force of a reading does not reach the reading.",
-                           where=f"reading '{readings.name[place]}', along {'xyz'[axis]}",
-                           got=f"{share:.2g} of the largest force arrives",
-                           remedy="Move it away from the wall or corner, give a smaller radius, "
-                                  "or withhold it.")
-
-
-def _check_off_walls(problem: Problem, readings: Readings, home: np.ndarray) -> None:
-    """No reading on a boundary that gives the velocity itself."""
-    mesh, table, n = problem.mesh, problem.table, problem.mesh.n_internal
-    offsets, around, _ = mesh.cell_faces
-    for place, cell in enumerate(home):
-        faces = around[offsets[cell]:offsets[cell + 1]]
-        faces = faces[faces >= n]
-        faces = faces[(table.keep_tangential[faces - n] == 0) & (table.keep_normal[faces - n] == 0)]
-        arm = mesh.face_centre[faces] - readings.point[place]
-        off = np.einsum("ij,ij->i", arm, mesh.face_normal[faces])
-        if np.any(off <= 1e-6 * np.cbrt(mesh.cell_volume[cell])):
-            raise ReadingError("A fed reading lies on a boundary whose velocity is given.",
-                               where=f"reading '{readings.name[place]}'",
-                               got=f"{readings.point[place].tolist()} m",
-                               remedy="Move it into the fluid, or withhold it.")
-
-
-def _response(problem: Problem, layout: Layout, relax: Callable[..., Any]) -> Response:
-    """Sweep every kernel over its own region."""
-    mesh, density = problem.mesh, problem.case.fluid.density
-    n_places = len(layout.regions)
-    push = layout.cell.tocsc()
-    scratch = np.zeros((mesh.n_cells, 3))
-    rhs = np.zeros((mesh.n_cells, 3))
-    columns, values, rows = [], [], []
-    for column in range(3 * n_places):
-        region = layout.regions[column // 3]
-        part = slice(push.indptr[column], push.indptr[column + 1])
-        flat = push.indices[part]
-        rhs.reshape(-1)[flat] = push.data[part] * density * mesh.cell_volume[flat // 3]
-        relax(rhs, region, scratch)
-        rows.append((3 * region[:, None].astype(np.int64) + np.arange(3)).ravel())
-        values.append(scratch[region].ravel())
-        columns.append(np.full(3 * len(region), column))
-        scratch[region] = 0.0
-        rhs.reshape(-1)[flat] = 0.0
-    velocity = sparse.csr_matrix(
-        (np.concatenate(values), (np.concatenate(rows), np.concatenate(columns))),
-        shape=(3 * mesh.n_cells, 3 * n_places))
-    return Response(velocity, _at_places(problem, layout, velocity))
-
-
-def _at_places(problem: Problem, layout: Layout, velocity: sparse.csr_matrix) -> np.ndarray:
-    out = np.empty((velocity.shape[1], velocity.shape[1]))
-    for column in range(velocity.shape[1]):
-        change = velocity[:, [column]].toarray().reshape(-1, 3)
-        out[:, column] = layout.sample_change(problem, change).ravel()
-    return out

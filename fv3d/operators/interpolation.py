@@ -146,26 +146,17 @@ def _onto_surface(mesh: Mesh, points: np.ndarray, which: np.ndarray, *,
     _, faces = cKDTree(mesh.face_centre[n:]).query(points[which], k=near)
     faces = np.asarray(faces).reshape(len(which), near) + n
     for i, candidates in zip(which, faces, strict=True):
-        off = np.einsum("kj,kj->k", points[i] - mesh.face_centre[candidates],
-                        mesh.face_normal[candidates])
-        size = np.sqrt(mesh.face_area_magnitude[candidates])
-        for k in np.argsort(-off):
-            if 0.0 < off[k] <= slack * size[k]:
-                points[i] -= (off[k] + 1e-9 * size[k]) * mesh.face_normal[candidates[k]]
+        for face in candidates:
+            normal, size = mesh.face_normal[face], np.sqrt(mesh.face_area_magnitude[face])
+            off = float((points[i] - mesh.face_centre[face]) @ normal)
+            if 0.0 < off <= slack * size:
+                points[i] -= (off + 1e-9 * size) * normal
     return points
 
 
-def point_interpolation(mesh: Mesh, gradient: GradientOperator, points: np.ndarray, *,
-                        where: str = "sample(points)",
-                        names: list[str] | None = None) -> PointInterpolation:
-    """Operator from cell values to points.
-
-    Parameters
-    ----------
-    gradient : GradientOperator
-        Weights that know a value on every boundary face.
-    points : (n, 3) [m]
-    where, names : for the message when a point lies outside
+def points_inside(mesh: Mesh, points: np.ndarray, *, where: str,
+                  names: list[str] | None = None) -> _Location:
+    """Cells and weights of points, those just off a curved wall moved onto it.
 
     Raises
     ------
@@ -188,7 +179,28 @@ def point_interpolation(mesh: Mesh, gradient: GradientOperator, points: np.ndarr
                         remedy="The mesh spans " + " x ".join(
                             f"[{a:.4g}, {b:.4g}]" for a, b in zip(low, high, strict=True))
                         + " m; check units and axes (placed(shift=, rotation=, scale=)).")
-    n, size = len(points), mesh.n_cells + mesh.n_boundary
+    return place
+
+
+def point_interpolation(mesh: Mesh, gradient: GradientOperator, points: np.ndarray, *,
+                        where: str = "sample(points)",
+                        names: list[str] | None = None) -> PointInterpolation:
+    """Operator from cell values to points.
+
+    Parameters
+    ----------
+    gradient : GradientOperator
+        Weights that know a value on every boundary face.
+    points : (n, 3) [m]
+    where, names : for the message when a point lies outside
+
+    Raises
+    ------
+    CaseError
+        A point lies outside the mesh by more than a twentieth of the nearest boundary face.
+    """
+    place = points_inside(mesh, points, where=where, names=names)
+    n, size = len(place.cell), mesh.n_cells + mesh.n_boundary
     corners = sparse.csr_matrix(
         (place.share[:, :4].ravel(), (np.repeat(np.arange(n), 4), place.corner[:, :4].ravel())),
         shape=(n, len(mesh.points)))

@@ -1,0 +1,215 @@
+"""Where the forces of readings act on one mesh, and how the momentum sweeps answer them."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import scipy.sparse as sparse
+
+from ..errors import CaseError, ReadingError
+from ..flow.problem import Force, Problem, balanced_force_near
+from ..operators.interpolation import PointInterpolation, point_interpolation
+from .kernel import Kernel, Neighbourhood
+from .readings import Readings
+
+REACHES_FROM = 0.02  # answer at the reading over the largest force: below, it is not reached
+
+
+@dataclass(frozen=True, eq=False)
+class Layout:
+    """Kernels of all readings on one mesh, three directions each.
+
+    ``cell`` (3 n_cells, 3 n_places) and ``drop`` (n_faces, 3 n_places) sparse, scaled so that the
+    interpolation of each kernel's own component at its reading is one.
+    """
+
+    to_points: PointInterpolation
+    edges: np.ndarray
+    cell: sparse.csr_matrix
+    drop: sparse.csr_matrix
+    regions: tuple[np.ndarray, ...]
+
+    def force(self, strength: np.ndarray) -> Force:
+        """Force of strengths (n_places, 3) [m/s^2]."""
+        flat = strength.ravel()
+        if not flat.any():
+            return Force(np.zeros((self.cell.shape[0] // 3, 3)), np.zeros(self.drop.shape[0]))
+        return Force((self.cell @ flat).reshape(-1, 3), self.drop @ flat)
+
+    def sample(self, problem: Problem, velocity: np.ndarray, edge: np.ndarray) -> np.ndarray:
+        """(n_places, 3) velocity at the readings [m/s]."""
+        return self.to_points(velocity, edge)
+
+    def sample_change(self, problem: Problem, change: np.ndarray) -> np.ndarray:
+        """(n_places, 3) velocity change at the readings, boundary values following the cells."""
+        edge = np.zeros((problem.mesh.n_boundary, 3))
+        edge[self.edges] = edge_change(problem, self.edges, change)
+        return self.to_points(change, edge)
+
+
+def edge_change(problem: Problem, rows: np.ndarray, change: np.ndarray) -> np.ndarray:
+    """(k, 3) change of the boundary velocity on some boundary faces."""
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    normal, inner = mesh.face_normal[n + rows], change[mesh.left[n + rows]]
+    across = np.einsum("ij,ij->i", inner, normal)[:, None] * normal
+    table = problem.table
+    return (table.keep_tangential[rows, None] * (inner - across)
+            + table.keep_normal[rows, None] * across)
+
+
+@dataclass(frozen=True, eq=False)
+class Response:
+    """Answer of the momentum sweeps to a unit strength of each kernel.
+
+    ``velocity`` (3 n_cells, 3 n_places) sparse; ``at_places`` (3 n_places, 3 n_places).
+    """
+
+    velocity: sparse.csr_matrix
+    at_places: np.ndarray
+
+    def apply(self, strength: np.ndarray) -> np.ndarray:
+        """(n_cells, 3) velocity change for strengths (n_places, 3)."""
+        return np.asarray(self.velocity @ strength.ravel()).reshape(-1, 3)
+
+    def between(self, spread: sparse.csr_matrix) -> np.ndarray:
+        """(m, m) response of each component to the strength of each.
+
+        ``spread`` (3 n_places, m) are the directions of the components.
+        """
+        return np.asarray(spread.T @ (spread.T @ self.at_places.T).T)
+
+
+def make_layout(problem: Problem, readings: Readings, kernel: Kernel, *,
+                layers: int = 4) -> Layout:
+    """Kernels of readings, balanced like the pressure gradient and scaled.
+
+    Raises
+    ------
+    ReadingError
+        A reading lies outside the mesh, on a wall or inlet, or where its own force does not reach.
+    """
+    mesh = problem.mesh
+    try:
+        to_points = point_interpolation(mesh, problem.velocity_gradient, readings.point,
+                                        where="readings", names=list(readings.name))
+    except CaseError as error:
+        raise ReadingError("A fed reading lies outside the mesh.", where=error.where,
+                           got=error.got, remedy=error.remedy) from None
+    _check_off_walls(problem, readings, to_points.home)
+    near = Neighbourhood.of(mesh)
+    edges = np.unique(to_points.edges.indices)
+    cells, drops, regions = [], [], []
+    for place in range(len(readings)):
+        where, value = kernel.shape(mesh, near, readings.point[place], int(to_points.home[place]))
+        at_cell, at_face = _columns(problem, to_points, edges, place, where, value, readings)
+        cells.append(at_cell)
+        drops.append(at_face)
+        regions.append(near.within(np.unique(at_cell.nonzero()[0] // 3), layers))
+    return Layout(to_points, edges, sparse.hstack(cells).tocsr(), sparse.hstack(drops).tocsr(),
+                  tuple(regions))
+
+
+def _columns(problem: Problem, to_points: PointInterpolation, edges: np.ndarray, place: int,
+             where: np.ndarray, value: np.ndarray,
+             readings: Readings) -> tuple[sparse.csc_matrix, sparse.csc_matrix]:
+    """Force and drop columns of one reading, scaled so that its own interpolation of them is one.
+
+    The balanced force of one axis has small parts along the others; where the three answers allow,
+    they are combined so that the answer at the reading is exactly along each axis.
+    """
+    mesh = problem.mesh
+    columns, drops, answers = [], [], np.empty((3, 3))
+    for axis in range(3):
+        force = np.zeros((len(where), 3))
+        force[:, axis] = value
+        touched, push, faces, drop = balanced_force_near(mesh, where, force)
+        whole = np.zeros((mesh.n_cells, 3))
+        whole[touched] = push
+        edge = np.zeros((mesh.n_boundary, 3))
+        edge[edges] = edge_change(problem, edges, whole)
+        answers[:, axis] = (to_points.cells[[place]] @ whole + to_points.edges[[place]] @ edge)[0]
+        answers[:, axis] /= np.abs(push).max()
+        rows = (3 * touched[:, None] + np.arange(3)).ravel()
+        columns.append(sparse.csc_matrix(
+            (push.ravel() / np.abs(push).max(), (rows, np.zeros(len(rows), int))),
+            shape=(3 * mesh.n_cells, 1)))
+        drops.append(sparse.csc_matrix(
+            (drop / np.abs(push).max(), (faces, np.zeros(len(faces), int))),
+            shape=(mesh.n_faces, 1)))
+    scale = sparse.csc_matrix(_scaling(answers, readings, place))
+    return (sparse.hstack(columns) @ scale).tocsc(), (sparse.hstack(drops) @ scale).tocsc()
+
+
+def _scaling(answers: np.ndarray, readings: Readings, place: int) -> np.ndarray:
+    """(3, 3) factors on the columns; an axis that does not reach the reading is left out."""
+    own = np.diag(answers)
+    if own.min() >= REACHES_FROM and np.linalg.cond(answers) < 30.0:
+        return np.linalg.inv(answers)
+    for axis in np.flatnonzero(own < REACHES_FROM):
+        _check_not_fed(readings, place, int(axis), float(own[axis]))
+    return np.diag(np.where(own < REACHES_FROM, 0.0, 1.0 / np.maximum(own, REACHES_FROM)))
+
+
+def _check_not_fed(readings: Readings, place: int, axis: int, share: float) -> None:
+    """A force along this axis does not reach the reading: the reading must not need it."""
+    fed = readings.component_place == place
+    along = np.abs(readings.component_direction[fed, axis])
+    if np.any(np.isnan(along) | (along > 1e-6)):
+        raise ReadingError("The force of a reading does not reach the reading.",
+                           where=f"reading '{readings.name[place]}', along {'xyz'[axis]}",
+                           got=f"{share:.2g} of the largest force arrives",
+                           remedy="Move it away from the wall or corner, give a smaller radius, "
+                                  "or withhold it.")
+
+
+def _check_off_walls(problem: Problem, readings: Readings, home: np.ndarray) -> None:
+    """No reading on a boundary that gives the velocity itself."""
+    mesh, table, n = problem.mesh, problem.table, problem.mesh.n_internal
+    offsets, around, _ = mesh.cell_faces
+    for place, cell in enumerate(home):
+        faces = around[offsets[cell]:offsets[cell + 1]]
+        faces = faces[faces >= n]
+        faces = faces[(table.keep_tangential[faces - n] == 0) & (table.keep_normal[faces - n] == 0)]
+        arm = mesh.face_centre[faces] - readings.point[place]
+        off = np.einsum("ij,ij->i", arm, mesh.face_normal[faces])
+        if np.any(off <= 1e-6 * np.cbrt(mesh.cell_volume[cell])):
+            raise ReadingError("A fed reading lies on a boundary whose velocity is given.",
+                               where=f"reading '{readings.name[place]}'",
+                               got=f"{readings.point[place].tolist()} m",
+                               remedy="Move it into the fluid, or withhold it.")
+
+
+def sweep_response(problem: Problem, layout: Layout, relax: Callable[..., Any]) -> Response:
+    """Sweep every kernel over its own region."""
+    mesh, density = problem.mesh, problem.case.fluid.density
+    n_places = len(layout.regions)
+    push = layout.cell.tocsc()
+    scratch = np.zeros((mesh.n_cells, 3))
+    rhs = np.zeros((mesh.n_cells, 3))
+    columns, values, rows = [], [], []
+    for column in range(3 * n_places):
+        region = layout.regions[column // 3]
+        part = slice(push.indptr[column], push.indptr[column + 1])
+        flat = push.indices[part]
+        rhs.reshape(-1)[flat] = push.data[part] * density * mesh.cell_volume[flat // 3]
+        relax(rhs, region, scratch)
+        rows.append((3 * region[:, None].astype(np.int64) + np.arange(3)).ravel())
+        values.append(scratch[region].ravel())
+        columns.append(np.full(3 * len(region), column))
+        scratch[region] = 0.0
+        rhs.reshape(-1)[flat] = 0.0
+    velocity = sparse.csr_matrix(
+        (np.concatenate(values), (np.concatenate(rows), np.concatenate(columns))),
+        shape=(3 * mesh.n_cells, 3 * n_places))
+    return Response(velocity, _at_places(problem, layout, velocity))
+
+
+def _at_places(problem: Problem, layout: Layout, velocity: sparse.csr_matrix) -> np.ndarray:
+    out = np.empty((velocity.shape[1], velocity.shape[1]))
+    for column in range(velocity.shape[1]):
+        change = velocity[:, [column]].toarray().reshape(-1, 3)
+        out[:, column] = layout.sample_change(problem, change).ravel()
+    return out
