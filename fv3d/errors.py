@@ -6,6 +6,8 @@ Every iteration ends in a named :class:`Outcome` with a sentence and a next step
 
 from __future__ import annotations
 
+import os
+from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import Any
 
@@ -104,6 +106,46 @@ def as_number(value: Any) -> float:
         return float(value)
     except (TypeError, ValueError):
         return float("nan")
+
+
+def did_you_mean(word: Any, known: Iterable[str]) -> str:
+    """A question naming the known word nearest to a wrong one, or nothing."""
+    from difflib import get_close_matches
+    lower = {name.lower(): name for name in known}
+    near = get_close_matches(str(word).lower(), lower, 1)
+    return f" Did you mean '{lower[near[0]]}'?" if near else ""
+
+
+def expect_run(thing: Any, where: str) -> None:
+    """Refuse, with CaseError, an argument that is no run; ``where`` shows the call."""
+    if isinstance(thing, type) or not hasattr(thing, "sample"):
+        raise CaseError("This argument must be a run.", where=where, got=_short(thing),
+                        remedy="Give what solve_steady(...) returned, at the place shown above.")
+
+
+def expect_readings(thing: Any, where: str) -> None:
+    """Refuse, with ReadingError, an argument that is no table of readings."""
+    if isinstance(thing, type) or not hasattr(thing, "component_value"):
+        raise ReadingError("This argument must be a table of readings.", where=where,
+                           got=_short(thing),
+                           remedy="Give what read_readings(...) or split(...) returned, at the "
+                                  "place shown above.")
+
+
+def expect_mesh(thing: Any, where: str) -> None:
+    """Refuse, with MeshError, an argument that is no mesh."""
+    if isinstance(thing, type) or not hasattr(thing, "n_internal"):
+        raise MeshError("This argument must be a mesh.", where=where, got=_short(thing),
+                        remedy="Give what read_mesh(...) or a generator returned, at the place "
+                               "shown above.")
+
+
+def _short(thing: Any) -> str:
+    """Kind of an object, and the object itself where that is short."""
+    if isinstance(thing, type):
+        return f"the class {thing.__name__}"
+    simple = thing is None or isinstance(thing, str | int | float | os.PathLike)
+    return f"{type(thing).__name__} {str(thing)[:60]!r}" if simple else type(thing).__name__
 
 
 def converged(iterations: int, tolerance: float) -> Outcome:

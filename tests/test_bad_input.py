@@ -60,6 +60,10 @@ def wrong_shape(x: np.ndarray) -> np.ndarray:
     return x[:, :2]
 
 
+def no_such_column(x: np.ndarray) -> np.ndarray:
+    return x[:, 7:8] + x[:, 7]
+
+
 def nan_somewhere(x: np.ndarray) -> np.ndarray:
     out = np.ones_like(x)
     out[-1, 0] = NAN
@@ -213,6 +217,55 @@ TABLE: dict[str, tuple[type[Fv3dError], Bad]] = {
         (ReadingError, lambda d: readings().split(withheld=["a", "b"])),
     "readings: outside the mesh": (Fv3dError, lambda d: fv3d.observe(
         run(), readings(**{"x [mm]": [5000.0, 500.0]}))),
+    # arguments of another kind, or swapped
+    "kind: read_mesh of nothing": (MeshError, lambda d: fv3d.read_mesh(None)),
+    "kind: read_mesh scale a text": (MeshError, lambda d: fv3d.read_mesh(_written(d), scale="mm")),
+    "kind: quality of a case": (MeshError, lambda d: fv3d.quality(case())),
+    "kind: inlet function that raises":
+        (BoundaryError, lambda d: case(boundaries=boundaries(x_min=fv3d.Inlet(no_such_column)))),
+    "kind: force swapped": (CaseError, lambda d: fv3d.force("x_min", run())),
+    "kind: force of a case": (CaseError, lambda d: fv3d.force(case(), "x_min")),
+    "kind: force on a list": (CaseError, lambda d: fv3d.force(run(), ["x_min"])),
+    "kind: momentum budget of a case": (CaseError, lambda d: fv3d.momentum_budget(case())),
+    "kind: write_vtk swapped": (CaseError, lambda d: fv3d.write_vtk(d / "a.vtu", run())),
+    "kind: write_vtk of a case": (CaseError, lambda d: fv3d.write_vtk(case(), d / "a.vtu")),
+    "kind: write_vtk to nowhere": (FileError, lambda d: fv3d.write_vtk(run(), None)),
+    "kind: write_history of a case":
+        (CaseError, lambda d: fv3d.write_history(case(), d / "a.csv")),
+    "kind: write_readings swapped":
+        (ReadingError, lambda d: fv3d.write_readings(d / "a.vtp", readings())),
+    "kind: write_readings with a case":
+        (CaseError, lambda d: fv3d.write_readings(readings(), d / "a.vtp", run=case())),
+    "kind: picture swapped": (CaseError, lambda d: fv3d.picture(d / "a.png", run())),
+    "kind: picture of a case": (CaseError, lambda d: fv3d.picture(case(), d / "a.png")),
+    "kind: picture with a path for readings": (ReadingError, lambda d: fv3d.picture(
+        run(), d / "a.png", readings="readings.csv")),
+    "kind: picture_readings swapped": (MeshError, lambda d: fv3d.picture_readings(
+        readings(), MESH, path=d / "a.png")),
+    "kind: picture_readings of no readings": (ReadingError, lambda d: fv3d.picture_readings(
+        MESH, "readings.csv", path=d / "a.png")),
+    "kind: compare swapped": (CaseError, lambda d: fv3d.compare(readings(), [run()])),
+    "kind: compare with a path": (ReadingError, lambda d: fv3d.compare([run()], "readings.csv")),
+    "kind: compare fed a path":
+        (ReadingError, lambda d: fv3d.compare([run()], readings(), fed="readings.csv")),
+    "kind: compare a case": (CaseError, lambda d: fv3d.compare([case()], readings())),
+    "kind: compare no runs": (ReadingError, lambda d: fv3d.compare([], readings())),
+    "kind: observe swapped": (CaseError, lambda d: fv3d.observe(readings(), run())),
+    "kind: split by number": (ReadingError, lambda d: readings().split(withheld=3)),
+    "kind: no threads": (CaseError, lambda d: fv3d.set_threads(0)),
+    "kind: too many threads": (CaseError, lambda d: fv3d.set_threads(10_000)),
+    "kind: threads a text": (CaseError, lambda d: fv3d.set_threads("2")),
+    # pictures
+    "picture: limits swapped":
+        (CaseError, lambda d: fv3d.picture(run(), d / "a.png", limits=(2.0, 1.0))),
+    "picture: limits a text":
+        (CaseError, lambda d: fv3d.picture(run(), d / "a.png", limits="auto")),
+    "picture: limits not finite":
+        (CaseError, lambda d: fv3d.picture(run(), d / "a.png", limits=(0.0, INF))),
+    "picture: reading outside": (ReadingError, lambda d: fv3d.picture(
+        run(), d / "a.png", readings=readings(**{"x [mm]": [500.0, 5000.0]}))),
+    "picture_readings: reading outside": (ReadingError, lambda d: fv3d.picture_readings(
+        MESH, readings(**{"x [mm]": [500.0, 5000.0]}), path=d / "a.png")),
 }
 
 
@@ -237,6 +290,52 @@ def test_bad_input_ends_in_our_own_words(kind: str, tmp_path: Path,
     error = caught.value
     assert error.what.strip() and error.where.strip() and error.remedy.strip()
     assert error.what in str(error) and error.remedy in str(error)
+
+
+WORDS: dict[str, tuple[str, Bad]] = {
+    "boundary": ("Did you mean 'x_min'?", lambda d: fv3d.force(run(), "x_mim")),
+    "group": ("Did you mean 'rake C'?", lambda d: readings(group=["rake C", "rake D"]).split(
+        withheld=["rake c"])),
+    "competitor": ("Did you mean 'made'?", lambda d: fv3d.compare(
+        [replace(run(), name="made")], readings()).rms("maed")),
+    "reading outside, observed": ("'far'", lambda d: fv3d.observe(run(), far())),
+    "reading outside, compared": ("'far'", lambda d: fv3d.compare([run()], far())),
+    "reading outside, written":
+        ("'far'", lambda d: fv3d.write_readings(far(), d / "a.vtp", run=run())),
+    "reading outside, drawn":
+        ("'far'", lambda d: fv3d.picture_readings(MESH, far(), path=d / "a.png")),
+    "inlet function": ("IndexError", lambda d: case(boundaries=boundaries(
+        x_min=fv3d.Inlet(no_such_column)))),
+    "round brackets": ("square brackets", lambda d: readings(**{"v (m/s)": [1.0, 2.0]})),
+    "unit": ("Convert", lambda d: readings(**{"v [mph]": [1.0, 2.0]})),
+}
+
+
+def far() -> fv3d.Readings:
+    return readings(**{"x [mm]": [500.0, 5000.0], "name": ["near", "far"]})
+
+
+@pytest.mark.parametrize("kind", WORDS)
+def test_the_message_names_the_thing(kind: str, tmp_path: Path) -> None:
+    word, bad = WORDS[kind]
+    with pytest.raises(Fv3dError) as caught:
+        bad(tmp_path)
+    assert word in str(caught.value)
+
+
+def test_no_unit_is_offered_in_place_of_another() -> None:
+    """An mph is no km/h and a millimetre no mm/s: nothing to be guessed there."""
+    for unit in ("mph", "mm"):
+        with pytest.raises(ReadingError) as caught:
+            readings(**{f"v [{unit}]": [1.0, 2.0]})
+        assert "Did you mean" not in str(caught.value)
+        assert "km/h" in caught.value.remedy
+
+
+def test_the_failure_of_an_inlet_function_is_kept_as_cause() -> None:
+    with pytest.raises(BoundaryError) as caught:
+        case(boundaries=boundaries(x_min=fv3d.Inlet(no_such_column)))
+    assert isinstance(caught.value.__cause__, IndexError)
 
 
 def test_good_input_passes(tmp_path: Path) -> None:

@@ -97,6 +97,18 @@ def test_few_points_and_repeated_places():
                                [4.0, 0.0])
 
 
+def test_totals_over_unlike_counts_say_so():
+    """Only u is fed: interpolation has nothing to say about v and w."""
+    used, withheld = Readings(rig()).split(withheld=["rake 1"])
+    only_u = used.select(np.ones(len(used), dtype=bool),
+                         components=np.array(used.component_label) == "u")
+    run = uniform("plain", (1, 2, 3))
+    text = str(compare([run], withheld, fed=only_u))
+    assert "totals [m/s] rest on unlike counts (4 to 12)" in text
+    assert max(map(len, text.splitlines())) <= 80
+    assert "unlike" not in str(compare([run], withheld, fed=used))
+
+
 def test_estimates_do_not_depend_on_the_axes():
     readings = Readings(rig())
     turn = Rotation.from_rotvec([0.5, 0.2, -0.8])

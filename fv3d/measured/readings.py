@@ -7,14 +7,16 @@ quantity is one scalar *component*; the arrays ``component_*`` list all of them.
 from __future__ import annotations
 
 import os
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from ..errors import ReadingError
+from ..errors import CaseError, ReadingError, did_you_mean, expect_readings, expect_run
+from ..mesh.mesh import Mesh
+from ..operators.interpolation import points_inside
 from .quantities import COMPONENT, PRESSURE, SPEED, Component, Pressure, Quantity, Speed
 from .table import AXIS_DIRECTION, DIRECTION, PLACE, VALUES, Table, read_table
 
@@ -137,13 +139,18 @@ class Readings:
         ReadingError
             A group that is not in the table, or no reading left on one side.
         """
+        if not isinstance(withheld, Iterable):
+            raise ReadingError("The groups to withhold are given by name.",
+                               where="split(withheld=...)", got=repr(withheld),
+                               remedy=f"Give a list of names: {', '.join(self.groups)}.")
         asked = [withheld] if isinstance(withheld, str) else list(withheld)
         groups = "groups in the table: " + ", ".join(self.groups)
         for group in asked:
             if group not in self.groups:
                 raise ReadingError("A group to withhold is not in the table.",
                                    where="split(withheld=...)", got=repr(group),
-                                   remedy=f"Choose among the {groups}.")
+                                   remedy=f"Choose among the {groups}."
+                                          + did_you_mean(group, self.groups))
         away = np.array([group in asked for group in self.group])
         if away.all() or not away.any():
             raise ReadingError("Both used and withheld readings are needed.",
@@ -256,15 +263,47 @@ def linearised_direction(readings: Readings, velocity: np.ndarray) -> np.ndarray
 
 
 def observe(run: Any, readings: Readings) -> np.ndarray:
-    """(m,) what the instruments would read in a run [m/s or Pa].
+    """What the instruments would read in a run.
+
+    Parameters
+    ----------
+    run : Run
+    readings : Readings
+
+    Returns
+    -------
+    (m,) array [m/s or Pa], one per component
 
     Raises
     ------
-    Fv3dError
-        A reading lies outside the mesh.
+    ReadingError
+        A reading lies outside the mesh, or not a table of readings.
+    CaseError
+        Not a run.
     """
-    sample = run.sample(readings.point)
+    expect_run(run, "observe(run, readings)")
+    expect_readings(readings, "observe(run, readings)")
+    try:
+        sample = run.sample(readings.point)
+    except CaseError:
+        check_inside(run.mesh, readings)
+        raise
     return predict(readings, sample.velocity, pressure=sample.pressure)
+
+
+def check_inside(mesh: Mesh, readings: Readings) -> None:
+    """Refuse readings outside a mesh.
+
+    Raises
+    ------
+    ReadingError
+        Names the first reading outside.
+    """
+    try:
+        points_inside(mesh, readings.point, where="readings", names=list(readings.name))
+    except CaseError as error:
+        raise ReadingError(error.what.replace("point(s) lie", "reading(s) lie"),
+                           where=error.where, got=error.got, remedy=error.remedy) from None
 
 
 def _fill(readings: Readings, **parts: Any) -> None:

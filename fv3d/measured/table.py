@@ -136,6 +136,9 @@ def _read_header(header: list[str], where: str) -> list[tuple[str, float]]:
         match = re.fullmatch(r"\s*([^\[\]]*?)\s*(?:\[\s*([^\[\]]*?)\s*\])?\s*", text)
         column, unit = match.groups() if match else (text, None)
         place = f"{where}, column '{text.strip()}'"
+        if column not in COLUMNS and re.fullmatch(r"[^()]*\(.*\)", column):
+            raise ReadingError("The unit of a column stands in round brackets.", where=place,
+                               got=column, remedy="Use square brackets: 'x [mm]', 'u [m/s]'.")
         if column not in COLUMNS:
             near = get_close_matches(column.lower(), COLUMNS, n=1, cutoff=0.5)
             hint = f"Did you mean '{near[0]}'? " if near else ""

@@ -9,9 +9,21 @@ of 1000 and 13595.1 kg/m^3 (ISO 80000-4; BS 350).
 from __future__ import annotations
 
 from dataclasses import dataclass
-from difflib import get_close_matches
 
 from ..errors import ReadingError
+
+SPELLINGS = (("sec", "s"), ("meters", "m"), ("metres", "m"), ("meter", "m"), ("metre", "m"),
+             ("milli", "m"), ("centi", "c"), ("pascal", "pa"), ("inch", "in"), ("feet", "ft"),
+             ("hr", "h"), ("\N{MICRO SIGN}", "u"), ("\N{GREEK SMALL LETTER MU}", "u"),
+             (" ", ""), ("s^-1", "/s"), ("s-1", "/s"), ("*/", "/"))
+
+
+def _plain(unit: str) -> str:
+    """A unit without what differs between spellings of the same unit."""
+    unit = unit.lower()
+    for spelling, short in SPELLINGS:
+        unit = unit.replace(spelling, short)
+    return unit
 
 
 @dataclass(frozen=True)
@@ -44,14 +56,16 @@ class Dimension:
         if unit in known:
             return known[unit]
         units = ", ".join(known)
+        same = [name for name in known if _plain(name) == _plain(unit or "")]
+        hint = f"Did you mean [{same[0]}]? " if same else ""
         if unit is None:
             raise ReadingError(f"A column of {self.name} has no unit.", where=where,
                                got="no unit in the header",
                                remedy=f"Write the unit in square brackets, one of: {units}.")
-        near = get_close_matches(unit, known, n=1, cutoff=0.5)
-        hint = f"Did you mean [{near[0]}]? " if near else ""
         raise ReadingError(f"A column of {self.name} has an unknown unit.", where=where,
-                           got=f"[{unit}]", remedy=f"{hint}Use one of: {units}.")
+                           got=f"[{unit}]",
+                           remedy=f"{hint}Accepted: {units}. Convert the values to one of "
+                                  "these.")
 
 
 LENGTH = Dimension("length", "m", (

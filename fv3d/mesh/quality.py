@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..errors import MeshError
+from ..errors import MeshError, expect_mesh
 from .mesh import Mesh
 from .topology import LOCAL_FACES
 
@@ -45,7 +45,13 @@ def quality(mesh: Mesh) -> Quality:
     Returns
     -------
     Quality
+
+    Raises
+    ------
+    MeshError
+        Not a mesh.
     """
+    expect_mesh(mesh, "quality(mesh)")
     inside = slice(0, mesh.n_internal)
     delta, normal = mesh.delta[inside], mesh.face_normal[inside]
     length = np.linalg.norm(delta, axis=1)

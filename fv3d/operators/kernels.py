@@ -9,11 +9,12 @@ from __future__ import annotations
 import types
 import warnings
 from collections.abc import Callable
+from numbers import Integral
 from typing import Any
 
 import numba
 
-from ..errors import Fv3dWarning
+from ..errors import CaseError, Fv3dWarning
 
 SMALL = 20_000  # below this many rows a second thread costs more than it brings
 
@@ -307,10 +308,35 @@ def chebyshev_step(indptr, indices, data, inverse_diagonal, rhs, keep, scale, di
 
 
 def set_threads(count: int) -> None:
-    """Number of threads of the compiled loops (at least 1)."""
-    numba.set_num_threads(count)
+    """Set the number of threads of the compiled loops, for this process.
+
+    Parameters
+    ----------
+    count : int
+        From 1 to the number of cores, or to the environment variable ``NUMBA_NUM_THREADS``
+        where it is set.
+
+    Raises
+    ------
+    CaseError
+        Not a whole number in this range.
+    """
+    most = int(numba.config.NUMBA_NUM_THREADS)  # type: ignore[attr-defined]
+    whole = isinstance(count, Integral) and not isinstance(count, bool)
+    if not whole or not 1 <= count <= most:
+        raise CaseError(f"The number of threads is a whole number from 1 to {most} here.",
+                        where="set_threads(count)", got=repr(count),
+                        remedy="Give a number in this range; for more, set the environment "
+                               "variable NUMBA_NUM_THREADS before Python starts.")
+    numba.set_num_threads(int(count))
 
 
 def get_threads() -> int:
-    """Number of threads of the compiled loops."""
+    """Number of threads of the compiled loops.
+
+    Returns
+    -------
+    int
+        All cores, unless :func:`set_threads` or ``NUMBA_NUM_THREADS`` says otherwise.
+    """
     return int(numba.get_num_threads())

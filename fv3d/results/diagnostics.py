@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..errors import CaseError
+from ..errors import CaseError, did_you_mean, expect_run
 from ..flow.equations import boundary_carried, boundary_traction
 from ..flow.run import Run
 from ..operators.interpolation import checked_points
@@ -48,11 +48,13 @@ def boundary_faces(run: Run, name: str) -> slice:
     Raises
     ------
     CaseError
-        No such boundary.
+        No such boundary, or no run.
     """
-    if name not in run.mesh.boundaries:
+    expect_run(run, "force(run, name)")
+    known = list(run.mesh.boundaries)
+    if name not in known:
         raise CaseError("No such boundary.", where="force(run, name)", got=repr(name),
-                        remedy=f"The mesh has: {', '.join(run.mesh.boundaries)}.")
+                        remedy=f"The mesh has: {', '.join(known)}.{did_you_mean(name, known)}")
     return run.mesh.boundaries[name]
 
 
@@ -77,7 +79,7 @@ def force(run: Run, name: str, *, centre: Sequence[float] = (0.0, 0.0, 0.0)) -> 
     Raises
     ------
     CaseError
-        No such boundary.
+        No such boundary, no run, or a centre that is no point.
     """
     faces = boundary_faces(run, name)
     mesh, n = run.mesh, run.mesh.n_internal
@@ -129,14 +131,38 @@ class MomentumBudget:
         parts = [*self.boundaries.values(), self.convected, self.body, self.artificial]
         return float(sum(np.linalg.norm(part) for part in parts))
 
+    def __str__(self) -> str:
+        rows = {f"boundary '{name}'": part for name, part in self.boundaries.items()} | {
+            "convected in": self.convected, "body force": self.body,
+            "artificial force": self.artificial, "left over (closure)": self.closure}
+        title = "forces on the whole fluid [N]"
+        wide = max(len(title) - 2, *(len(label) for label in rows))
+        share = np.linalg.norm(self.closure) / self.size if self.size > 0 else 0.0
+        lines = [f"{title:<{wide + 2}}{'x':>12} {'y':>12} {'z':>12}"]
+        lines += [f"  {label:<{wide}}" + " ".join(f"{value:12.4g}" for value in part)
+                  for label, part in rows.items()]
+        return "\n".join([*lines, f"  closure is {share:.2e} of the sum of all magnitudes, "
+                                  f"{self.size:.5g} N"])
+
 
 def momentum_budget(run: Run) -> MomentumBudget:
     """Every force on the fluid and how well they cancel.
 
+    Parameters
+    ----------
+    run : Run
+
     Returns
     -------
     MomentumBudget
+        All (3,) [N]; prints as a sheet.
+
+    Raises
+    ------
+    CaseError
+        Not a run.
     """
+    expect_run(run, "momentum_budget(run)")
     mesh, n, density = run.mesh, run.mesh.n_internal, run.case.fluid.density
     push, traction = pressure_force(run), _traction(run)
     boundaries = {}

@@ -13,7 +13,7 @@ from typing import Any
 
 import numpy as np
 
-from ..errors import FileError
+from ..errors import FileError, expect_readings, expect_run
 from ..measured.readings import Readings, observe
 from ..mesh.mesh import Mesh
 
@@ -43,6 +43,7 @@ def write_vtk(run: Any, path: PathLike) -> Path:
     FileError
         The folder does not exist, the file cannot be written, or another ending.
     """
+    expect_run(run, "write_vtk(run, path)")
     target = _target(path, (".vtu",))
     grid = vtk_grid(run.mesh, cell_data={
         "velocity": run.velocity, "pressure": run.pressure,
@@ -72,8 +73,11 @@ def write_readings(readings: Readings, path: PathLike, *, run: Any = None) -> Pa
     ------
     FileError
         The folder does not exist, the file cannot be written, or another ending.
+    ReadingError
+        Not a table of readings, or with a run: a reading outside its mesh.
     """
     import pyvista as pv
+    expect_readings(readings, "write_readings(readings, path)")
     target = _target(path, (".vtp", ".vtu"))
     row = readings.component_place
     points = pv.PolyData(np.array(readings.point[row]))
@@ -109,6 +113,7 @@ def write_history(run: Any, path: PathLike) -> Path:
     FileError
         The folder does not exist, the file cannot be written, or another ending.
     """
+    expect_run(run, "write_history(run, path)")
     target = _target(path, (".csv",))
     columns = {name: np.asarray(column).tolist() for name, column in run.history.items()}
 
@@ -168,12 +173,27 @@ def _write_xml(data: Any, path: Path) -> None:
 
 
 def _target(path: PathLike, endings: tuple[str, ...]) -> Path:
-    target = Path(path)
+    target = as_path(path)
     if target.suffix.lower() not in endings:
         raise FileError("The ending of the file does not fit what is written.", where=str(target),
                         got=target.suffix or "no ending", remedy=f"Use {' or '.join(endings)}.")
     check_folder(target)
     return target
+
+
+def as_path(path: PathLike) -> Path:
+    """The path of a file to write.
+
+    Raises
+    ------
+    FileError
+        Something that is no path.
+    """
+    if not isinstance(path, str | os.PathLike):
+        raise FileError("The file to write must be given by its path.", where="path",
+                        got=type(path).__name__, remedy="Give a text such as 'flow.vtu', after "
+                                                        "what is to be written.")
+    return Path(path)
 
 
 def check_folder(target: Path) -> None:

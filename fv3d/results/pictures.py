@@ -12,11 +12,19 @@ from typing import Any
 
 import numpy as np
 
-from ..errors import CaseError, FileError, Fv3dWarning
-from ..measured.readings import Readings
+from ..errors import (
+    CaseError,
+    FileError,
+    Fv3dWarning,
+    as_number,
+    expect_mesh,
+    expect_readings,
+    expect_run,
+)
+from ..measured.readings import Readings, check_inside
 from ..mesh.mesh import Mesh
 from .canvas import Canvas, frame_of_plane
-from .files import PathLike, check_folder, vtk_grid, write_aside
+from .files import PathLike, as_path, check_folder, vtk_grid, write_aside
 
 ENDINGS = (".png",)
 
@@ -48,10 +56,17 @@ def picture(run: Any, path: PathLike, *, readings: Readings | None = None,
     FileError
         The folder does not exist or the file cannot be written.
     CaseError
-        The plane has no direction or does not cut the mesh.
+        No run, a plane that has no direction or does not cut the mesh, limits that do not
+        ascend.
+    ReadingError
+        No table of readings, or a reading outside the mesh.
     """
-    target = _target(path)
+    expect_run(run, "picture(run, path)")
+    target, limits = _target(path), _checked_limits(limits)
     mesh = run.mesh
+    if readings is not None:
+        expect_readings(readings, "picture(readings=)")
+        check_inside(mesh, readings)
     point, normal = _middle(mesh) if plane is None else _checked(plane)
     speed = np.linalg.norm(run.velocity, axis=1)
     grid = vtk_grid(mesh, cell_data={"speed": speed})
@@ -93,8 +108,15 @@ def picture_readings(mesh: Mesh, readings: Readings, *, path: PathLike,
     ------
     FileError
         The folder does not exist or the file cannot be written.
+    MeshError
+        Not a mesh.
+    ReadingError
+        Not a table of readings, or a reading outside the mesh: the first one is named.
     """
+    expect_mesh(mesh, "picture_readings(mesh, readings, path=)")
+    expect_readings(readings, "picture_readings(mesh, readings, path=)")
     target = _target(path)
+    check_inside(mesh, readings)
 
     def draw(aside: Path) -> None:
         from .scene import draw_scene
@@ -103,7 +125,7 @@ def picture_readings(mesh: Mesh, readings: Readings, *, path: PathLike,
 
 
 def _target(path: PathLike) -> Path:
-    target = Path(path)
+    target = as_path(path)
     if target.suffix.lower() not in ENDINGS:
         raise FileError("A picture is written as PNG.", where=str(target),
                         got=target.suffix or "no ending", remedy="Let the name end in .png.")
@@ -125,9 +147,9 @@ def _draw_aside(target: Path, draw: Callable[[Path], None]) -> Path | None:
     try:
         return write_aside(target, guarded)
     except _CannotDraw as error:
-        warnings.warn(f"No picture {target.name}: it could not be drawn here ({error}). The run "
-                      "is kept; off-screen pictures need OpenGL (the system library Mesa will "
-                      "do).", Fv3dWarning, stacklevel=3)
+        warnings.warn(f"No picture {target.name}: drawing failed ({error}). All else "
+                      "goes on. Where no picture at all can be drawn, OpenGL is missing: the "
+                      "system library Mesa will do.", Fv3dWarning, stacklevel=3)
         return None
 
 
@@ -139,6 +161,19 @@ def _middle(mesh: Mesh) -> tuple[np.ndarray, np.ndarray]:
     point = 0.5 * (low + high)
     point[axis] += 1e-5 * extent[axis]  # off a layer of faces in the very middle
     return point, np.eye(3)[axis]
+
+
+def _checked_limits(limits: Any) -> tuple[float, float] | None:
+    """Two ascending finite speeds, or None."""
+    if limits is None:
+        return None
+    pair = () if isinstance(limits, str) or not np.iterable(limits) else tuple(limits)
+    numbers = [as_number(value) for value in pair]
+    if len(numbers) != 2 or not -np.inf < numbers[0] < numbers[1] < np.inf:
+        raise CaseError("The limits of the colours are two ascending speeds.",
+                        where="picture(limits=)", got=repr(limits),
+                        remedy="Give (0.0, 2.0), say [m/s], or leave them out.")
+    return numbers[0], numbers[1]
 
 
 def _checked(plane: Any) -> tuple[np.ndarray, np.ndarray]:
