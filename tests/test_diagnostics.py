@@ -25,6 +25,14 @@ def test_momentum_budget_closes(kind: str, numerics: fv3d.Numerics) -> None:
     assert np.abs(budget.closure).max() <= 1e-6 * budget.size
     np.testing.assert_allclose(budget.body, 1.0 * 2.0 * np.array([0.1, -0.02, 0.05]), rtol=1e-12)
     assert not np.any(budget.artificial)
+    sheet = str(budget).splitlines()
+    assert sheet[0].startswith("forces on the whole fluid [N]")
+    rows = {" ".join(line.split()[:-3]): line.split()[-3:] for line in sheet[1:-1]}
+    assert set(rows) > {f"boundary '{name}'" for name in run.mesh.boundaries}
+    np.testing.assert_allclose(np.array(rows["body force"], float), budget.body, rtol=1e-3)
+    assert len({len(line) for line in sheet[:-1]}) == 1
+    share = np.linalg.norm(budget.closure) / budget.size
+    assert f"closure is {share:.2e} of the sum" in sheet[-1]
 
 
 def test_the_budget_is_made_of_the_forces() -> None:
