@@ -332,6 +332,16 @@ def test_no_unit_is_offered_in_place_of_another() -> None:
         assert "km/h" in caught.value.remedy
 
 
+@pytest.mark.parametrize("ending", ["msh", "vtu", "mesh", "vtk", "bdf"])
+def test_a_damaged_mesh_file_is_told_in_our_own_words(ending: str, tmp_path: Path) -> None:
+    path = tmp_path / f"bad.{ending}"
+    path.write_text("hello\n")
+    with pytest.raises(MeshError) as caught:
+        fv3d.read_mesh(path)
+    assert caught.value.got == f"6 bytes that are no whole '.{ending}' file"
+    assert "Exit" not in str(caught.value) and caught.value.__cause__ is None
+
+
 def test_the_failure_of_an_inlet_function_is_kept_as_cause() -> None:
     with pytest.raises(BoundaryError) as caught:
         case(boundaries=boundaries(x_min=fv3d.Inlet(no_such_column)))

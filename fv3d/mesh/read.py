@@ -151,8 +151,7 @@ def _read_raw(path: Path) -> Any:
             warnings.simplefilter("ignore")
             raw = meshio.read(path)
     except (Exception, SystemExit) as reason:
-        text = " ".join(said.getvalue().split()) or str(reason)
-        failure = f"{type(reason).__name__}: {text[:300]}"
+        failure, remedy = _failure(path, reason)
     else:
         text = " ".join(said.getvalue().split())
         if "cannot handle" in text:                    # such elements were left out
@@ -165,9 +164,21 @@ def _read_raw(path: Path) -> Any:
         raise MeshError("The kind of the mesh file is not known.", where=str(path),
                         got=f"ending '{path.suffix}'",
                         remedy=f"Use one of {', '.join(known)}.")
-    raise MeshError("The mesh file cannot be read.", where=str(path), got=failure,
-                    remedy="The file is damaged, cut off or not what its ending says: write it "
-                           "again from the mesher.")
+    raise MeshError("The mesh file cannot be read.", where=str(path), got=failure, remedy=remedy)
+
+
+def _failure(path: Path, reason: BaseException) -> tuple[str, str]:
+    """What was got and what to do, in our own words, where the file could not be read."""
+    if isinstance(reason, ImportError):
+        return (f"no Python package '{reason.name}', which this kind of file needs",
+                f"Install it (pip install {reason.name}) or export another kind of file.")
+    if isinstance(reason, PermissionError):
+        return "no permission to read the file", "Ask for it, or copy the file."
+    if isinstance(reason, MemoryError):
+        return f"{path.stat().st_size} bytes, too many for the memory", "Use a larger machine."
+    return (f"{path.stat().st_size} bytes that are no whole '{path.suffix}' file",
+            "The file is damaged, cut off or not what its ending says: write it again from the "
+            "mesher.")
 
 
 def _checked_points(points: Any, source: str) -> np.ndarray:
