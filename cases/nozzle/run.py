@@ -19,11 +19,11 @@ RADIUS = 0.00075 # [m], chosen by choose.py
 GAIN = None      # 5 local speed / radius, chosen by choose.py
 
 
-def solve(mesh: fv3d.Mesh, used: fv3d.Readings) -> tuple[fv3d.Run, fv3d.Run]:
+def solve(mesh: fv3d.Mesh, around: fv3d.Readings) -> tuple[fv3d.Run, fv3d.Run]:
     """The plain and the guided run."""
     case = make_case(mesh)
     plain = fv3d.solve_steady(case, tolerance=1e-6, max_iterations=2000, progress=False)
-    law = fv3d.Feedback(used, radius=RADIUS, gain=GAIN)
+    law = fv3d.Feedback(around, radius=RADIUS, gain=GAIN)
     guided = fv3d.solve_steady(case, sources=[law], start=plain, tolerance=1e-6,
                                max_iterations=2000, progress=False)
     print(plain, guided, sep="\n")
@@ -73,9 +73,10 @@ def figures() -> dict[str, float]:
     readings = fv3d.read_readings(HERE / "readings.csv")
     used, withheld = readings.split(
         withheld=[group for group in readings.groups if group.startswith("set")])
+    around = fv3d.read_readings(HERE / "fed_around.csv")  # the same twelve, on circles
     mesh = sector(core=4)
-    plain, guided = solve(mesh, used)
-    comparison = fv3d.compare([plain, guided], withheld, fed=used)
+    plain, guided = solve(mesh, around)
+    comparison = fv3d.compare([plain, guided], withheld, fed=around)
     print(comparison)
     print_force(guided)
     profiles = between_profiles(used, withheld) - withheld.component_value

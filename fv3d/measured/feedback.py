@@ -30,8 +30,7 @@ from .readings import Readings, linearised_direction, predict
 
 REFRESH_EARLY = (0, 2, 5, 10, 20)  # responses are renewed at these iterations,
 REFRESH_EVERY = 30                 # then at every multiple of this
-TURNED_AT = (0, 1, 2, 10, 30, 60)  # iterations at which a speed reading's direction follows,
-TURNED_LEAST = 0.5                 # unless it has turned further than this cosine
+TURNED_AT = (0, 1, 2, 10, 30, 60)  # iterations at which a speed reading's direction follows
 BITES_FROM = 3.0                   # gain * radius / speed above which passing fluid is corrected
 
 
@@ -194,15 +193,15 @@ def _turned(own: FeedbackState, problem: Problem, state: State) -> FeedbackState
     """Directions of speed readings brought up to date, at a few iterations only.
 
     A direction that followed the field in every iteration would turn the strength it has gathered
-    with it, and a speed well below the computed one would never be reached.
+    with it, and a speed well below the computed one would never be reached.  The strength keeps
+    its part along the new direction.
     """
     if own.count not in TURNED_AT:
         return own
     velocity = own.layout.sample(problem, state.velocity, state.boundary_velocity)
     fresh = linearised_direction(own.readings, velocity)
-    still = np.abs(own.direction).max(axis=1) == 0
-    near = np.einsum("ij,ij->i", fresh, own.direction) > TURNED_LEAST
-    return replace(own, direction=np.where((still | near)[:, None], fresh, own.direction))
+    kept = np.einsum("ij,ij->i", fresh, own.direction)
+    return replace(own, direction=fresh, strength=own.strength * kept)
 
 
 def local_speed(readings: Readings, velocity: np.ndarray) -> np.ndarray:
