@@ -6,8 +6,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from ..errors import expect_run
 from ..flow.equations import surface_gradient
 from ..flow.run import Run
+from ..operators.interpolation import checked_points
 from .diagnostics import force, net_artificial_force
 
 USABLE_BELOW = 0.10  # share of the body's force and of the dissipation (our choice, no source)
@@ -109,6 +111,8 @@ def force_budget(run: Run, body: str = "", *,
     CaseError
         No such boundary.
     """
+    expect_run(run, "force_budget(run, body)")
+    about = checked_points(centre, "force_budget(centre=)")[0]
     mesh, density = run.mesh, run.case.fluid.density
     volume = mesh.cell_volume
     moving = run.artificial_force
@@ -116,13 +120,13 @@ def force_budget(run: Run, body: str = "", *,
         cell, face = run.force_potential
         slope = run.problem.velocity_gradient(cell, face[mesh.n_internal:])
         moving = moving - surface_gradient(run.problem, face, slope)
-    arm = mesh.cell_centre - np.asarray(centre)
+    arm = mesh.cell_centre - about
     moment = density * np.einsum("ci,c->i", np.cross(arm, moving), volume)
     power = density * float(np.einsum("ci,ci,c->", moving, run.velocity, volume))
     raw = density * np.einsum("ci,c->i", run.artificial_force, volume)
     whole = float(np.einsum("ci,ci,c->", run.artificial_force, run.artificial_force, volume))
     part = float(np.einsum("ci,ci,c->", moving, moving, volume))
-    return ForceBudget(net_artificial_force(run), raw, moment, np.asarray(centre, dtype=float),
+    return ForceBudget(net_artificial_force(run), raw, moment, about,
                        power, _dissipation(run), _volume_share(run),
                        part / whole if whole > 0 else 0.0, body,
                        force(run, body).total if body else np.zeros(3))
