@@ -8,6 +8,7 @@ both sides of a face see the same values on it.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import scipy.sparse as sparse
@@ -41,7 +42,7 @@ class _Location:
     share: np.ndarray
 
 
-def checked_points(points: np.ndarray, where: str) -> np.ndarray:
+def checked_points(points: Any, where: str) -> np.ndarray:
     """(n, 3) finite float array, or CaseError."""
     try:
         array = np.atleast_2d(np.asarray(points, dtype=float))
