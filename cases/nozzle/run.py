@@ -15,7 +15,7 @@ from scipy.interpolate import PchipInterpolator
 
 import fv3d
 
-RADIUS = 0.00075 # [m], chosen by choose.py
+RADIUS = 0.001   # [m], chosen by choose.py
 GAIN = None      # 5 local speed / radius, chosen by choose.py
 
 
