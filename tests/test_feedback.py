@@ -166,9 +166,6 @@ def test_iterations_stay_near_those_of_the_plain_run(law: Law, kind: str) -> Non
     assert max(count) <= 1.2 * bare, (count, bare)
 
 
-@pytest.mark.xfail(raises=fv3d.DivergenceError, reason=(
-    "the divergence-free part of one of these single-cell forces moves its own reading backwards "
-    "(eigenvalue -0.4 of the projected kernels at the readings)"))
 def test_single_cells_on_four_skewed_tetrahedra_across_the_duct() -> None:
     """Too coarse a mesh for the law; its instability is not excused by that."""
     mesh = box((0, 0, 0), (2, 1, 1), cells=(6, 4, 4), tetra=True, skew=0.1)

@@ -36,8 +36,8 @@ class PressureResponse:
 
     @property
     def skewed(self) -> bool:
-        """Whether the mesh is too skewed for full pressure corrections."""
-        return self.whole > SKEWED_FROM
+        """Whether full pressure corrections may overshoot: skewed hexahedra, tetrahedra."""
+        return self.whole > SKEWED_FROM or not self.decoupled
 
     def share(self, coupling: SIMPLE | SIMPLEC) -> float:
         """Share of a pressure correction to add with this coupling.
@@ -58,7 +58,7 @@ class PressureResponse:
 
         The pair damps answers between a third of the largest and the largest to a fifth.
         """
-        return () if self.skewed or not self.decoupled else (1.1 / self.fine, 2.0 / self.fine)
+        return () if self.skewed else (1.1 / self.fine, 2.0 / self.fine)
 
 
 def pressure_response(problem: Problem, *, steps: int = 12) -> PressureResponse:
