@@ -14,8 +14,8 @@ from rig import HERE, make_case, sector
 
 import fv3d
 
-RADII = (0.0005, 0.00075, 0.001, 0.0015)  # [m]
-GAINS = (300.0, 1000.0, None)             # [1/s]; None: 5 local speed / radius
+RADII = (0.0005, 0.00075, 0.001, 0.0015, 0.002, 0.003)  # [m]
+GAINS = (300.0, 1000.0, None)  # [1/s]; None: 5 local speed / radius
 
 
 def left_out(case: fv3d.Case, plain: fv3d.Run, fed: fv3d.Readings, around: fv3d.Readings, *,

@@ -15,8 +15,8 @@ from scipy.interpolate import PchipInterpolator
 
 import fv3d
 
-RADIUS = 0.001   # [m], chosen by choose.py
-GAIN = None      # 5 local speed / radius, chosen by choose.py
+RADIUS = 0.0015  # [m], chosen by choose.py
+GAIN = None       # 5 local speed / radius, chosen by choose.py
 
 
 def solve(mesh: fv3d.Mesh, around: fv3d.Readings) -> tuple[fv3d.Run, fv3d.Run]:
