@@ -1,10 +1,10 @@
 """The converged field must not depend on the relaxation nor on the coupling.
 
 SIMPLE and SIMPLEC with the relaxations 0.5, 0.7 and 0.9, on the plane cylinder and on the duct
-with the strut (plain and with feedback).  For each family of six runs:
-the largest difference of any cell's velocity from that of the first run, over the largest speed,
-and the largest summed mass imbalance over the inflow.  Takes some minutes on one core; with ``--tetra``
-the same families on tetrahedra are run and printed too, which takes half an hour.
+with the strut (plain and with feedback).  For each family of six runs: the largest difference of
+any cell's velocity from that of the first run, over the largest speed, and the largest summed mass
+imbalance over the inflow.  Takes some minutes on one core; with ``--tetra`` the same families on
+tetrahedra are run and printed too, which takes half an hour.
 """
 
 from __future__ import annotations
