@@ -39,25 +39,31 @@ from .operators.fluxes import Blended, Central, SecondOrderUpwind, Upwind
 from .operators.gradient import GreenGauss, LeastSquares
 from .operators.kernels import get_threads, set_threads
 from .operators.linear import ByAnisotropy, Classical, SmoothedAggregation
+from .results.coefficients import ForceCoefficients, Reference, force_coefficients
 from .results.diagnostics import BoundaryForce, MomentumBudget, force, momentum_budget
 from .results.files import write_history, write_readings, write_vtk
+from .results.flow_rates import FlowSplit, flow_rate, flow_split
 from .results.force_budget import ForceBudget, force_budget
 from .results.pictures import picture, picture_readings
+from .results.profiles import Profile, profile
+from .results.walls import Reversals, shear_reversals, wall_shear, write_surface
 from .signals import Estimate, dominant_frequency, lag, mean_value, strouhal_number
 
 __all__ = [
     "SIMPLE", "SIMPLEC", "Blended", "BoundaryError", "BoundaryForce", "ByAnisotropy", "Case",
-    "CaseError", "Central", "Classical", "Comparison", "DivergenceError", "Estimate",
-    "Feedback", "FileError", "Fluid", "ForceBudget", "ForceMonitor", "Fv3dError", "Fv3dWarning",
-    "GlobalStep", "GreenGauss", "Inlet", "LeastSquares", "LocalStep", "Mesh", "MeshError",
-    "MomentumBudget", "Numerics", "OneSided", "Outcome", "Outlet", "PointMonitor",
-    "ReadingError", "Readings", "Run", "SecondOrderUpwind", "Slip", "SmoothedAggregation",
-    "Spacing", "Symmetry", "TwoSided", "Uniform", "Upwind", "Wall", "backward_step",
-    "boundary_map", "box", "build_mesh", "channel_with_block", "channel_with_cylinder",
-    "check_mesh", "compare", "dominant_frequency", "force", "force_budget", "get_threads",
+    "CaseError", "Central", "Classical", "Comparison", "DivergenceError", "Estimate", "Feedback",
+    "FileError", "FlowSplit", "Fluid", "ForceBudget", "ForceCoefficients", "ForceMonitor",
+    "Fv3dError", "Fv3dWarning", "GlobalStep", "GreenGauss", "Inlet", "LeastSquares", "LocalStep",
+    "Mesh", "MeshError", "MomentumBudget", "Numerics", "OneSided", "Outcome", "Outlet",
+    "PointMonitor", "Profile", "ReadingError", "Readings", "Reference", "Reversals", "Run",
+    "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided",
+    "Uniform", "Upwind", "Wall", "backward_step", "boundary_map", "box", "build_mesh",
+    "channel_with_block", "channel_with_cylinder", "check_mesh", "compare", "dominant_frequency",
+    "flow_rate", "flow_split", "force", "force_budget", "force_coefficients", "get_threads",
     "iterate", "lag", "mean_value", "mixed_box", "moist_air", "momentum_budget", "nozzle",
-    "observe", "picture", "picture_readings", "pipe", "pyramid_box", "quality", "read_mesh",
-    "read_readings", "set_threads", "skewed", "solve_pseudo_transient", "solve_steady",
-    "solve_transient", "strouhal_number", "water", "wedge_box", "write_history", "write_mesh",
-    "write_readings", "write_vtk",
+    "observe", "picture", "picture_readings", "pipe", "profile", "pyramid_box", "quality",
+    "read_mesh", "read_readings", "set_threads", "shear_reversals", "skewed",
+    "solve_pseudo_transient", "solve_steady", "solve_transient", "strouhal_number", "wall_shear",
+    "water", "wedge_box", "write_history", "write_mesh", "write_readings", "write_surface",
+    "write_vtk",
 ]

@@ -41,7 +41,7 @@ def flat_regions(points: np.ndarray, faces: np.ndarray, *, feature_angle: float)
                         got=feature_angle, remedy="Give degrees between 0 and 180.")
     area, centre = _areas(points, faces)
     size = np.linalg.norm(area, axis=1)
-    one, other = _edge_pairs(faces)
+    one, other = edge_pairs(faces)
     cosine = np.einsum("ij,ij->i", area[one], area[other]) / (size[one] * size[other])
     smooth = cosine > np.cos(np.radians(feature_angle))
     graph = sparse.coo_matrix((np.ones(np.count_nonzero(smooth), dtype=np.int8),
@@ -151,7 +151,7 @@ def _areas(points: np.ndarray, faces: np.ndarray) -> tuple[np.ndarray, np.ndarra
     return area, np.where(three, (a + b + c) / 3.0, (a + b + c + d) / 4.0)
 
 
-def _edge_pairs(faces: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def edge_pairs(faces: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Both faces of every edge that belongs to exactly two."""
     three = faces[:, 3] < 0
     ring = faces.astype(np.int64)

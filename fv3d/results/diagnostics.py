@@ -42,18 +42,18 @@ class BoundaryForce:
                           row("total", self.total), row("moment", self.moment) + "  [N m]"])
 
 
-def boundary_faces(run: Run, name: str) -> slice:
-    """Faces of a boundary of the run's mesh.
+def boundary_faces(run: Run, name: str, *, where: str = "force(run, name)") -> slice:
+    """Faces of a boundary of the run's mesh; ``where`` shows the call in messages.
 
     Raises
     ------
     CaseError
         No such boundary, or no run.
     """
-    expect_run(run, "force(run, name)")
+    expect_run(run, where)
     known = list(run.mesh.boundaries)
     if name not in known:
-        raise CaseError("No such boundary.", where="force(run, name)", got=repr(name),
+        raise CaseError("No such boundary.", where=where, got=repr(name),
                         remedy=f"The mesh has: {', '.join(known)}.{did_you_mean(name, known)}")
     return run.mesh.boundaries[name]
 
@@ -85,7 +85,7 @@ def force(run: Run, name: str, *, centre: Sequence[float] = (0.0, 0.0, 0.0)) -> 
     mesh, n = run.mesh, run.mesh.n_internal
     rows = slice(faces.start - n, faces.stop - n)
     push = pressure_force(run)[rows]
-    drag = -_traction(run)[rows]
+    drag = friction_force(run)[rows]
     about = checked_points(np.asarray(centre), "force(centre=)")[0]
     arm = mesh.face_centre[faces] - about
     return BoundaryForce(name, push.sum(axis=0), drag.sum(axis=0),
@@ -96,6 +96,11 @@ def pressure_force(run: Run) -> np.ndarray:
     """(n_boundary, 3) pressure force of the fluid on each boundary face [N]."""
     mesh, n = run.mesh, run.mesh.n_internal
     return (run.face_pressure[n:, None] * mesh.face_area[n:] + run.pressure_fields.warp_force[n:])
+
+
+def friction_force(run: Run) -> np.ndarray:
+    """(n_boundary, 3) viscous force of the fluid on each boundary face [N]."""
+    return -_traction(run)
 
 
 def _traction(run: Run) -> np.ndarray:

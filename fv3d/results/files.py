@@ -44,12 +44,12 @@ def write_vtk(run: Any, path: PathLike) -> Path:
         The folder does not exist, the file cannot be written, or another ending.
     """
     expect_run(run, "write_vtk(run, path)")
-    target = _target(path, (".vtu",))
+    target = target_path(path, (".vtu",))
     grid = vtk_grid(run.mesh, cell_data={
         "velocity": run.velocity, "pressure": run.pressure,
         "vorticity": vorticity(run.velocity_gradient()),
         "artificial_force": run.artificial_force})
-    return write_aside(target, lambda aside: _write_xml(grid, aside))
+    return write_aside(target, lambda aside: write_xml(grid, aside))
 
 
 def write_readings(readings: Readings, path: PathLike, *, run: Any = None) -> Path:
@@ -78,7 +78,7 @@ def write_readings(readings: Readings, path: PathLike, *, run: Any = None) -> Pa
     """
     import pyvista as pv
     expect_readings(readings, "write_readings(readings, path)")
-    target = _target(path, (".vtp", ".vtu"))
+    target = target_path(path, (".vtp", ".vtu"))
     row = readings.component_place
     points = pv.PolyData(np.array(readings.point[row]))
     data = points.point_data
@@ -93,7 +93,7 @@ def write_readings(readings: Readings, path: PathLike, *, run: Any = None) -> Pa
     data["name"] = np.array([readings.name[k] for k in row])
     data["group"] = np.array([readings.group[k] for k in row])
     whole = points.cast_to_unstructured_grid() if target.suffix == ".vtu" else points
-    return write_aside(target, lambda aside: _write_xml(whole, aside))
+    return write_aside(target, lambda aside: write_xml(whole, aside))
 
 
 def write_history(run: Any, path: PathLike) -> Path:
@@ -114,7 +114,7 @@ def write_history(run: Any, path: PathLike) -> Path:
         The folder does not exist, the file cannot be written, or another ending.
     """
     expect_run(run, "write_history(run, path)")
-    target = _target(path, (".csv",))
+    target = target_path(path, (".csv",))
     columns = {name: np.asarray(column).tolist() for name, column in run.history.items()}
 
     def write(aside: Path) -> None:
@@ -162,7 +162,7 @@ def file_order(mesh: Mesh) -> np.ndarray:
     return np.argsort(mesh.file_index)
 
 
-def _write_xml(data: Any, path: Path) -> None:
+def write_xml(data: Any, path: Path) -> None:
     """Write a VTK data set in its XML format, binary and compressed."""
     from vtkmodules.vtkIOXML import vtkXMLPolyDataWriter, vtkXMLUnstructuredGridWriter
     writer = vtkXMLPolyDataWriter() if path.suffix == ".vtp" else vtkXMLUnstructuredGridWriter()
@@ -172,7 +172,14 @@ def _write_xml(data: Any, path: Path) -> None:
         raise OSError(f"the VTK writer stopped with error {writer.GetErrorCode()}")
 
 
-def _target(path: PathLike, endings: tuple[str, ...]) -> Path:
+def target_path(path: PathLike, endings: tuple[str, ...]) -> Path:
+    """The path of a file to write, its ending and its folder checked.
+
+    Raises
+    ------
+    FileError
+        Another ending, no path, a folder that is missing or closed.
+    """
     target = as_path(path)
     if target.suffix.lower() not in endings:
         raise FileError("The ending of the file does not fit what is written.", where=str(target),
