@@ -53,7 +53,8 @@ class Feedback:
     Raises
     ------
     ReadingError
-        No velocity reading, a value that is not a number, or readings resolved in time.
+        No velocity reading, a value that is not a number; from the steady verbs also for readings
+        resolved in time, whose ``mean()`` can be fed there.
     CaseError
         A gain or radius that is negative or not finite.
     """
@@ -78,10 +79,6 @@ class Feedback:
             raise ReadingError("Only velocities can be fed, and there are none.",
                                where="Feedback(readings)", got=f"{len(self.readings)} places",
                                remedy="Give u, v, w, speed or along readings.")
-        if np.isfinite(fed.time).any():
-            raise ReadingError("Readings resolved in time cannot be fed to a steady iteration.",
-                               where="Feedback(readings)", got="a column 'time'",
-                               remedy="Feed their mean values without the time column.")
         if not np.all(np.isfinite(fed.component_value)):
             bad = int(np.flatnonzero(~np.isfinite(fed.component_value))[0])
             raise ReadingError("A fed reading is not a number.", where="Feedback(readings)",
@@ -95,6 +92,11 @@ class Feedback:
 
     def start(self, problem: Problem, state: State, earlier: Any) -> FeedbackState:
         """Kernels, gains and zero strengths (or those of an earlier run with this law)."""
+        if self.readings.timed:
+            raise ReadingError("Readings resolved in time cannot be fed to an iteration, whose "
+                               "steps are no time.", where="solve_steady(sources=)",
+                               got="readings with a column 'time'",
+                               remedy="Feed readings.mean(), or use solve_transient.")
         fed = self.readings.velocity_only()
         layout = make_layout(problem, fed, self.kernel)
         velocity = layout.sample(problem, state.velocity, state.boundary_velocity)

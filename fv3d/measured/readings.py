@@ -14,9 +14,10 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from ..errors import CaseError, ReadingError, did_you_mean, expect_readings, expect_run
+from ..errors import CaseError, ReadingError, as_number, did_you_mean, expect_readings, expect_run
 from ..mesh.mesh import Mesh
 from ..operators.interpolation import points_inside
+from .axes import named_axes, placing
 from .quantities import COMPONENT, PRESSURE, SPEED, Component, Pressure, Quantity, Speed
 from .table import AXIS_DIRECTION, DIRECTION, PLACE, VALUES, Table, read_table
 
@@ -29,7 +30,7 @@ class Readings:
 
     Parameters
     ----------
-    table : path or DataFrame
+    table, places : path or DataFrame
         As for :func:`read_readings`.
 
     Attributes
@@ -61,8 +62,9 @@ class Readings:
     component_value: np.ndarray
     component_std: np.ndarray
 
-    def __init__(self, table: str | os.PathLike[str] | pandas.DataFrame) -> None:
-        _fill(self, **_components(read_table(table)))
+    def __init__(self, table: str | os.PathLike[str] | pandas.DataFrame, *,
+                 places: str | os.PathLike[str] | pandas.DataFrame | None = None) -> None:
+        _fill(self, **_components(read_table(table, places=places)))
 
     def __len__(self) -> int:
         return len(self.name)
@@ -119,7 +121,7 @@ class Readings:
         rows = np.flatnonzero(places)
         number = np.full(len(self), -1)
         number[rows] = np.arange(len(rows))
-        return _changed(self, point=self.point[rows], name=tuple(self.name[k] for k in rows),
+        return changed(self, point=self.point[rows], name=tuple(self.name[k] for k in rows),
                         group=tuple(self.group[k] for k in rows), time=self.time[rows],
                         component_place=number[self.component_place[keep]],
                         component_quantity=self.component_quantity[keep],
@@ -170,7 +172,7 @@ class Readings:
             raise ReadingError("New values do not fit the readings.", where="with_values",
                                got=f"shape {values.shape}, {int(np.isinf(values).sum())} infinite",
                                remedy=f"Give {self.n_components} finite values.")
-        return _changed(self, component_value=values)
+        return changed(self, component_value=values)
 
     def placed(self, *, rotation: Any = None, shift: Sequence[float] = (0.0, 0.0, 0.0),
                scale: float = 1.0) -> Readings:
@@ -191,10 +193,33 @@ class Readings:
         ReadingError
             The rotation is no rotation, or shift or scale cannot be used.
         """
-        matrix, offset = _placing(rotation, shift, scale)
-        direction, sign = _named_axes(self.component_direction @ matrix.T)
-        return _changed(self, point=scale * self.point @ matrix.T + offset,
+        matrix, offset = placing(rotation, shift, scale)
+        direction, sign = named_axes(self.component_direction @ matrix.T)
+        return changed(self, point=scale * self.point @ matrix.T + offset,
                         component_direction=direction, component_value=sign * self.component_value)
+
+    @property
+    def timed(self) -> bool:
+        """Whether the readings are resolved in time."""
+        return bool(np.isfinite(self.time).any())
+
+    def mean(self) -> Readings:
+        """Means of readings resolved in time, each place once; others as they are.
+
+        The uncertainty joins that of the mean of a correlated record with the instrument's, see
+        :func:`fv3d.measured.records.mean_readings`.
+
+        Raises
+        ------
+        ReadingError
+            Readings of one name at different places.
+        """
+        from .records import mean_readings
+        return mean_readings(self)
+
+    def delayed(self, seconds: float) -> Readings:
+        """The same readings on a clock that shows this much more [s]."""
+        return changed(self, time=self.time + as_number(seconds))
 
     def frame(self) -> pandas.DataFrame:
         """One row per component, in SI: place, quantity, direction, value and std."""
@@ -211,7 +236,8 @@ class Readings:
         return pd.DataFrame(columns)
 
 
-def read_readings(source: str | os.PathLike[str] | pandas.DataFrame) -> Readings:
+def read_readings(source: str | os.PathLike[str] | pandas.DataFrame, *,
+                  places: str | os.PathLike[str] | pandas.DataFrame | None = None) -> Readings:
     """Readings of a CSV file or a DataFrame; units stand in the header.
 
     Parameters
@@ -221,6 +247,10 @@ def read_readings(source: str | os.PathLike[str] | pandas.DataFrame) -> Readings
         each with its standard deviation beside it (``u_std [m/s]``); ``nx, ny, nz`` with
         ``along``; ``name``, ``group`` and ``time [s]`` as wanted.  An empty cell means that
         nothing was measured.  Other units: see :mod:`fv3d.measured.units`.
+        A reading resolved in time repeats its name, place and group in one row per time.
+    places : path or DataFrame, optional
+        For a source with one row per time and one column per value, such as ``time [s],
+        rake 1 u [m/s]``: the table of places, see :mod:`fv3d.measured.wide`.
 
     Returns
     -------
@@ -231,7 +261,7 @@ def read_readings(source: str | os.PathLike[str] | pandas.DataFrame) -> Readings
     ReadingError
         The table cannot be used: what, which row and column, what was got, what to do.
     """
-    return Readings(source)
+    return Readings(source, places=places)
 
 
 def predict(readings: Readings, velocity: np.ndarray, *, pressure: np.ndarray) -> np.ndarray:
@@ -315,11 +345,12 @@ def _fill(readings: Readings, **parts: Any) -> None:
         object.__setattr__(readings, key, part)
 
 
-def _changed(readings: Readings, **parts: Any) -> Readings:
-    changed = object.__new__(Readings)
+def changed(readings: Readings, **parts: Any) -> Readings:
+    """The same readings with some attributes replaced."""
+    fresh = object.__new__(Readings)
     kept = {key: getattr(readings, key) for key in Readings.__dataclass_fields__}
-    _fill(changed, **(kept | parts))
-    return changed
+    _fill(fresh, **(kept | parts))
+    return fresh
 
 
 def _components(table: Table) -> dict[str, Any]:
@@ -340,48 +371,10 @@ def _components(table: Table) -> dict[str, Any]:
             with np.errstate(invalid="ignore"):
                 direction[:, k] = given / np.linalg.norm(given, axis=1)[:, None]
     row, column_of = np.nonzero(~np.isnan(value))
-    turned, sign = _named_axes(direction[row, column_of])
+    turned, sign = named_axes(direction[row, column_of])
     return {"point": np.stack([numbers[axis] for axis in PLACE], axis=1),
             "name": table.name, "group": table.group,
             "time": numbers.get("time", np.full(n, np.nan)),
             "component_place": row, "component_quantity": kind[column_of],
             "component_direction": turned, "component_value": sign * value[row, column_of],
             "component_std": std[row, column_of]}
-
-
-def _named_axes(direction: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Directions (m, 3) within rounding of plus or minus an axis become that axis; and the sign."""
-    direction = direction.copy()
-    sign = np.ones(len(direction))
-    for unit_vector in AXIS_DIRECTION.values():
-        share = direction @ np.array(unit_vector)
-        across = np.linalg.norm(direction - share[:, None] * np.array(unit_vector), axis=1)
-        near = across < 1e-12
-        direction[near] = unit_vector
-        sign[near & (share < 0)] = -1.0
-    return direction, sign
-
-
-def _placing(rotation: Any, shift: Any, scale: Any) -> tuple[np.ndarray, np.ndarray]:
-    if rotation is None:
-        rotation = np.eye(3)
-    matrix = rotation.as_matrix() if hasattr(rotation, "as_matrix") else rotation
-    try:
-        matrix = np.array(matrix, dtype=np.float64)
-        offset = np.array(shift, dtype=np.float64)
-        factor = float(scale)
-    except (TypeError, ValueError):
-        raise ReadingError("Rotation, shift and scale must be numbers.", where="placed",
-                           got=f"{rotation!r}, {shift!r}, {scale!r}",
-                           remedy="Give a 3 x 3 matrix, three lengths and a factor.") from None
-    if matrix.shape != (3, 3) or not np.allclose(matrix @ matrix.T, np.eye(3), atol=1e-6) \
-            or not np.linalg.det(matrix) > 0:
-        raise ReadingError("The rotation is no rotation.", where="placed(rotation=...)",
-                           got=np.round(matrix, 6).tolist(),
-                           remedy="Give an orthonormal right-handed 3 x 3 matrix; a mirrored axis "
-                                  "is turned round in the table.")
-    if offset.shape != (3,) or not np.isfinite(offset).all() or not 0 < factor < np.inf:
-        raise ReadingError("Shift or scale cannot be used.", where="placed",
-                           got=f"shift {np.asarray(shift).tolist()}, scale {factor:g}",
-                           remedy="Give three finite lengths [m] and a positive factor.")
-    return matrix, offset

@@ -54,7 +54,7 @@ class Table:
         return f"{self.source}, row {row + 1} ('{self.name[row]}'), column '{column}'"
 
 
-def read_table(source: Any) -> Table:
+def read_table(source: Any, *, places: Any = None) -> Table:
     """Read and check a table of readings.
 
     Parameters
@@ -62,12 +62,33 @@ def read_table(source: Any) -> Table:
     source : path or DataFrame
         A text table separated by commas, semicolons or tabs (lines starting with ``#`` are
         skipped), or a DataFrame with the same column names.
+    places : path or DataFrame, optional
+        Places of a ``source`` with one column per value, see :mod:`fv3d.measured.wide`.
 
     Raises
     ------
     ReadingError
         Anything that cannot be used, with file, row and column.
     """
+    where, header, rows = read_cells(source)
+    if places is not None:
+        from .wide import long_form
+        header, rows = long_form(header, rows, places=read_cells(places), where=where)
+    rows = [row for row in rows if not all(is_empty(cell) for cell in row)]
+    columns = _read_header(header, where)
+    if not rows:
+        raise ReadingError("The table holds no readings.", where=where, got="no rows",
+                           remedy=f"Add one row per place below the header, such as {EXAMPLE}.")
+    table = _read_cells(columns, rows, where)
+    _check_names(table)
+    _check_places(table)
+    _check_values(table)
+    _check_directions(table)
+    return table
+
+
+def read_cells(source: Any) -> tuple[str, list[str], list[list[Any]]]:
+    """Words for the source, header cells and rows of cells, unchecked."""
     if isinstance(source, (str, os.PathLike)):
         where = os.path.basename(os.fspath(source))
         header, rows = _read_text(os.fspath(source))
@@ -79,17 +100,7 @@ def read_table(source: Any) -> Table:
         raise ReadingError("Readings are made from a file or a DataFrame.",
                            where="the argument of Readings or read_readings",
                            got=type(source).__name__, remedy=f"Give a table with {EXAMPLE}.")
-    rows = [row for row in rows if not all(_is_empty(cell) for cell in row)]
-    columns = _read_header(header, where)
-    if not rows:
-        raise ReadingError("The table holds no readings.", where=where, got="no rows",
-                           remedy=f"Add one row per place below the header, such as {EXAMPLE}.")
-    table = _read_cells(columns, rows, where)
-    _check_names(table)
-    _check_places(table)
-    _check_values(table)
-    _check_directions(table)
-    return table
+    return where, header, rows
 
 
 def _read_text(path: str) -> tuple[list[str], list[list[Any]]]:
@@ -187,7 +198,7 @@ def _check_columns(columns: list[str], where: str) -> None:
                            remedy="Give along, along_std, nx, ny and nz, or none of them.")
 
 
-def _is_empty(cell: Any) -> bool:
+def is_empty(cell: Any) -> bool:
     """An empty text cell, or the missing value of a DataFrame."""
     if isinstance(cell, str):
         return not cell.strip()
@@ -198,7 +209,7 @@ def _read_cells(columns: list[tuple[str, float]], rows: list[list[Any]], where: 
     texts: dict[str, list[str]] = {}
     for k, (column, _) in enumerate(columns):
         if column in TEXT:
-            texts[column] = ["" if _is_empty(row[k]) else str(row[k]).strip() for row in rows]
+            texts[column] = ["" if is_empty(row[k]) else str(row[k]).strip() for row in rows]
     given = texts.get("name", [""] * len(rows))
     name = tuple(text or f"reading {row + 1}" for row, text in enumerate(given))
     group = tuple(text or own for text, own in
@@ -212,7 +223,7 @@ def _read_cells(columns: list[tuple[str, float]], rows: list[list[Any]], where: 
 
 
 def _number(cell: Any, table: Table, row: int, column: str) -> float:
-    if _is_empty(cell):
+    if is_empty(cell):
         return math.nan
     try:
         if isinstance(cell, str) and "_" in cell:
@@ -284,6 +295,7 @@ def _check_values(table: Table) -> None:
             raise ReadingError("A speed is negative.", where=table.cell(row, column),
                                got=f"{value[row]:g} m/s",
                                remedy="Use u, v, w or along for a component with a sign.")
+    held |= np.isfinite(table.numbers.get("time", np.full(len(held), math.nan)))  # a lost sample
     row = _first(~held)
     if row is not None:
         raise ReadingError("A reading carries no value.", where=table.cell(row, "name"),
