@@ -102,3 +102,29 @@ def test_the_global_random_state_is_left_alone() -> None:
     before = np.random.get_state()[1].copy()  # noqa: NPY002
     linear.prepare(poisson(skewed(8))[0])
     np.testing.assert_array_equal(before, np.random.get_state()[1])  # noqa: NPY002
+
+
+@pytest.mark.parametrize("singular", [False, True])
+def test_small_constant_matrices_are_factorised(singular: bool) -> None:
+    """Against SciPy's conjugate gradients."""
+    matrix, rhs = poisson(skewed(6, tetra=True), singular=singular)
+    rhs = rhs - rhs.mean() if singular else rhs
+    prepared = linear.prepare_constant(matrix, singular=singular)
+    result = linear.solve(prepared, rhs, matrix=matrix, tolerance=1e-9)
+    assert isinstance(prepared, linear.Factorised) and result.outcome.good
+    wanted, _ = sparse.linalg.cg(matrix, rhs, rtol=1e-12)
+    wanted -= wanted.mean() if singular else 0.0
+    np.testing.assert_allclose(result.solution, wanted, atol=1e-8 * np.abs(wanted).max())
+    large = linear.prepare_constant(matrix, singular=singular, direct_below=10)
+    assert isinstance(large, linear.Prepared)
+
+
+def test_a_hierarchy_is_built_again_from_its_matrices() -> None:
+    """To the last bit: what a checkpoint stores of it."""
+    matrix, rhs = poisson(skewed(8, tetra=True))
+    changed = matrix.copy()
+    changed.data *= np.exp(0.1 * np.sin(np.abs(changed.data)))
+    changed = 0.5 * (changed + changed.T).tocsr()
+    once = linear.refresh(linear.refresh(linear.prepare(matrix), 2.0 * changed), changed)
+    again = linear.refresh(linear.prepare(once.built_from[0]), once.built_from[1])
+    np.testing.assert_array_equal(once.precondition(rhs), again.precondition(rhs))

@@ -105,13 +105,16 @@ class _Level:
 class Prepared:
     """A multigrid hierarchy ready for :func:`solve`.
 
-    Work space of one solver; not for use by two threads at once.
+    ``built_from`` holds the matrix of the prolongations and that of the coarse matrices: preparing
+    with the first and refreshing with the second builds the same hierarchy again.  Work space of
+    one solver; not for use by two threads at once.
     """
 
     levels: list[_Level]
     prolongations: list[sparse.csr_matrix]
     coarse_inverse: np.ndarray
     singular: bool
+    built_from: tuple[sparse.csr_matrix, sparse.csr_matrix]
     iterations_when_fresh: int = 0
 
     def __repr__(self) -> str:
@@ -146,6 +149,18 @@ class Prepared:
                                SINGLE(0), first, direction, work, x)
         kernels.chebyshev_step(a.indptr, a.indices, a.data, level.inverse_diagonal, rhs, keep,
                                second, direction, work, x)
+
+
+@dataclass(eq=False)
+class Factorised:
+    """A triangular factorisation ready for :func:`solve`; of small matrices that stay constant."""
+
+    factors: Any
+    singular: bool
+    built_from: tuple[sparse.csr_matrix, sparse.csr_matrix]
+
+    def __repr__(self) -> str:
+        return f"Factorised({self.built_from[0].shape[0]} rows, {self.factors.nnz} entries)"
 
 
 @dataclass(frozen=True, eq=False)
@@ -192,7 +207,29 @@ def prepare(matrix: sparse.csr_matrix, *, method: Any = None, singular: bool = F
                         got=float(diagonal[bad]), remedy="Look for cells cut off from the mesh.")
     with threadpool_limits(limits=1), _fixed_randomness():
         prolongations = (method or ByAnisotropy()).prolongations(matrix)
-        return _with_coarse_matrices(matrix, prolongations, singular)
+        return _with_coarse_matrices(matrix, prolongations, singular, matrix)
+
+
+def prepare_constant(matrix: sparse.csr_matrix, *, method: Any = None, singular: bool = False,
+                     direct_below: int = 10_000) -> Prepared | Factorised:
+    """Prepare for many solutions with one matrix: factorised below a number of rows.
+
+    Parameters
+    ----------
+    matrix, method, singular
+        As in :func:`prepare`.
+    direct_below : int
+        Rows below which the matrix is factorised.
+    """
+    if matrix.shape[0] >= direct_below:
+        return prepare(matrix, method=method, singular=singular)
+    from scipy.sparse.linalg import splu
+    whole = matrix.tocsc(copy=True)
+    if singular:  # one value is held at zero; what is solved for has zero mean in the end
+        whole[0, 0] *= 2.0
+    factors = splu(whole, permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0,
+                   options={"SymmetricMode": True})
+    return Factorised(factors, singular, (matrix, matrix))
 
 
 @contextmanager
@@ -208,12 +245,13 @@ def _fixed_randomness() -> Iterator[None]:
 
 def refresh(prepared: Prepared, matrix: sparse.csr_matrix) -> Prepared:
     """New coarse matrices for a changed matrix of the same pattern, prolongations kept."""
-    return _with_coarse_matrices(matrix, prepared.prolongations, prepared.singular)
+    return _with_coarse_matrices(matrix, prepared.prolongations, prepared.singular,
+                                 prepared.built_from[0])
 
 
 def _with_coarse_matrices(matrix: sparse.csr_matrix, prolongations: list[sparse.csr_matrix],
-                          singular: bool) -> Prepared:
-    levels = []
+                          singular: bool, first: sparse.csr_matrix) -> Prepared:
+    levels, built_from = [], (first, matrix)
     for depth in range(len(prolongations) + 1):
         inverse = 1.0 / matrix.diagonal()
         last = depth == len(prolongations)
@@ -228,7 +266,7 @@ def _with_coarse_matrices(matrix: sparse.csr_matrix, prolongations: list[sparse.
             matrix = (r @ (matrix @ p)).tocsr()
     dense = matrix.toarray()
     coarse = np.linalg.pinv(0.5 * (dense + dense.T), rcond=1e-9, hermitian=True)
-    return Prepared(levels, prolongations, coarse.astype(SINGLE), singular)
+    return Prepared(levels, prolongations, coarse.astype(SINGLE), singular, built_from)
 
 
 def _single(matrix: sparse.csr_matrix) -> sparse.csr_matrix:
@@ -255,14 +293,15 @@ def _spectral_bound(matrix: sparse.csr_matrix, inverse_diagonal: np.ndarray, *,
     return min(1.05 * value, float(rows.max()))
 
 
-def solve(prepared: Prepared, rhs: np.ndarray, *, matrix: sparse.csr_matrix, tolerance: float,
-          max_iterations: int = 200, start: np.ndarray | None = None) -> LinearResult:
+def solve(prepared: Prepared | Factorised, rhs: np.ndarray, *, matrix: sparse.csr_matrix,
+          tolerance: float, max_iterations: int = 200,
+          start: np.ndarray | None = None) -> LinearResult:
     """Solve ``matrix x = rhs`` to a relative true residual.
 
     Parameters
     ----------
-    prepared : Prepared
-        Hierarchy of this or of a similar matrix.
+    prepared : Prepared or Factorised
+        Hierarchy of this or of a similar matrix; factors of this very matrix.
     rhs : (n,)
     matrix : (n, n) csr_matrix, symmetric
     tolerance : float
@@ -277,6 +316,9 @@ def solve(prepared: Prepared, rhs: np.ndarray, *, matrix: sparse.csr_matrix, tol
     x = np.zeros_like(rhs) if start is None else start.copy()
     if size == 0.0:
         return LinearResult(np.zeros_like(rhs), _linear_outcome(True, 0, 0.0, tolerance), 0, 0.0)
+    if isinstance(prepared, Factorised):
+        x = prepared.factors.solve(rhs)
+        return _checked(prepared, matrix, rhs, x, 1, tolerance)
     r = rhs - _times(matrix, x) if start is not None else rhs.copy()
     p, rz, done = np.zeros_like(rhs), 1.0, 0
     while _norm(r) > tolerance * size and done < max_iterations:
@@ -288,10 +330,15 @@ def solve(prepared: Prepared, rhs: np.ndarray, *, matrix: sparse.csr_matrix, tol
         x += step * p
         r -= step * q
         done += 1
-    r = rhs - _times(matrix, x)
-    residual = _norm(r) / size
+    return _checked(prepared, matrix, rhs, x, done, tolerance)
+
+
+def _checked(prepared: Prepared | Factorised, matrix: sparse.csr_matrix, rhs: np.ndarray,
+             x: np.ndarray, done: int, tolerance: float) -> LinearResult:
+    """Solution with its true residual; of a singular matrix the one with zero mean."""
+    residual = _norm(rhs - _times(matrix, x)) / _norm(rhs)
     if prepared.singular:
-        x -= x.mean()
+        x = x - x.mean()
     good = residual <= 1.5 * tolerance
     return LinearResult(x, _linear_outcome(good, done, residual, tolerance), done, residual)
 
