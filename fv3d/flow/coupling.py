@@ -24,6 +24,9 @@ from .problem import Force, Problem, State
 from .response import PressureResponse, pressure_response
 
 REFRESH_AT = 1.6  # solver iterations above this multiple of a fresh hierarchy's: refresh it
+FEWEST_SWEEPS, MOST_SWEEPS = 4, 16
+SWEPT_TO = 0.05  # share of the momentum residual that the sweeps may leave
+MEASURED_EARLY, MEASURED_EVERY = (0, 2, 5, 10, 20), 30  # iterations at which that is measured
 
 
 @dataclass(frozen=True)
@@ -62,6 +65,7 @@ class Workspace:
     prepared: linear.Prepared | None = None
     best_iterations: int = 0
     setups: int = 0
+    sweeps: int = FEWEST_SWEEPS
 
 
 @dataclass(frozen=True, eq=False)
@@ -134,8 +138,12 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     inertia = pseudo_inertia(problem, equation, workspace)
     relaxed = equation.rows.block.copy()
     relaxed[:, :3] += inertia[:, None]
-    sweeps = Sweeps(problem.pattern, equation.rows.data, inverse_blocks(relaxed), numerics.sweeps)
+    sweeps = Sweeps(problem.pattern, equation.rows.data, inverse_blocks(relaxed),
+                    numerics.sweeps or workspace.sweeps)
     change = sweeps(residual)
+    if numerics.sweeps is None and sweeps_are_due(state.iteration):
+        left = replace(equation.rows, block=relaxed, rhs=residual).residual(change)
+        workspace.sweeps = sweeps_needed(sweeps.count, residual, left)
     sources, misfit = [], 0.0
     for source, own in zip(problem.sources, state.sources, strict=True):
         own, change, error = source.correct(own, problem, state, change, sweeps)
@@ -155,6 +163,19 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     workspace.first_residual = workspace.first_residual or record.residual
     workspace.residual = record.residual
     return replace(state, iteration=state.iteration + 1), record
+
+
+def sweeps_are_due(iteration: int) -> bool:
+    """Whether the sweeps are measured in this iteration."""
+    return iteration in MEASURED_EARLY or iteration % MEASURED_EVERY == 0
+
+
+def sweeps_needed(count: int, before: np.ndarray, after: np.ndarray) -> int:
+    """Even number of sweeps that leaves ``SWEPT_TO`` of a residual, from what ``count`` left."""
+    left = np.einsum("ij,ij->", after, after) / max(np.einsum("ij,ij->", before, before), 1e-300)
+    per_sweep = -0.5 * np.log(max(left, 1e-30)) / count
+    wanted = np.log(1.0 / SWEPT_TO) / max(per_sweep, 1e-3)
+    return int(np.clip(2 * np.ceil(wanted / 2), FEWEST_SWEEPS, MOST_SWEEPS))
 
 
 def momentum_push(problem: Problem, fields: PressureFields, force: Force | None) -> np.ndarray:

@@ -27,6 +27,7 @@ from ..errors import CaseError, Outcome, as_number
 from ..operators.assembly import inverse_blocks
 from .boundary import BoundaryTable
 from .coupling import (
+    FEWEST_SWEEPS,
     Record,
     Sweeps,
     Workspace,
@@ -147,7 +148,7 @@ class TimeStep:
         block = equation.rows.block.copy()
         block[:, :3] += inertia[:, None]
         sweeps = Sweeps(problem.pattern, equation.rows.data, inverse_blocks(block),
-                        problem.case.numerics.sweeps)
+                        problem.case.numerics.sweeps or FEWEST_SWEEPS)
         rows = replace(equation.rows, block=block, rhs=residual)
         change = sweeps(residual)
         wanted = self.momentum_tolerance * float(np.abs(residual).sum())
