@@ -65,6 +65,7 @@ class Workspace:
     prepared: linear.Prepared | None = None
     best_iterations: int = 0
     setups: int = 0
+    projection: Any = None
     sweeps: int = FEWEST_SWEEPS
 
 
