@@ -174,6 +174,8 @@ def sweeps_are_due(iteration: int) -> bool:
 def sweeps_needed(count: int, before: np.ndarray, after: np.ndarray) -> int:
     """Even number of sweeps that leaves ``SWEPT_TO`` of a residual, from what ``count`` left."""
     left = np.einsum("ij,ij->", after, after) / max(np.einsum("ij,ij->", before, before), 1e-300)
+    if not np.isfinite(left):
+        return count
     per_sweep = -0.5 * np.log(max(left, 1e-30)) / count
     wanted = np.log(1.0 / SWEPT_TO) / max(per_sweep, 1e-3)
     return int(np.clip(2 * np.ceil(wanted / 2), FEWEST_SWEEPS, MOST_SWEEPS))
