@@ -15,7 +15,9 @@ from .errors import (
     ReadingError,
 )
 from .flow.boundary import Inlet, Outlet, Slip, Symmetry, Wall
+from .flow.developed import DevelopedProfile, developed_profile
 from .flow.fluid import Fluid, moist_air, water
+from .flow.inlets import InletTable
 from .flow.monitors import ForceMonitor, PointMonitor
 from .flow.numerics import SIMPLE, SIMPLEC, GlobalStep, LocalStep, Numerics
 from .flow.problem import Case
@@ -24,6 +26,7 @@ from .flow.steady import iterate, solve_pseudo_transient, solve_steady
 from .flow.transient import solve_transient
 from .measured.compare import Comparison, compare
 from .measured.feedback import Feedback
+from .measured.inlet import inlet_table
 from .measured.readings import Readings, observe, read_readings
 from .mesh.generate import box, mixed_box, pyramid_box, skewed, wedge_box
 from .mesh.generate_channel import channel_with_block, channel_with_cylinder
@@ -50,20 +53,21 @@ from .results.walls import Reversals, shear_reversals, wall_shear, write_surface
 from .signals import Estimate, dominant_frequency, lag, mean_value, strouhal_number
 
 __all__ = [
-    "SIMPLE", "SIMPLEC", "Blended", "BoundaryError", "BoundaryForce", "ByAnisotropy", "Case",
-    "CaseError", "Central", "Classical", "Comparison", "DivergenceError", "Estimate", "Feedback",
-    "FileError", "FlowSplit", "Fluid", "ForceBudget", "ForceCoefficients", "ForceMonitor",
-    "Fv3dError", "Fv3dWarning", "GlobalStep", "GreenGauss", "Inlet", "LeastSquares", "LocalStep",
-    "Mesh", "MeshError", "MomentumBudget", "Numerics", "OneSided", "Outcome", "Outlet",
+    "SIMPLE", "SIMPLEC", "BarthJespersen", "Blended", "BoundaryError", "BoundaryForce",
+    "ByAnisotropy", "Case", "CaseError", "Central", "Classical", "Comparison", "DevelopedProfile",
+    "DivergenceError", "Estimate", "Feedback", "FileError", "FlowSplit", "Fluid", "ForceBudget",
+    "ForceCoefficients", "ForceMonitor", "Fv3dError", "Fv3dWarning", "GlobalStep", "GreenGauss",
+    "Inlet", "InletTable", "LeastSquares", "LimitedUpwind", "LocalStep", "Mesh", "MeshError",
+    "MichalakOllivierGooch", "MomentumBudget", "Numerics", "OneSided", "Outcome", "Outlet",
     "PointMonitor", "Profile", "ReadingError", "Readings", "Reference", "Reversals", "Run",
     "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided",
     "Uniform", "Upwind", "Wall", "backward_step", "boundary_map", "box", "build_mesh",
-    "channel_with_block", "channel_with_cylinder", "check_mesh", "compare", "dominant_frequency",
-    "flow_rate", "flow_split", "force", "force_budget", "force_coefficients", "get_threads",
-    "iterate", "lag", "mean_value", "mixed_box", "moist_air", "momentum_budget", "nozzle",
-    "observe", "picture", "picture_readings", "pipe", "profile", "pyramid_box", "quality",
-    "read_mesh", "read_readings", "set_threads", "shear_reversals", "skewed",
-    "solve_pseudo_transient", "solve_steady", "solve_transient", "strouhal_number", "wall_shear",
-    "water", "wedge_box", "write_history", "write_mesh", "write_readings", "write_surface",
-    "write_vtk",
+    "channel_with_block", "channel_with_cylinder", "check_mesh", "compare", "developed_profile",
+    "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget", "force_coefficients",
+    "get_threads", "inlet_table", "iterate", "lag", "mean_value", "mixed_box", "moist_air",
+    "momentum_budget", "nozzle", "observe", "picture", "picture_readings", "pipe", "profile",
+    "pyramid_box", "quality", "read_mesh", "read_readings", "set_threads", "shear_reversals",
+    "skewed", "solve_pseudo_transient", "solve_steady", "solve_transient", "strouhal_number",
+    "wall_shear", "water", "wedge_box", "write_history", "write_mesh", "write_readings",
+    "write_surface", "write_vtk",
 ]

@@ -5,15 +5,31 @@ from __future__ import annotations
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pytest
-from test_bad_input import INF, NAN, Bad, case, run
+from test_bad_input import AIR, INF, MESH, NAN, Bad, boundaries, case, readings, run
 
 import fv3d
 import fv3d.flow.coupling
-from fv3d.errors import CaseError, FileError, Fv3dError
+from fv3d.errors import (
+    BoundaryError,
+    CaseError,
+    FileError,
+    Fv3dError,
+    MeshError,
+    ReadingError,
+)
 
 REFERENCE: dict[str, Any] = {"density": 1.2, "speed": 1.0, "area": 1.0, "length": 1.0}
 LINE: dict[str, Any] = {"start": (0.1, 0.5, 0.5), "end": (0.9, 0.5, 0.5), "count": 5}
+PROFILE: dict[str, Any] = {"fluid": AIR, "mean_speed": 1.0}
+PLANE = np.array([[0.0, 0.0, 0.0], [0.0, 1.0, 0.0], [0.0, 0.0, 1.0], [0.0, 1.0, 1.0]])
+
+
+def inlet(points: np.ndarray) -> fv3d.Case:
+    """A case fed by a table of these points."""
+    return case(boundaries=boundaries(x_min=fv3d.Inlet(fv3d.InletTable(points, points + 1.0))))
+
 
 TABLE: dict[str, tuple[type[Fv3dError], Bad]] = {
     # coefficients and flow rates
@@ -49,6 +65,45 @@ TABLE: dict[str, tuple[type[Fv3dError], Bad]] = {
         (CaseError, lambda d: fv3d.shear_reversals(run(), "x_min", along=(1.0, 0.0))),
     "reversals: no such boundary":
         (CaseError, lambda d: fv3d.shear_reversals(run(), "floor", along=(1.0, 0.0, 0.0))),
+    # inlet tables and developed profiles
+    "inlet table: velocity of two components":
+        (BoundaryError, lambda d: fv3d.InletTable(PLANE, PLANE[:, :2])),
+    "inlet table: not finite": (BoundaryError, lambda d: fv3d.InletTable(PLANE * NAN, PLANE)),
+    "inlet table: a text": (BoundaryError, lambda d: fv3d.InletTable("plane.csv", PLANE)),
+    "inlet table: one place": (BoundaryError, lambda d: fv3d.InletTable(PLANE[:1], PLANE[:1])),
+    "inlet table: two points at one place": (BoundaryError, lambda d: inlet(PLANE[[0, 1, 2, 2]])),
+    "inlet table: behind each other":
+        (BoundaryError, lambda d: inlet(np.array([[0.0, 0.5, 0.5], [0.1, 0.5, 0.5]]))),
+    "inlet table: millimetres taken as metres": (BoundaryError, lambda d: inlet(1e3 * PLANE)),
+    "inlet table: beside the inlet":
+        (BoundaryError, lambda d: inlet(PLANE + np.array([0.0, 2.0, 0.0]))),
+    "inlet table: in other axes": (BoundaryError, lambda d: inlet(PLANE + np.array([5.0, 0.0, 0.0]))),
+    "inlet readings: a component not measured":
+        (ReadingError, lambda d: fv3d.inlet_table(readings())),
+    "inlet readings: no file": (ReadingError, lambda d: fv3d.inlet_table(d / "nothing.csv")),
+    "inlet readings: unmeasured a number":
+        (ReadingError, lambda d: fv3d.inlet_table(readings(), unmeasured=0.0)),
+    "inlet readings: direction zero":
+        (ReadingError, lambda d: fv3d.inlet_table(readings(), direction=(0.0, 0.0, 0.0))),
+    "inlet readings: speed without direction": (ReadingError, lambda d: fv3d.inlet_table(readings(
+        **{"u [m/s]": None, "u_std [m/s]": None, "speed [m/s]": 1.0, "speed_std [m/s]": 0.1}))),
+    "inlet readings: pressure only": (ReadingError, lambda d: fv3d.inlet_table(readings(
+        **{"u [m/s]": None, "u_std [m/s]": None, "p [Pa]": 1.0, "p_std [Pa]": 0.1}))),
+    "developed: no such boundary":
+        (BoundaryError, lambda d: fv3d.developed_profile(MESH, "inlet", **PROFILE)),
+    "developed: no mesh": (MeshError, lambda d: fv3d.developed_profile("x_min", MESH, **PROFILE)),
+    "developed: no flow": (BoundaryError, lambda d: fv3d.developed_profile(
+        MESH, "x_min", **PROFILE | {"mean_speed": None})),
+    "developed: flow rate and speed": (BoundaryError, lambda d: fv3d.developed_profile(
+        MESH, "x_min", **PROFILE, flow_rate=1.0)),
+    "developed: negative speed": (BoundaryError, lambda d: fv3d.developed_profile(
+        MESH, "x_min", **PROFILE | {"mean_speed": -1.0})),
+    "developed: no fluid": (BoundaryError, lambda d: fv3d.developed_profile(
+        MESH, "x_min", **PROFILE | {"fluid": 1.8e-5})),
+    "developed: free boundary that is not there": (BoundaryError, lambda d: fv3d.developed_profile(
+        MESH, "x_min", **PROFILE, free=["side"])),
+    "developed: no wall": (BoundaryError, lambda d: fv3d.developed_profile(
+        MESH, "x_min", **PROFILE, free=["y_min", "y_max", "z_min", "z_max"])),
     # profiles
     "profile: of a case": (CaseError, lambda d: fv3d.profile(case(), **LINE)),
     "profile: one point": (CaseError, lambda d: fv3d.profile(run(), **LINE | {"count": 1})),
@@ -87,3 +142,6 @@ def test_good_input_passes(tmp_path: Path) -> None:
     assert len(fv3d.profile(run(), **LINE).pressure) == 5
     fv3d.shear_reversals(run(), "y_min", along=(1.0, 0.0, 0.0))
     fv3d.flow_split(run())
+    assert inlet(PLANE).mesh is MESH
+    assert fv3d.developed_profile(MESH, "x_min", **PROFILE).mean_speed == 1.0
+    assert len(fv3d.inlet_table(readings(), unmeasured=(0.0, 0.0, 0.0)).points) == 2

@@ -107,7 +107,7 @@ def _check_vector(value: Any, what: str) -> None:
 
 @dataclass(frozen=True)
 class Inlet:
-    """Given velocity: a vector, or a function of points (n, 3) -> (n, 3) [m/s].
+    """Given velocity [m/s]: a vector, a function of points (n, 3) -> (n, 3), an InletTable.
 
     Fluid may also leave through it: the velocity is simply prescribed.
 
@@ -126,7 +126,10 @@ class Inlet:
     def fill(self, table: BoundaryTable, rows: slice, centre: np.ndarray,
              normal: np.ndarray) -> None:
         """Velocity given, full viscous traction, pressure from inside."""
-        table.fixed[rows] = _evaluate(self.velocity, centre, "Inlet velocity")
+        if hasattr(self.velocity, "on_faces"):
+            table.fixed[rows] = self.velocity.on_faces(centre, normal)[0]
+        else:
+            table.fixed[rows] = _evaluate(self.velocity, centre, "Inlet velocity")
         table.shear_tangential[rows] = table.shear_normal[rows] = 1.0
         table.turned_stress[rows] = 1.0
         table.sampled[rows] = callable(self.velocity)

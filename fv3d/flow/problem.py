@@ -16,6 +16,7 @@ from ..operators.gradient import BoundaryKnowledge, GradientOperator
 from .boundary import Boundary, BoundaryTable, boundary_table
 from .fluid import Fluid
 from .numerics import Numerics
+from .inlets import warn_of_beyond
 
 BodyForce = Any
 
@@ -217,6 +218,7 @@ def make_problem(case: Case, sources: tuple[Source, ...] = ()) -> Problem:
     closed = not bool(table.pressure_given.any())
     _warn_of_suction(case, fixed_flux, closed)
     if closed:
+    warn_of_beyond(mesh, case.boundaries)
         fixed_flux = _balanced_flux(mesh, table, fixed_flux)
     cell_force = body_force_cells(case)
     _check_symmetry(case, table, cell_force)

@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 
 from .coupling import mass_residual
+from .inlets import beyond_shares
 
 
 @np.errstate(all="ignore")  # the last finite state of a diverged run may overflow in a norm
@@ -35,6 +36,8 @@ def run_sheet(run: Any) -> str:
     speed = np.linalg.norm(run.velocity, axis=1)
     lines.append(f"  speed      mean {np.average(speed, weights=mesh.cell_volume):.4g} m/s, "
                  f"largest {speed.max():.4g} m/s")
+    lines += [f"  inlet      {share:.1%} of '{name}' lie beyond the points of its table"
+              for name, share in beyond_shares(mesh, case.boundaries).items()]
     for source, own in zip(run.problem.sources, run.state.sources, strict=True):
         if hasattr(source, "describe"):
             lines += ["  " + line for line in source.describe(own)]

@@ -151,6 +151,31 @@ def _areas(points: np.ndarray, faces: np.ndarray) -> tuple[np.ndarray, np.ndarra
     return area, np.where(three, (a + b + c) / 3.0, (a + b + c + d) / 4.0)
 
 
+def rim_edges(mesh: Mesh, name: str) -> tuple[np.ndarray, np.ndarray]:
+    """Edges around a boundary and what lies beyond them.
+
+    Returns
+    -------
+    edges : (k, 2) points of each edge that belongs to one face of the boundary only
+    beside : (k,) name of the boundary on its other side; empty where there is none
+    """
+    faces = mesh.face_points[mesh.n_internal:].astype(np.int64)
+    ring = faces.copy()
+    three = ring[:, 3] < 0
+    ring[three, 3] = ring[three, 0]
+    names = np.concatenate([np.full(where.stop - where.start, own, dtype=object)
+                            for own, where in mesh.boundaries.items()])
+    pairs = np.sort(np.stack([ring.ravel(), np.roll(ring, -1, axis=1).ravel()], axis=1), axis=1)
+    owner, real = np.repeat(names, 4), pairs[:, 0] != pairs[:, 1]
+    pairs, owner = pairs[real], owner[real]
+    key = pairs[:, 0] * len(mesh.points) + pairs[:, 1]
+    own, counts = np.unique(key[owner == name], return_counts=True)
+    rim = own[counts == 1]
+    across = dict(zip(key[owner != name].tolist(), owner[owner != name].tolist()))
+    beside = np.array([across.get(k, "") for k in rim.tolist()], dtype=object)
+    return np.stack([rim // len(mesh.points), rim % len(mesh.points)], axis=1), beside
+
+
 def edge_pairs(faces: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Both faces of every edge that belongs to exactly two."""
     three = faces[:, 3] < 0
