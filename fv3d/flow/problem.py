@@ -33,6 +33,8 @@ class Case:
         Every boundary of the mesh exactly once.
     body_force : vector or function of points (n, 3) -> (n, 3), optional
         Force per mass [m/s^2].
+    body_force_factor : function of time [s], optional
+        What the body force is multiplied with in a run in time.
     viscosity : (n_cells,) array, optional
         Viscosity of each cell [Pa s] where it differs from the fluid's.
     numerics : Numerics
@@ -47,6 +49,7 @@ class Case:
     fluid: Fluid
     boundaries: Mapping[str, Boundary] = field(kw_only=True)
     body_force: BodyForce = field(default=None, kw_only=True)
+    body_force_factor: Callable[[float], float] | None = field(default=None, kw_only=True)
     viscosity: np.ndarray | None = field(default=None, kw_only=True)
     numerics: Numerics = field(default_factory=Numerics, kw_only=True)
 
@@ -63,6 +66,10 @@ class Case:
             raise CaseError("The numerical methods of a case are one Numerics object.",
                             where="Case(numerics=)", got=repr(self.numerics),
                             remedy="Give Numerics(coupling=SIMPLE()), say.")
+        if not (self.body_force_factor is None or callable(self.body_force_factor)):
+            raise CaseError("The factor of the body force is a function of time.",
+                            where="Case(body_force_factor=)", got=repr(self.body_force_factor),
+                            remedy="Give a function of seconds that returns a number.")
         boundary_table(self.mesh, self.boundaries)
         body_force_cells(self)
         _cell_viscosity(self)
