@@ -125,7 +125,8 @@ def test_a_checkerboard_pressure_dies_out(steady: fv3d.Run) -> None:
     from fv3d.flow.coupling import make_workspace
     from fv3d.flow.problem import make_problem
     from fv3d.flow.start import start_state
-    from fv3d.flow.transient import TimeStep
+    from fv3d.flow.step_size import FixedStep
+    from fv3d.flow.time_step import TimeStep
     problem = make_problem(case)
     workspace = make_workspace(problem)
     state = start_state(problem, (1.0, 0.0, 0.0), workspace)
@@ -133,7 +134,7 @@ def test_a_checkerboard_pressure_dies_out(steady: fv3d.Run) -> None:
     from dataclasses import replace
     state = replace(state, pressure=signs)
     for _ in range(50):
-        state, _ = TimeStep(0.01 / 8, first=1)(problem, state, workspace)
+        state, _ = TimeStep(FixedStep(0.01 / 8), first=1)(problem, state, workspace)
     assert abs(float(np.mean(signs * state.pressure))) <= 0.01
     assert np.abs(state.velocity - [1.0, 0.0, 0.0]).max() <= 0.05
 

@@ -17,6 +17,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, field, replace
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -24,6 +25,7 @@ import scipy.sparse as sparse
 
 from ..errors import CaseError, ReadingError, as_number
 from ..flow.problem import Force, Problem, State
+from .feedback_time import FeedbackInTime
 from .kernel import Gaussian, Kernel, SingleCell
 from .layout import Layout, Response, make_layout, sweep_response
 from .readings import Readings, linearised_direction, predict
@@ -100,17 +102,22 @@ class Feedback:
         fed = self.readings.velocity_only()
         layout = make_layout(problem, fed, self.kernel)
         velocity = layout.sample(problem, state.velocity, state.boundary_velocity)
-        gain = self._gains(problem, fed, layout, velocity)
+        gain = self.gains(problem, fed, layout, velocity)
         begun = FeedbackState(fed, layout, gain, np.zeros(fed.n_components),
                               linearised_direction(fed, velocity), local_speed(fed, velocity),
-                              self._advice(problem, layout))
+                              self.advice(problem, layout))
         if isinstance(earlier, FeedbackState) and len(earlier.strength) == fed.n_components:
             begun = replace(begun, gain=earlier.gain, strength=earlier.strength,
                             direction=earlier.direction, speed=earlier.speed,
                             count=TURNED_AT[-1] + 1)
         return begun
 
-    def _advice(self, problem: Problem, layout: Layout) -> tuple[str, ...]:
+    @cached_property
+    def in_time(self) -> FeedbackInTime:
+        """The law for runs in time, see :mod:`fv3d.measured.feedback_time`."""
+        return FeedbackInTime(self)
+
+    def advice(self, problem: Problem, layout: Layout) -> tuple[str, ...]:
         """What to say of a radius that fits neither the cells nor the domain."""
         if self.radius is None:
             return ()
@@ -125,8 +132,9 @@ class Feedback:
                     f"{thinnest:.2g} m: readings are not told apart across it",)
         return ()
 
-    def _gains(self, problem: Problem, fed: Readings, layout: Layout,
-               velocity: np.ndarray) -> np.ndarray:
+    def gains(self, problem: Problem, fed: Readings, layout: Layout,
+              velocity: np.ndarray) -> np.ndarray:
+        """(m,) gain of each component [1/s], given or from the local speed and the radius."""
         if self.gain is not None:
             return np.full(fed.n_components, float(self.gain))
         length = self.radius or np.cbrt(problem.mesh.cell_volume[layout.to_points.home])
