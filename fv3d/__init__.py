@@ -20,6 +20,7 @@ from .flow.fluid import Fluid, moist_air, water
 from .flow.inlets import InletTable
 from .flow.monitors import ForceMonitor, PointMonitor
 from .flow.numerics import SIMPLE, SIMPLEC, GlobalStep, LocalStep, Numerics
+from .flow.outlets import FlowOutlet
 from .flow.problem import Case
 from .flow.run import Run
 from .flow.steady import iterate, solve_pseudo_transient, solve_steady
@@ -55,12 +56,12 @@ from .signals import Estimate, dominant_frequency, lag, mean_value, strouhal_num
 __all__ = [
     "SIMPLE", "SIMPLEC", "BarthJespersen", "Blended", "BoundaryError", "BoundaryForce",
     "ByAnisotropy", "Case", "CaseError", "Central", "Classical", "Comparison", "DevelopedProfile",
-    "DivergenceError", "Estimate", "Feedback", "FileError", "FlowSplit", "Fluid", "ForceBudget",
-    "ForceCoefficients", "ForceMonitor", "Fv3dError", "Fv3dWarning", "GlobalStep", "GreenGauss",
-    "Inlet", "InletTable", "LeastSquares", "LimitedUpwind", "LocalStep", "Mesh", "MeshError",
-    "MichalakOllivierGooch", "MomentumBudget", "Numerics", "OneSided", "Outcome", "Outlet",
-    "PointMonitor", "Profile", "ReadingError", "Readings", "Reference", "Reversals", "Run",
-    "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided",
+    "DivergenceError", "Estimate", "Feedback", "FileError", "FlowOutlet", "FlowSplit", "Fluid",
+    "ForceBudget", "ForceCoefficients", "ForceMonitor", "Fv3dError", "Fv3dWarning", "GlobalStep",
+    "GreenGauss", "Inlet", "InletTable", "LeastSquares", "LimitedUpwind", "LocalStep", "Mesh",
+    "MeshError", "MichalakOllivierGooch", "MomentumBudget", "Numerics", "OneSided", "Outcome",
+    "Outlet", "PointMonitor", "Profile", "ReadingError", "Readings", "Reference", "Reversals",
+    "Run", "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided",
     "Uniform", "Upwind", "Wall", "backward_step", "boundary_map", "box", "build_mesh",
     "channel_with_block", "channel_with_cylinder", "check_mesh", "compare", "developed_profile",
     "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget", "force_coefficients",

@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 import pytest
-from test_bad_input import AIR, INF, MESH, NAN, Bad, boundaries, case, readings, run
+from test_bad_input import AIR, INF, MESH, NAN, Bad, boundaries, case, readings, run, steady
 
 import fv3d
 import fv3d.flow.coupling
@@ -77,7 +77,8 @@ TABLE: dict[str, tuple[type[Fv3dError], Bad]] = {
     "inlet table: millimetres taken as metres": (BoundaryError, lambda d: inlet(1e3 * PLANE)),
     "inlet table: beside the inlet":
         (BoundaryError, lambda d: inlet(PLANE + np.array([0.0, 2.0, 0.0]))),
-    "inlet table: in other axes": (BoundaryError, lambda d: inlet(PLANE + np.array([5.0, 0.0, 0.0]))),
+    "inlet table: in other axes":
+        (BoundaryError, lambda d: inlet(PLANE + np.array([5.0, 0.0, 0.0]))),
     "inlet readings: a component not measured":
         (ReadingError, lambda d: fv3d.inlet_table(readings())),
     "inlet readings: no file": (ReadingError, lambda d: fv3d.inlet_table(d / "nothing.csv")),
@@ -104,6 +105,20 @@ TABLE: dict[str, tuple[type[Fv3dError], Bad]] = {
         MESH, "x_min", **PROFILE, free=["side"])),
     "developed: no wall": (BoundaryError, lambda d: fv3d.developed_profile(
         MESH, "x_min", **PROFILE, free=["y_min", "y_max", "z_min", "z_max"])),
+    # outlets of given flow
+    "flow outlet: nothing given": (BoundaryError, lambda d: fv3d.FlowOutlet()),
+    "flow outlet: both given":
+        (BoundaryError, lambda d: fv3d.FlowOutlet(flow_rate=1.0, share=0.5)),
+    "flow outlet: negative flow": (BoundaryError, lambda d: fv3d.FlowOutlet(flow_rate=-1.0)),
+    "flow outlet: share of 30": (BoundaryError, lambda d: fv3d.FlowOutlet(share=30)),
+    "flow outlet: share a text": (BoundaryError, lambda d: fv3d.FlowOutlet(share="half")),
+    "flow outlet: no other outlet": (BoundaryError, lambda d: steady(of=case(
+        boundaries=boundaries(x_max=fv3d.FlowOutlet(share=0.5))))),
+    "flow outlet: more than the whole": (BoundaryError, lambda d: steady(of=case(
+        boundaries=boundaries(y_min=fv3d.FlowOutlet(share=0.6),
+                              y_max=fv3d.FlowOutlet(share=0.6))))),
+    "flow outlet: share without inlet": (BoundaryError, lambda d: steady(of=case(
+        boundaries=boundaries(x_min=fv3d.Outlet(1.0), y_max=fv3d.FlowOutlet(share=0.6))))),
     # profiles
     "profile: of a case": (CaseError, lambda d: fv3d.profile(case(), **LINE)),
     "profile: one point": (CaseError, lambda d: fv3d.profile(run(), **LINE | {"count": 1})),

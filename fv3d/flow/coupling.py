@@ -20,6 +20,14 @@ from .equations import (
     pressure_fields,
 )
 from .numerics import GlobalStep, LocalStep
+from .outlets import (
+    at_levels,
+    flow_misfit,
+    free_outlets,
+    meet_flows,
+    moved_levels,
+    with_given_flow,
+)
 from .problem import Force, Problem, State
 from .response import PressureResponse, pressure_response
 
@@ -125,6 +133,7 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
 
     Returns the new state and the record of the state it started from.
     """
+    problem = at_levels(problem, state)
     mesh, numerics = problem.mesh, problem.case.numerics
     n = mesh.n_internal
     edge_flux = state.mass_flux[n:]
@@ -161,6 +170,7 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     tracer = float(np.einsum("ij,ij->", workspace.tracer, state.velocity))
     record = Record(state.iteration, float(np.abs(residual).sum() / scale), record_mass, misfit,
                     effort, tracer=tracer)
+    misfit = max(misfit, flow_misfit(problem, flux))
     workspace.first_residual = workspace.first_residual or record.residual
     workspace.residual = record.residual
     return replace(state, iteration=state.iteration + 1), record
@@ -199,11 +209,19 @@ def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, equation
     matrix, inner, outer = correction_matrix(problem, d)
     result = solve_pressure(problem, workspace, matrix, -(mesh.outflow @ flux),
                             numerics.pressure_tolerance)
-    correction = result.solution
+    correction, shift = result.solution, np.zeros(mesh.n_boundary)
+    share = workspace.response.share(coupling)
+    if problem.outlets:
+        correction, shift = meet_flows(
+            problem, flux, correction, outer=outer, solve=lambda rhs: solve_pressure(
+                problem, workspace, matrix, rhs, numerics.pressure_tolerance).solution)
+        flux[n:] -= outer * shift
+        state = replace(state, levels=moved_levels(problem, state.levels, share * shift))
+        problem = at_levels(problem, state)
     flux = corrected_flux(problem, flux, correction, inner, outer)
-    slope = problem.pressure_gradient(correction, np.zeros(mesh.n_boundary))
+    slope = problem.pressure_gradient(correction, shift)
     velocity = state.velocity - d[:, None] * slope
-    pressure = state.pressure + workspace.response.share(coupling) * correction
+    pressure = state.pressure + share * correction
     if problem.closed:
         pressure -= np.average(pressure, weights=mesh.cell_volume)
     edge = boundary_velocity(problem, velocity, gradient, flux[n:])
@@ -289,9 +307,9 @@ def potential_start(problem: Problem, workspace: Workspace) -> State:
     """Start field: irrotational flow through the given fluxes, or rest where there are none."""
     mesh, n = problem.mesh, problem.mesh.n_internal
     flux = np.zeros(mesh.n_faces)
-    flux[n:] = problem.fixed_flux
-    outer = np.where(problem.table.pressure_given, problem.orthogonal[n:], 0.0)
-    if np.any(problem.fixed_flux):
+    flux[n:] = with_given_flow(mesh, problem.outlets, problem.fixed_flux)
+    outer = np.where(free_outlets(problem), problem.orthogonal[n:], 0.0)
+    if np.any(flux):
         inner = problem.orthogonal[:n]
         matrix = symmetric_matrix(mesh, problem.pattern, inner, outer)
         prepared = linear.prepare(matrix, singular=problem.closed)
@@ -343,7 +361,7 @@ def conserve(problem: Problem, state: State, workspace: Workspace, *,
              tolerance: float = 1e-11) -> State:
     """Make the face fluxes conserve mass to rounding by one tight potential correction."""
     mesh, n = problem.mesh, problem.mesh.n_internal
-    outer = np.where(problem.table.pressure_given, problem.orthogonal[n:], 0.0)
+    outer = np.where(free_outlets(problem), problem.orthogonal[n:], 0.0)
     inner = problem.orthogonal[:n]
     matrix = symmetric_matrix(mesh, problem.pattern, inner, outer)
     imbalance = -(mesh.outflow @ state.mass_flux)

@@ -15,6 +15,7 @@ from ..errors import CaseError, DivergenceError, Fv3dWarning, Outcome
 from . import coupling
 from .coupling import Record, Workspace
 from .monitors import Monitor, Series
+from .outlets import at_levels
 from .problem import Problem, State
 from .progress import Progress
 from .run import Run, reverse_flow_share
@@ -59,7 +60,7 @@ def drive(problem: Problem, state: State, workspace: Workspace, *, advance: Adva
             outcome, state = errors.interrupted(len(records)), last
     if outcome.name != "diverged":
         state = coupling.conserve(problem, state, workspace)
-    run = Run(problem, state, history(records, clock), outcome, name,
+    run = Run(at_levels(problem, state), state, history(records, clock), outcome, name,
               time.perf_counter() - began, _collected(monitors))
     report(run)
     return run

@@ -16,6 +16,7 @@ from ..operators.gradient import BoundaryKnowledge, GradientOperator
 from .boundary import Boundary, BoundaryTable, boundary_table
 from .fluid import Fluid
 from .numerics import Numerics
+from .outlets import OutletFlow, outlet_flows
 from .inlets import warn_of_beyond
 
 BodyForce = Any
@@ -118,6 +119,7 @@ class State:
     boundary_velocity : (n_boundary, 3) [m/s]
     sources : tuple of the states of the case's sources
     iteration : int
+    levels : tuple of float, pressures of the outlets of given flow [Pa]
     """
 
     velocity: np.ndarray
@@ -126,6 +128,7 @@ class State:
     boundary_velocity: np.ndarray
     sources: tuple[Any, ...] = ()
     iteration: int = 0
+    levels: tuple[float, ...] = ()
     time: float = float("nan")
     older: Any = None
 
@@ -189,6 +192,7 @@ class Problem:
     fixed_flux: np.ndarray
     closed: bool
     sources: tuple[Source, ...] = ()
+    outlets: tuple[OutletFlow, ...] = ()
 
     @property
     def mesh(self) -> Mesh:
@@ -233,7 +237,8 @@ def make_problem(case: Case, sources: tuple[Source, ...] = ()) -> Problem:
                    numerics.gradient.weights(mesh, BoundaryKnowledge.everywhere(mesh)),
                    numerics.gradient.weights(mesh, known), viscosity, face_viscosity, full,
                    None if cell_force is None else balanced_force(mesh, cell_force),
-                   fixed_flux, closed, sources)
+                   fixed_flux, closed, sources,
+                   outlet_flows(mesh, case.boundaries, table, fixed_flux, case.fluid.density))
 
 
 def _check_symmetry(case: Case, table: BoundaryTable, cell_force: np.ndarray | None) -> None:

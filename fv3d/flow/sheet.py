@@ -38,6 +38,8 @@ def run_sheet(run: Any) -> str:
                  f"largest {speed.max():.4g} m/s")
     lines += [f"  inlet      {share:.1%} of '{name}' lie beyond the points of its table"
               for name, share in beyond_shares(mesh, case.boundaries).items()]
+    lines += [f"  outlet     '{one.name}' at {level:.6g} Pa for {one.flow:.6g} kg/s"
+              for one, level in zip(run.problem.outlets, run.state.levels, strict=True)]
     for source, own in zip(run.problem.sources, run.state.sources, strict=True):
         if hasattr(source, "describe"):
             lines += ["  " + line for line in source.describe(own)]

@@ -10,6 +10,7 @@ import numpy as np
 from ..errors import CaseError
 from .coupling import Workspace, potential_start, start_pressure
 from .equations import boundary_velocity
+from .outlets import start_levels
 from .problem import Problem, State
 
 
@@ -35,7 +36,7 @@ def start_state(problem: Problem, start: Any, workspace: Workspace) -> State:
         state = _from_values(problem, start)
     sources = tuple(source.start(problem, state, earlier.get(id(source)))
                     for source in problem.sources)
-    return replace(state, sources=sources)
+    return replace(state, sources=sources, levels=start_levels(problem, start))
 
 
 def _from_values(problem: Problem, start: Any) -> State:
