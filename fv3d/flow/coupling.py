@@ -166,11 +166,11 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     flux = interpolated_flux(problem, velocity, gradient, edge, fields, force,
                              equation.diagonal, np.zeros(mesh.n_faces))
     record_mass = mass_residual(problem, flux, velocity, fields.cell)
+    misfit = max(misfit, flow_misfit(problem, flux))
     state, effort = _correct_pressure(problem, state, flux, equation, gradient, inertia, workspace)
     tracer = float(np.einsum("ij,ij->", workspace.tracer, state.velocity))
     record = Record(state.iteration, float(np.abs(residual).sum() / scale), record_mass, misfit,
                     effort, tracer=tracer)
-    misfit = max(misfit, flow_misfit(problem, flux))
     workspace.first_residual = workspace.first_residual or record.residual
     workspace.residual = record.residual
     return replace(state, iteration=state.iteration + 1), record

@@ -15,9 +15,9 @@ from ..operators import assembly
 from ..operators.gradient import BoundaryKnowledge, GradientOperator
 from .boundary import Boundary, BoundaryTable, boundary_table
 from .fluid import Fluid
+from .inlets import warn_of_beyond
 from .numerics import Numerics
 from .outlets import OutletFlow, outlet_flows
-from .inlets import warn_of_beyond
 
 BodyForce = Any
 
@@ -228,8 +228,8 @@ def make_problem(case: Case, sources: tuple[Source, ...] = ()) -> Problem:
     fixed_flux = case.fluid.density * np.einsum("ij,ij->i", table.fixed, mesh.face_area[inside:])
     closed = not bool(table.pressure_given.any())
     _warn_of_suction(case, fixed_flux, closed)
-    if closed:
     warn_of_beyond(mesh, case.boundaries)
+    if closed:
         fixed_flux = _balanced_flux(mesh, table, fixed_flux)
     cell_force = body_force_cells(case)
     _check_symmetry(case, table, cell_force)
