@@ -39,9 +39,10 @@ from .mesh.quality import check_mesh, quality
 from .mesh.read import read_mesh
 from .mesh.surfaces import boundary_map
 from .mesh.write import write_mesh
-from .operators.fluxes import Blended, Central, SecondOrderUpwind, Upwind
+from .operators.fluxes import Blended, Central, LimitedUpwind, SecondOrderUpwind, Upwind
 from .operators.gradient import GreenGauss, LeastSquares
 from .operators.kernels import get_threads, set_threads
+from .operators.limiters import BarthJespersen, MichalakOllivierGooch
 from .operators.linear import ByAnisotropy, Classical, SmoothedAggregation
 from .results.coefficients import ForceCoefficients, Reference, force_coefficients
 from .results.diagnostics import BoundaryForce, MomentumBudget, force, momentum_budget

@@ -185,6 +185,59 @@ def chebyshev_step(indptr, indices, data, inverse_diagonal, rhs, keep, scale, di
     return {7: ahead, 8: residual, 9: x.astype(float) + ahead}
 
 
+@reference
+def neighbour_range(offsets, across, used, cells, edges, low, high):
+    n = len(cells)
+    around = [[c, *(o for o in across[offsets[c]:offsets[c + 1]] if o < n or used[o - n])]
+              for c in range(n)]
+    both = np.vstack([cells, edges])
+    return {5: np.array([both[row].min(axis=0) for row in around]),
+            6: np.array([both[row].max(axis=0) for row in around])}
+
+
+@reference
+def widened_range(offsets, across, low, high, wide_low, wide_high):
+    n = len(low)
+    around = [[c, *(o for o in across[offsets[c]:offsets[c + 1]] if o < n)] for c in range(n)]
+    return {4: np.array([low[row].min(axis=0) for row in around]),
+            5: np.array([high[row].max(axis=0) for row in around])}
+
+
+def limiting(room, change, smooth):
+    """Factor that a change may be multiplied by."""
+    if change == 0.0:
+        return 1.0
+    y = room / change
+    return min(1.0, y) if not smooth else 1.0 if y >= 1.5 else y - 4 * y**3 / 27
+
+
+@reference
+def limit_gradient(offsets, faces, sign, across, left, face_centre, cell_centre, delta, values,
+                   low, high, smooth, gradient):
+    result = gradient.copy()
+    for c in range(len(values)):
+        inner = [k for k in range(offsets[c], offsets[c + 1]) if across[k] < len(values)]
+        for i in range(values.shape[1]):
+            changes = [gradient[c, i] @ (face_centre[faces[k]] - cell_centre[c]) for k in inner]
+            result[c, i] *= min(limiting((high if d > 0 else low)[c, i] - values[c, i], d, smooth)
+                                for d in changes)
+    return {12: result}
+
+
+@reference
+def limited_reach(left, right, face_centre, cell_centre, delta, flux, values, gradient, low, high,
+                  out):
+    result = np.empty_like(out)
+    for f, (a, b) in enumerate(zip(left, right)):
+        up = a if flux[f] >= 0 else b
+        for i, d in enumerate(gradient[up] @ (face_centre[f] - cell_centre[up])):
+            ahead, behind = (high, low) if d > 0 else (low, high)
+            room = min(0.7 * abs(ahead[up, i] - values[up, i]),
+                       3.0 * abs(behind[up, i] - values[up, i]))
+            result[f, i] = d * limiting(room, abs(d), True)
+    return {10: result}
+
+
 SINGLE_TOO = {"product", "residual_product", "product_add", "chebyshev_start", "chebyshev_step"}
 
 
@@ -243,4 +296,26 @@ def arguments(name: str, mesh: Mesh, *, dtype: type = np.float64, seed: int = 0,
         "chebyshev_step": [*csr, positive, vector(), dtype(0.4), dtype(0.8), vector(),
                            np.empty(n, dtype), vector()],
     }
-    return made[name]
+    return (made | limiting_arguments(mesh, r, variant))[name]
+
+
+def limiting_arguments(mesh: Mesh, r: np.random.Generator, variant: int) -> dict[str, Arguments]:
+    """Those of the limiters' kernels: a range around every value, now and then of no width."""
+    n, inside = mesh.n_cells, mesh.n_internal
+    offsets, cell_faces, sign = mesh.cell_faces
+
+    def table(rows: int = n) -> np.ndarray:
+        return r.normal(size=(rows, 3))
+    values, gradient, place = table(), r.normal(size=(n, 3, 3)), [mesh.face_centre,
+                                                                  mesh.cell_centre, mesh.delta]
+    low = values - r.uniform(0.0, 0.5, (n, 3)) * (r.random((n, 3)) < 0.8)
+    high = values + r.uniform(0.0, 0.5, (n, 3)) * (r.random((n, 3)) < 0.8)
+    return {
+        "neighbour_range": [offsets, mesh.across, r.random(mesh.n_boundary) < 0.5, values,
+                            table(mesh.n_boundary), np.empty((n, 3)), np.empty((n, 3))],
+        "widened_range": [offsets, mesh.across, low, high, np.empty((n, 3)), np.empty((n, 3))],
+        "limit_gradient": [offsets, cell_faces, sign, mesh.across, mesh.left, *place, values, low,
+                           high, bool(variant), gradient],
+        "limited_reach": [mesh.left[:inside], mesh.right, *place, r.normal(size=mesh.n_faces),
+                          values, gradient, low, high, np.empty((inside, 3))],
+    }

@@ -7,14 +7,17 @@ from typing import Any
 import numpy as np
 import pytest
 from contracts import CONVECTION, SLOPE, Check, edge_centres, linear, momentum_imbalance, skewed
+from made import distance, duct, solved
 
 import fv3d
 from fv3d.flow.equations import boundary_traction, momentum
 from fv3d.flow.problem import make_problem
 from fv3d.mesh.generate import box
 from fv3d.operators.assembly import inverse_blocks, orthogonal_factor, pattern, symmetric_matrix
+from fv3d.operators.interpolation import point_interpolation
 
-SCHEMES = [fv3d.Upwind(), fv3d.SecondOrderUpwind(), fv3d.Central(), fv3d.Blended(share=0.6)]
+SCHEMES = [fv3d.Upwind(), fv3d.SecondOrderUpwind(), fv3d.Central(), fv3d.Blended(share=0.6),
+           fv3d.LimitedUpwind()]
 
 
 @pytest.mark.parametrize("check", CONVECTION.values(), ids=CONVECTION)
@@ -135,3 +138,35 @@ def test_layers_of_unlike_viscosity_carry_the_same_shear_stress(full_stress: boo
     rows = slice(faces.start - mesh.n_internal, faces.stop - mesh.n_internal)
     traction = boundary_traction(ready, velocity, gradient, edge)[rows, 0]
     assert traction.sum() == pytest.approx(stress, rel=1e-12)
+
+
+@pytest.mark.parametrize("numerics", [
+    {"convection": fv3d.LimitedUpwind()}, {"gradient": fv3d.BarthJespersen()},
+    {"gradient": fv3d.MichalakOllivierGooch()}], ids=["scheme", "sharp", "smooth"])
+def test_limited_flow_converges_near_the_unlimited(numerics: Any) -> None:
+    """Cell Reynolds number 100: nearer to second-order upwind than first-order upwind is."""
+    mesh = box((0, 0, 0), (2, 1, 1), cells=(10, 8, 8), skew=0.2)
+
+    def flow(**options: Any) -> np.ndarray:
+        methods = fv3d.Numerics(coupling=fv3d.SIMPLEC(velocity_relaxation=0.4), **options)
+        return solved(duct(mesh, viscosity=0.002, numerics=methods), tolerance=1e-6).velocity
+    wanted, first = flow(), flow(convection=fv3d.Upwind())
+    assert distance(mesh, flow(**numerics), wanted) < 0.3 * distance(mesh, first, wanted)
+
+
+@pytest.mark.parametrize("limiter", [fv3d.BarthJespersen, fv3d.MichalakOllivierGooch])
+@pytest.mark.parametrize("wrapped", ["least squares", fv3d.LeastSquares, None])
+def test_a_limiter_of_no_gradient_method_is_refused(limiter: Any, wrapped: Any) -> None:
+    with pytest.raises(fv3d.CaseError, match="wraps a gradient method"):
+        limiter(gradient=wrapped)
+
+
+def test_values_at_points_and_pressure_use_the_gradient_that_is_wrapped() -> None:
+    mesh = skewed(3, tetra=True)
+    plain = problem(mesh)
+    limited = problem(mesh, gradient=fv3d.BarthJespersen(fv3d.MichalakOllivierGooch()))
+    np.testing.assert_array_equal(limited.pressure_gradient.weights,
+                                  plain.pressure_gradient.weights)
+    points = mesh.cell_centre[:4] + 1e-3
+    one, other = (point_interpolation(mesh, p.velocity_gradient, points) for p in (plain, limited))
+    assert abs(one.cells - other.cells).max() == 0.0

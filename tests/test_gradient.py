@@ -12,7 +12,9 @@ import fv3d
 from fv3d.mesh.generate import box
 from fv3d.operators.gradient import BoundaryKnowledge
 
-METHODS = [fv3d.LeastSquares(), fv3d.LeastSquares(power=1.0)]
+METHODS = [fv3d.LeastSquares(), fv3d.LeastSquares(power=1.0), fv3d.GreenGauss(),
+           fv3d.BarthJespersen(), fv3d.MichalakOllivierGooch(),
+           fv3d.BarthJespersen(gradient=fv3d.GreenGauss())]
 
 
 @pytest.mark.parametrize("check", GRADIENT.values(), ids=GRADIENT)

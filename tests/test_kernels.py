@@ -11,7 +11,9 @@ import numpy as np
 import pytest
 from loops import REFERENCES, SINGLE_TOO, arguments, small_mesh
 
-from fv3d.operators import kernels
+from fv3d.operators import kernels, kernels_limiting
+
+LOOPS = {**vars(kernels), **vars(kernels_limiting)}
 
 
 def copied(values: list) -> list:
@@ -19,7 +21,7 @@ def copied(values: list) -> list:
 
 
 def test_every_kernel_has_a_reference() -> None:
-    compiled = {name for name, value in vars(kernels).items()
+    compiled = {name for name, value in LOOPS.items()
                 if isinstance(value, kernels.ThreadedKernel) or hasattr(value, "py_func")}
     assert compiled == set(REFERENCES)
 
@@ -30,7 +32,7 @@ def test_every_kernel_has_a_reference() -> None:
 def test_kernel_equals_its_reference(name: str, kind: str, variant: int) -> None:
     given = arguments(name, small_mesh(kind), seed=variant, variant=variant)
     used = copied(given)
-    getattr(kernels, name)(*used)
+    LOOPS[name](*used)
     for place, wanted in REFERENCES[name](*copied(given)).items():
         size = np.abs(wanted).max()
         np.testing.assert_allclose(used[place], wanted, rtol=0, atol=1e-12 * max(size, 1.0))
@@ -41,7 +43,7 @@ def test_kernel_equals_its_reference(name: str, kind: str, variant: int) -> None
 def test_single_precision_to_its_rounding(name: str, kind: str) -> None:
     given = arguments(name, small_mesh(kind), dtype=np.float32)
     used = copied(given)
-    getattr(kernels, name)(*used)
+    LOOPS[name](*used)
     for place, wanted in REFERENCES[name](*copied(given)).items():
         assert used[place].dtype == np.float32
         np.testing.assert_allclose(used[place], wanted, rtol=0, atol=1e-5 * np.abs(wanted).max())
@@ -51,7 +53,7 @@ def test_single_precision_to_its_rounding(name: str, kind: str) -> None:
 def test_kernel_writes_only_what_the_reference_says(name: str) -> None:
     given = arguments(name, small_mesh("tet"))
     used = copied(given)
-    getattr(kernels, name)(*used)
+    LOOPS[name](*used)
     written = REFERENCES[name](*copied(given))
     for place, (before, after) in enumerate(zip(given, used)):
         if place not in written and isinstance(before, np.ndarray):
@@ -61,7 +63,7 @@ def test_kernel_writes_only_what_the_reference_says(name: str) -> None:
 THREADS = """
 import numpy as np, sys
 from loops import REFERENCES, SINGLE_TOO, arguments, small_mesh
-from test_kernels import copied
+from test_kernels import LOOPS, copied
 from fv3d.operators import kernels
 kernels.SMALL = 0
 mesh = small_mesh("hex")
@@ -73,7 +75,7 @@ for name in REFERENCES:
             kernels.set_threads(count)
             assert kernels.get_threads() == count
             used = copied(given)
-            getattr(kernels, name)(*used)
+            LOOPS[name](*used)
             results.append(used)
         for one, two in zip(*results):
             if isinstance(one, np.ndarray):

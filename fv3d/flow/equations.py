@@ -19,6 +19,7 @@ import scipy.sparse as sparse
 
 from ..operators import kernels
 from ..operators.assembly import Rows, symmetric_matrix
+from ..operators.limiters import limited_extension
 from .problem import Force, Problem
 
 
@@ -137,6 +138,9 @@ def momentum(problem: Problem, velocity: np.ndarray, gradient: np.ndarray, edge:
         problem.orthogonal, mesh.face_centre, mesh.cell_centre, mass_flux, problem.face_viscosity,
         velocity, gradient, float(scheme.upwind_share), float(scheme.central_share),
         problem.full_stress, coefficient, explicit)
+    if scheme.limited_share:
+        reach = limited_extension(mesh, velocity, edge, gradient, mass_flux)
+        explicit += scheme.limited_share * mass_flux[:n, None] * reach
     if mesh.warped:
         explicit += _warp_convection(problem, velocity, gradient)[:n]
     data = np.zeros(len(layout.indices))
@@ -191,7 +195,7 @@ def boundary_carried(problem: Problem, velocity: np.ndarray, gradient: np.ndarra
     """
     mesh, n = problem.mesh, problem.mesh.n_internal
     scheme, owner = problem.case.numerics.convection, mesh.left[n:]
-    share = min(scheme.upwind_share + scheme.central_share, 1.0)
+    share = min(scheme.upwind_share + scheme.central_share + scheme.limited_share, 1.0)
     inner = velocity[owner] + share * np.einsum("fij,fj->fi", gradient[owner], mesh.delta[n:])
     leaving = (flux > 0) & ~problem.table.pressure_given
     return np.where(leaving[:, None], inner, edge)

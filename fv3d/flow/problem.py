@@ -13,6 +13,7 @@ from ..errors import BoundaryError, CaseError, Fv3dWarning
 from ..mesh.mesh import Mesh
 from ..operators import assembly
 from ..operators.gradient import BoundaryKnowledge, GradientOperator
+from ..operators.limiters import LimitedOperator, unlimited
 from .boundary import Boundary, BoundaryTable, boundary_table
 from .fluid import Fluid
 from .inlets import warn_of_beyond
@@ -172,7 +173,7 @@ class Problem:
     ----------
     orthogonal : (n_faces,) [m] over-relaxed share of the normal difference
     foot : (n_boundary, 3) [m] cell centre to the foot of the face centre's normal
-    velocity_gradient, pressure_gradient : GradientOperator
+    velocity_gradient, pressure_gradient : GradientOperator, the first limited where asked
     viscosity : (n_cells,), face_viscosity : (n_faces,) [Pa s]
     force : Force of the case's body force, or None
     closed : bool, no boundary gives the pressure
@@ -183,7 +184,7 @@ class Problem:
     pattern: assembly.Pattern
     orthogonal: np.ndarray
     foot: np.ndarray
-    velocity_gradient: GradientOperator
+    velocity_gradient: GradientOperator | LimitedOperator
     pressure_gradient: GradientOperator
     viscosity: np.ndarray
     face_viscosity: np.ndarray
@@ -235,8 +236,8 @@ def make_problem(case: Case, sources: tuple[Source, ...] = ()) -> Problem:
     _check_symmetry(case, table, cell_force)
     return Problem(case, table, assembly.pattern(mesh), assembly.orthogonal_factor(mesh), foot,
                    numerics.gradient.weights(mesh, BoundaryKnowledge.everywhere(mesh)),
-                   numerics.gradient.weights(mesh, known), viscosity, face_viscosity, full,
-                   None if cell_force is None else balanced_force(mesh, cell_force),
+                   unlimited(numerics.gradient).weights(mesh, known), viscosity, face_viscosity,
+                   full, None if cell_force is None else balanced_force(mesh, cell_force),
                    fixed_flux, closed, sources,
                    outlet_flows(mesh, case.boundaries, table, fixed_flux, case.fluid.density))
 

@@ -115,6 +115,17 @@ class Mesh:
                 _read_only(sign[order]))
 
     @cached_property
+    def across(self) -> np.ndarray:
+        """(k,) for each entry of ``cell_faces`` the cell behind the face, or n_cells + b."""
+        _, faces, sign = self.cell_faces
+        inside = faces < self.n_internal
+        ahead, back = inside & (sign > 0), inside & (sign < 0)
+        other = self.n_cells + faces - self.n_internal
+        other[ahead] = self.right[faces[ahead]]
+        other[back] = self.left[faces[back]]
+        return _read_only(other.astype(np.int32))
+
+    @cached_property
     def outflow(self) -> sparse.csr_matrix:
         """(n_cells, n_faces) matrix that turns face fluxes into the net outflow of each cell."""
         offsets, faces, sign = self.cell_faces

@@ -1,8 +1,12 @@
 """Convection schemes: what the deferred correction adds to the implicit upwind part.
 
-Every scheme is a frozen object with two numbers: with ``U`` the upwind cell, the face value is
+Every scheme is a frozen object with three numbers: with ``U`` the upwind cell, the face value is
 
-    value(U) + upwind_share * gradient(U) . (face - U) + central_share * (linear - value(U)).
+    value(U) + upwind_share * gradient(U) . (face - U) + central_share * (linear - value(U))
+             + limited_share * limited,
+
+``limited`` the extrapolation that keeps to the range around ``U``, see
+:func:`fv3d.operators.limiters.limited_extension`.
 """
 
 from __future__ import annotations
@@ -14,7 +18,7 @@ from ..errors import CaseError
 
 
 class ConvectionScheme(Protocol):
-    """Shares of the two second-order corrections; declared order and boundedness."""
+    """Shares of the second-order corrections; declared order and boundedness."""
 
     @property
     def upwind_share(self) -> float:
@@ -24,6 +28,11 @@ class ConvectionScheme(Protocol):
     @property
     def central_share(self) -> float:
         """Share of the linear interpolation between both cells."""
+        ...
+
+    @property
+    def limited_share(self) -> float:
+        """Share of the limited extrapolation from the upwind cell."""
         ...
 
     @property
@@ -47,6 +56,7 @@ class SecondOrderUpwind:
 
     upwind_share: float = 1.0
     central_share: float = 0.0
+    limited_share: float = 0.0
     order: int = 2
     bounded: bool = False
 
@@ -57,6 +67,7 @@ class Central:
 
     upwind_share: float = 0.0
     central_share: float = 1.0
+    limited_share: float = 0.0
     order: int = 2
     bounded: bool = False
 
@@ -67,7 +78,29 @@ class Upwind:
 
     upwind_share: float = 0.0
     central_share: float = 0.0
+    limited_share: float = 0.0
     order: int = 1
+    bounded: bool = True
+
+
+@dataclass(frozen=True)
+class LimitedUpwind:
+    """Extrapolation from the upwind cell that makes no new extremes: bounded, second order.
+
+    The face value stays below the greatest and above the least value among the upwind cell, two
+    rings of neighbours and their boundary faces, and is the cell's own value in an extreme.  Where
+    the velocity given on a boundary points out of the domain the extension is not limited.  Where
+    the iteration ends oscillating, relax it more: ``SIMPLEC(velocity_relaxation=0.4)``.
+
+    Source: range and upwind gradient Barth, T. J. and Jespersen, D. C. (1989), AIAA Paper
+    89-0366; limiting function Michalak, C. and Ollivier-Gooch, C. (2009), J. Comput. Phys. 228,
+    8693-8711.
+    """
+
+    upwind_share: float = 0.0
+    central_share: float = 0.0
+    limited_share: float = 1.0
+    order: int = 2
     bounded: bool = True
 
 
@@ -82,6 +115,7 @@ class Blended:
     """
 
     share: float = 0.75
+    limited_share: float = 0.0
     order: int = 2
     bounded: bool = False
 

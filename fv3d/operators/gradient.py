@@ -10,7 +10,7 @@ where *other* is the neighbouring cell or the value on a boundary face.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Protocol
+from typing import Any, Protocol
 
 import numpy as np
 import scipy.sparse as sparse
@@ -83,15 +83,25 @@ class GradientOperator:
 
 
 class GradientMethod(Protocol):
-    """A way to turn a mesh into gradient weights."""
+    """A way to turn a mesh into an operator from cell and boundary values to gradients."""
 
     @property
-    def order(self) -> int:
+    def order(self) -> float:
         """Declared order of accuracy on irregular meshes."""
         ...
 
-    def weights(self, mesh: Mesh, known: BoundaryKnowledge) -> GradientOperator:
-        """Weights on this mesh."""
+    @property
+    def linear_exact(self) -> bool:
+        """Whether linear fields are met exactly on any mesh."""
+        ...
+
+    @property
+    def bounded(self) -> bool:
+        """Whether values extended to the face centres stay in the range around the cell."""
+        ...
+
+    def weights(self, mesh: Mesh, known: BoundaryKnowledge) -> Any:
+        """Operator on this mesh, called as :class:`GradientOperator` is."""
         ...
 
 
@@ -109,14 +119,16 @@ class LeastSquares:
 
     power: float = 2.0
     least_known: float = 0.05
-    order: int = 1
+    order: float = 1.0
+    linear_exact: bool = True
+    bounded: bool = False
 
     def weights(self, mesh: Mesh, known: BoundaryKnowledge) -> GradientOperator:
         """Weights on this mesh, see :class:`GradientOperator`."""
         offsets, faces, sign = mesh.cell_faces
         cell = np.repeat(np.arange(mesh.n_cells), np.diff(offsets))
         inside = faces < mesh.n_internal
-        other = _across(mesh, faces, sign)
+        other = mesh.across
         arm = mesh.delta[faces] * sign[:, None]
         importance = np.linalg.norm(arm, axis=1) ** -self.power
         edge = np.flatnonzero(~inside)
@@ -152,7 +164,9 @@ class GreenGauss:
     Source: Gauss' theorem; Barth, T. J. and Jespersen, D. C. (1989), AIAA Paper 89-0366.
     """
 
-    order: int = 0
+    order: float = 0.0
+    linear_exact: bool = False
+    bounded: bool = False
 
     def weights(self, mesh: Mesh, known: BoundaryKnowledge) -> GradientOperator:
         """Weights on this mesh, see :class:`GradientOperator`."""
@@ -160,7 +174,7 @@ class GreenGauss:
         cell = np.repeat(np.arange(mesh.n_cells), np.diff(offsets))
         inside = faces < mesh.n_internal
         share = np.empty(len(faces))
-        other = _across(mesh, faces, sign)
+        other = mesh.across
         w = mesh.weight[faces[inside]]
         share[inside] = np.where(sign[inside] > 0, 1.0 - w, w)
         share[~inside] = known.valued[faces[~inside] - mesh.n_internal]
@@ -168,16 +182,6 @@ class GreenGauss:
         none = np.empty(0, dtype=np.int32)
         return GradientOperator(offsets, other, np.ascontiguousarray(weights), none,
                                 np.empty((0, 3, 3)), sparse.csr_matrix((0, mesh.n_cells)))
-
-
-def _across(mesh: Mesh, faces: np.ndarray, sign: np.ndarray) -> np.ndarray:
-    """(k,) cell on the other side of each face of each cell, n_cells + b on boundaries."""
-    inside = faces < mesh.n_internal
-    other = np.where(sign > 0, 0, mesh.left[faces]).astype(np.int64)
-    ahead = inside & (sign > 0)
-    other[ahead] = mesh.right[faces[ahead]]
-    other[~inside] = mesh.n_cells + faces[~inside] - mesh.n_internal
-    return other.astype(np.int32)
 
 
 def _completion(offsets: np.ndarray, other: np.ndarray, poor: np.ndarray,

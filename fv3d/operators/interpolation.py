@@ -16,6 +16,7 @@ import scipy.sparse as sparse
 from ..errors import CaseError
 from ..mesh.mesh import Mesh
 from .gradient import GradientOperator
+from .limiters import LimitedOperator, linear_operator
 
 
 @dataclass(frozen=True, eq=False)
@@ -183,15 +184,15 @@ def points_inside(mesh: Mesh, points: np.ndarray, *, where: str,
     return place
 
 
-def point_interpolation(mesh: Mesh, gradient: GradientOperator, points: np.ndarray, *,
-                        where: str = "sample(points)",
+def point_interpolation(mesh: Mesh, gradient: GradientOperator | LimitedOperator,
+                        points: np.ndarray, *, where: str = "sample(points)",
                         names: list[str] | None = None) -> PointInterpolation:
     """Operator from cell values to points.
 
     Parameters
     ----------
-    gradient : GradientOperator
-        Weights that know a value on every boundary face.
+    gradient : GradientOperator or LimitedOperator
+        Weights that know a value on every boundary face; of a limited one those it wraps.
     points : (n, 3) [m]
     where, names : for the message when a point lies outside
 
@@ -201,6 +202,7 @@ def point_interpolation(mesh: Mesh, gradient: GradientOperator, points: np.ndarr
         A point lies outside the mesh by more than a twentieth of the nearest boundary face.
     """
     place = points_inside(mesh, points, where=where, names=names)
+    weights = linear_operator(gradient)
     n, size = len(place.cell), mesh.n_cells + mesh.n_boundary
     corners = sparse.csr_matrix(
         (place.share[:, :4].ravel(), (np.repeat(np.arange(n), 4), place.corner[:, :4].ravel())),
@@ -212,7 +214,7 @@ def point_interpolation(mesh: Mesh, gradient: GradientOperator, points: np.ndarr
     for axis in range(3):
         reach = (corners @ arms[axis]).tocsr()
         used = np.unique(reach.indices)
-        total = total + reach[:, used] @ _gradient_rows(gradient, used, axis, size)
+        total = total + reach[:, used] @ _gradient_rows(weights, used, axis, size)
     total = total.tocsr()
     return PointInterpolation(total[:, :mesh.n_cells].tocsr(), total[:, mesh.n_cells:].tocsr(),
                               place.cell)

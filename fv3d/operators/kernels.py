@@ -16,6 +16,7 @@ import numba
 
 from ..errors import CaseError, Fv3dWarning
 
+prange = numba.prange
 SMALL = 20_000  # below this many rows a second thread costs more than it brings
 
 
