@@ -197,7 +197,8 @@ class TimeStep:
         edge = boundary_velocity(problem, velocity, gradient, trial.mass_flux[n:])
         memory = difference.mixed(now.defect, None if before is None else before.defect)
         flux = interpolated_flux(problem, velocity, gradient, edge, fields, force,
-                                 equation.diagonal + inertia, rate * memory)
+                                 equation.diagonal + inertia, memory * _memory_share(
+                                     problem, equation.diagonal, inertia) / difference.lead)
         scale = float(np.einsum("i,ij->", equation.diagonal + inertia, np.abs(velocity)))
         new, effort = self._project(problem, replace(trial, velocity=velocity), flux, fields,
                                     difference, workspace)
@@ -264,6 +265,18 @@ def _push(problem: Problem, state: State, gradient: np.ndarray,
             state = replace(state, velocity=velocity, mass_flux=flux, boundary_velocity=edge,
                             pressure=state.pressure + push.pressure)
     return replace(state, sources=tuple(sources)), misfit
+
+
+def _memory_share(problem: Problem, diagonal: np.ndarray, inertia: np.ndarray) -> np.ndarray:
+    """(n_faces,) factor on the older levels' flux defect [kg/(m^3 s)].
+
+    With ``D`` the interpolated volume over diagonal, without and ``D^`` with the time term, it is
+    ``(1 / D^) - (1 / D)``: a steady defect is then that of the steady flux, whatever the step.
+    Between cells of one diagonal it is the leading coefficient times density over step.
+    """
+    mesh = problem.mesh
+    with_time = mesh.to_faces(mesh.cell_volume / (diagonal + inertia))
+    return 1.0 / with_time - 1.0 / mesh.to_faces(mesh.cell_volume / diagonal)
 
 
 def _viscous_share(problem: Problem, d: float) -> np.ndarray:

@@ -63,6 +63,7 @@ def solve_transient(case: Case, *, time_step: float | CourantStep, end_time: flo
     """
     sizes = _checked(time_step, end_time, outer_iterations)
     check_kind(monitors, ("see",), "monitors")
+    check_kind(sources, (), "sources")
     timed = tuple(getattr(source, "in_time", source) for source in sources)
     check_kind(timed, ("start", "force", "advance"), "sources")
     problem = make_problem(case, timed)

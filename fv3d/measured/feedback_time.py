@@ -26,7 +26,7 @@ import numpy as np
 
 from ..errors import Fv3dWarning
 from ..flow.problem import Force, Problem, State
-from ..flow.projected import Projection, Push, force_potential, make_projection, projected
+from ..flow.projected import Projection, Push, full_potential, make_projection, projected
 from ..flow.time_step import Moment
 from .layout import Layout, make_layout
 from .readings import Readings, linearised_direction, predict
@@ -58,9 +58,9 @@ class FeedbackInTime:
         velocity = layout.sample(problem, state.velocity, state.boundary_velocity)
         used = np.flatnonzero(_directions_used(fed).ravel())
         projection = make_projection(problem)
-        potential, answer = _columns(problem, projection, layout, used)
+        potential, rest, answer = _columns(problem, projection, layout, used)
         begun = StateInTime(
-            fed, layout, used, potential, answer, self.law.gains(problem, fed, layout, velocity),
+            fed, layout, used, potential, rest, answer, self.law.gains(problem, fed, layout, velocity),
             np.zeros(fed.n_components), np.zeros((len(fed), 3)), self.law.advice(problem, layout))
         if isinstance(earlier, StateInTime) and len(earlier.strength) == fed.n_components:
             begun = replace(begun, gain=earlier.gain, strength=earlier.strength,
@@ -141,8 +141,8 @@ class Tally:
 class StateInTime:
     """Strengths ``a`` (m,) [m/s^2] with the projected kernels.
 
-    ``used`` (k,) columns of place and axis that readings need, ``potential`` (n_cells, k) theirs
-    [m^2/s^2]; ``answer`` (n_places, 3, n_places, 3) velocity at each place along each axis to the
+    ``used`` (k,) columns of place and axis that readings need, ``potential`` and ``rest``
+    (n_cells, k) theirs [m^2/s^2], see :func:`fv3d.flow.projected.full_potential`; ``answer`` (n_places, 3, n_places, 3) velocity at each place along each axis to the
     projected kernel of each place and axis; ``vector`` (n_places, 3) the force's strengths.
     """
 
@@ -150,6 +150,7 @@ class StateInTime:
     layout: Layout
     used: np.ndarray
     potential: np.ndarray
+    rest: np.ndarray
     answer: np.ndarray
     gain: np.ndarray
     strength: np.ndarray
@@ -185,8 +186,10 @@ class StateInTime:
 
     def push(self, problem: Problem, change: np.ndarray) -> Push:
         """What a change (n_places, 3) of the strengths does to the fluid."""
-        potential = np.einsum("ck,k->c", self.potential, change.ravel()[self.used])
-        return projected(problem, self.layout.force(change), potential)
+        size = change.ravel()[self.used]
+        potential, rest = (np.einsum("ck,k->c", columns, size)
+                           for columns in (self.potential, self.rest))
+        return projected(problem, self.layout.force(change), potential, rest)
 
 
 def _directions_used(readings: Readings) -> np.ndarray:
@@ -198,16 +201,16 @@ def _directions_used(readings: Readings) -> np.ndarray:
 
 
 def _columns(problem: Problem, projection: Projection, layout: Layout,
-             used: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+             used: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     """Potentials of the kernels and the answers at the places."""
     n_places = layout.cell.shape[1] // 3
-    potential = np.empty((problem.mesh.n_cells, len(used)))
+    potential, rest = np.empty((2, problem.mesh.n_cells, len(used)))
     answer = np.zeros((3 * n_places, 3 * n_places))
     for k, column in enumerate(used):
         unit = np.zeros(3 * n_places)
         unit[column] = 1.0
         force = layout.force(unit.reshape(-1, 3))
-        potential[:, k] = force_potential(problem, projection, force)
-        push = projected(problem, force, potential[:, k])
+        potential[:, k], rest[:, k] = full_potential(problem, projection, force)
+        push = projected(problem, force, potential[:, k], rest[:, k])
         answer[:, column] = layout.sample_change(problem, push.velocity).ravel()
-    return potential, answer.reshape(n_places, 3, n_places, 3)
+    return potential, rest, answer.reshape(n_places, 3, n_places, 3)
