@@ -36,6 +36,7 @@ from .mesh.generate_duct import backward_step, pipe
 from .mesh.generate_nozzle import nozzle
 from .mesh.grading import OneSided, Spacing, TwoSided, Uniform
 from .mesh.mesh import Mesh, build_mesh
+from .mesh.periodic import join_periodic
 from .mesh.quality import check_mesh, quality
 from .mesh.read import read_mesh
 from .mesh.surfaces import boundary_map
@@ -67,10 +68,10 @@ __all__ = [
     "Spacing", "Symmetry", "TwoSided", "Uniform", "Upwind", "Wall", "backward_step", "boundary_map",
     "box", "build_mesh", "channel_with_block", "channel_with_cylinder", "check_mesh", "compare",
     "developed_profile", "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget",
-    "force_coefficients", "get_threads", "inlet_table", "iterate", "lag", "mean_value", "mixed_box",
-    "moist_air", "momentum_budget", "nozzle", "observe", "picture", "picture_readings", "pipe",
-    "profile", "pyramid_box", "quality", "read_mesh", "read_readings", "set_threads",
-    "shear_reversals", "skewed", "solve_pseudo_transient", "solve_steady", "solve_transient",
-    "strouhal_number", "wall_shear", "water", "wedge_box", "write_history", "write_mesh",
-    "write_readings", "write_surface", "write_vtk",
+    "force_coefficients", "get_threads", "inlet_table", "iterate", "join_periodic", "lag",
+    "mean_value", "mixed_box", "moist_air", "momentum_budget", "nozzle", "observe", "picture",
+    "picture_readings", "pipe", "profile", "pyramid_box", "quality", "read_mesh", "read_readings",
+    "set_threads", "shear_reversals", "skewed", "solve_pseudo_transient", "solve_steady",
+    "solve_transient", "strouhal_number", "wall_shear", "water", "wedge_box", "write_history",
+    "write_mesh", "write_readings", "write_surface", "write_vtk",
 ]

@@ -348,9 +348,10 @@ def _add_balanced(mesh: Mesh, cell_force: np.ndarray, faces: np.ndarray, cell: n
     drop[order] = np.einsum("ij,ij->i", at_face, mesh.delta[order])
     warped = (np.einsum("fj,fji->fi", at_face, mesh.warp[order]) if mesh.warped
               else np.zeros_like(at_face))
-    for cells, rows, sign in ((mesh.left[order], slice(None), 1.0),
-                              (right, slice(0, len(inner)), -1.0)):
-        reach = mesh.face_centre[order[rows]] - mesh.cell_centre[cells]
+    arm = mesh.face_centre[order] - mesh.cell_centre[mesh.left[order]]
+    for cells, rows, sign, reach in (
+            (mesh.left[order], slice(None), 1.0, arm),
+            (right, slice(0, len(inner)), -1.0, arm[:len(inner)] - mesh.delta[inner])):
         potential = np.einsum("ij,ij->i", at_face[rows], reach)
         push = potential[:, None] * mesh.face_area[order[rows]]
         push = sign * (push + warped[rows]) / mesh.cell_volume[cells, None]

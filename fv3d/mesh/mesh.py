@@ -21,10 +21,38 @@ from .geometry import face_and_cell_geometry
 from .topology import local_faces, name_faces, number_cells, pair_faces, reversed_faces
 
 
-def _read_only(array: np.ndarray) -> np.ndarray:
+def read_only(array: np.ndarray) -> np.ndarray:
     array = np.ascontiguousarray(array)
     array.flags.writeable = False
     return array
+
+
+@dataclass(frozen=True, eq=False)
+class Pair:
+    """Two boundaries joined by a translation, see :func:`fv3d.mesh.periodic.join_periodic`.
+
+    Attributes
+    ----------
+    partner : str
+        Name of the other boundary.
+    shift : (3,) [m]
+        Translation from this boundary to the partner.
+    faces : (k,) int32
+        Internal faces of the mesh that join them.
+    sign : (k,)
+        +1 where the face's area vector points along ``shift``, else -1.
+    far_points : (k, 4) int32
+        Points of each face as its right cell sees it, ``-1`` fills triangles.
+    point_pairs : (m, 2) int32
+        Points of this boundary and those of the partner they fall upon.
+    """
+
+    partner: str
+    shift: np.ndarray
+    faces: np.ndarray
+    sign: np.ndarray
+    far_points: np.ndarray
+    point_pairs: np.ndarray
 
 
 @dataclass(frozen=True, eq=False)
@@ -54,6 +82,9 @@ class Mesh:
     boundaries : mapping of name to slice into the faces.
     zones : mapping of name to (n,) int32
         Named groups of cells, in the mesh's own numbering and rising order; may overlap.
+    joined : mapping of name to Pair
+        Boundaries that were joined by a translation; their faces are internal ones, with points,
+        centre and area as the left cell sees them.
     """
 
     points: np.ndarray
@@ -71,6 +102,7 @@ class Mesh:
     warp: np.ndarray
     boundaries: Mapping[str, slice]
     zones: Mapping[str, np.ndarray] = field(default_factory=lambda: MappingProxyType({}))
+    joined: Mapping[str, Pair] = field(default_factory=lambda: MappingProxyType({}))
 
     @property
     def n_cells(self) -> int:
@@ -95,12 +127,12 @@ class Mesh:
     @cached_property
     def face_area_magnitude(self) -> np.ndarray:
         """(n_faces,) area of each face [m^2]."""
-        return _read_only(np.linalg.norm(self.face_area, axis=1))
+        return read_only(np.linalg.norm(self.face_area, axis=1))
 
     @cached_property
     def face_normal(self) -> np.ndarray:
         """(n_faces, 3) unit normal of each face."""
-        return _read_only(self.face_area / self.face_area_magnitude[:, None])
+        return read_only(self.face_area / self.face_area_magnitude[:, None])
 
     @cached_property
     def cell_faces(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -111,8 +143,8 @@ class Mesh:
         order = np.lexsort((faces, cells))
         counts = np.bincount(cells, minlength=self.n_cells)
         offsets = np.concatenate([[0], np.cumsum(counts)])
-        return (_read_only(offsets.astype(np.int32)), _read_only(faces[order].astype(np.int32)),
-                _read_only(sign[order]))
+        return (read_only(offsets.astype(np.int32)), read_only(faces[order].astype(np.int32)),
+                read_only(sign[order]))
 
     @cached_property
     def across(self) -> np.ndarray:
@@ -123,7 +155,7 @@ class Mesh:
         other = self.n_cells + faces - self.n_internal
         other[ahead] = self.right[faces[ahead]]
         other[back] = self.left[faces[back]]
-        return _read_only(other.astype(np.int32))
+        return read_only(other.astype(np.int32))
 
     @cached_property
     def outflow(self) -> sparse.csr_matrix:
@@ -136,12 +168,24 @@ class Mesh:
         """(n_internal, 3) face centre minus the point the interpolation weight stands for [m]."""
         inside = slice(0, self.n_internal)
         foot = self.cell_centre[self.left[inside]] + (1 - self.weight)[:, None] * self.delta[inside]
-        return _read_only(self.face_centre[inside] - foot)
+        return read_only(self.face_centre[inside] - foot)
 
     @property
     def warped(self) -> bool:
         """Whether some face is not flat."""
         return len(self.warp) > 0
+
+    def polygons(self, faces: np.ndarray, sign: np.ndarray) -> np.ndarray:
+        """(k, 4) points of faces as the left (sign +1) or the right cell (sign -1) sees them."""
+        corners = self.face_points[faces]
+        if self.joined:
+            row = np.full(self.n_internal, -1)
+            far = np.concatenate([pair.far_points for pair in self.joined.values()])
+            row[np.concatenate([pair.faces for pair in self.joined.values()])] = np.arange(len(far))
+            other = np.flatnonzero((sign < 0) & (faces < self.n_internal))
+            other = other[row[faces[other]] >= 0]
+            corners[other] = far[row[faces[other]]]
+        return corners
 
     def to_faces(self, cell_values: np.ndarray) -> np.ndarray:
         """(n_faces, ...) linear interpolation of cell values; the owner's value on boundaries."""
@@ -161,7 +205,9 @@ class Mesh:
     def __repr__(self) -> str:
         kinds = ", ".join(f"{len(cells)} {kind}" for kind, _, cells in self.cell_blocks)
         zones = f"; zones: {', '.join(self.zones)}" if self.zones else ""
-        return f"Mesh({kinds}; boundaries: {', '.join(self.boundaries)}{zones})"
+        pairs = [f"{name} to {pair.partner}" for name, pair in self.joined.items()]
+        joined = f"; joined: {', '.join(pairs)}" if pairs else ""
+        return f"Mesh({kinds}; boundaries: {', '.join(self.boundaries)}{zones}{joined})"
 
     def __str__(self) -> str:
         from .quality import mesh_sheet
@@ -228,11 +274,11 @@ def build_mesh(points: np.ndarray, cells: Sequence[tuple[str, np.ndarray]],
     slices = {name: slice(int(start), int(stop))
               for name, start, stop in zip(boundaries, ends[:-1], ends[1:])}
     splits = np.cumsum([len(conn) for _, conn in cells])[:-1]
-    blocks = tuple((kind, _read_only(conn), _read_only(number)) for (kind, conn), number
+    blocks = tuple((kind, read_only(conn), read_only(number)) for (kind, conn), number
                    in zip(cells, np.split(new_number, splits)))
     groups = MappingProxyType({name: _zone(name, chosen, new_number, source)
                                for name, chosen in (zones or {}).items()})
-    return _with_geometry(points, blocks, face_points, left, right, slices, groups)
+    return with_geometry(points, blocks, face_points, left, right, slices, groups)
 
 
 def _zone(name: str, chosen: np.ndarray, new_number: np.ndarray, source: str) -> np.ndarray:
@@ -248,10 +294,10 @@ def _zone(name: str, chosen: np.ndarray, new_number: np.ndarray, source: str) ->
         raise MeshError("A zone must be a name with some cells of the mesh.",
                         where=f"{source}, zone {name!r}", got=got,
                         remedy="Give cell indices, or a mask with one entry per cell.")
-    return _read_only(np.unique(new_number[cells]))
+    return read_only(np.unique(new_number[cells]))
 
 
-def _with_geometry(points: np.ndarray, blocks: tuple, face_points: np.ndarray,
+def with_geometry(points: np.ndarray, blocks: tuple, face_points: np.ndarray,
                    left: np.ndarray, right: np.ndarray, slices: dict[str, slice],
                    zones: Mapping[str, np.ndarray]) -> Mesh:
     n_cells, n_internal = sum(len(cells) for _, _, cells in blocks), len(right)
@@ -266,11 +312,11 @@ def _with_geometry(points: np.ndarray, blocks: tuple, face_points: np.ndarray,
     delta[:n_internal] = cell_centre[right] - cell_centre[own]
     near = np.abs(np.einsum("ij,ij->i", to_face, area[:n_internal]))
     far = np.abs(np.einsum("ij,ij->i", delta[:n_internal] - to_face, area[:n_internal]))
-    return Mesh(points=_read_only(points), cell_blocks=blocks,
-                file_index=_read_only(np.argsort(new_number).astype(np.int32)),
-                face_points=_read_only(face_points), left=_read_only(left),
-                right=_read_only(right), face_area=_read_only(area),
-                face_centre=_read_only(centre), cell_volume=_read_only(volume),
-                cell_centre=_read_only(cell_centre), delta=_read_only(delta),
-                weight=_read_only(far / np.maximum(near + far, 1e-300)), warp=_read_only(warp),
+    return Mesh(points=read_only(points), cell_blocks=blocks,
+                file_index=read_only(np.argsort(new_number).astype(np.int32)),
+                face_points=read_only(face_points), left=read_only(left),
+                right=read_only(right), face_area=read_only(area),
+                face_centre=read_only(centre), cell_volume=read_only(volume),
+                cell_centre=read_only(cell_centre), delta=read_only(delta),
+                weight=read_only(far / np.maximum(near + far, 1e-300)), warp=read_only(warp),
                 boundaries=MappingProxyType(slices), zones=zones)

@@ -51,9 +51,13 @@ def write_mesh(mesh: Mesh, path: str | os.PathLike[str], *,
     Raises
     ------
     FileError
-        The file cannot be written.
+        The file cannot be written; boundaries of the mesh are joined.
     """
     import meshio
+    if mesh.joined:
+        raise FileError("Joined boundaries have no faces to be written.", where=str(path),
+                        got=", ".join(mesh.joined),
+                        remedy="Write the mesh as it was before its boundaries were joined.")
     ending = Path(path).suffix.lower()
     if ending == ".msh" and file_format is None:
         file_format = "gmsh"

@@ -94,12 +94,12 @@ def _cell_boxes(mesh: Mesh) -> tuple[np.ndarray, np.ndarray]:
 def _try_cells(mesh: Mesh, points: np.ndarray, which: np.ndarray, cells: np.ndarray,
                found: _Location, *, slack: float = 1e-9) -> None:
     """Test each point against every tetrahedron of its candidate cell."""
-    offsets, faces, _ = mesh.cell_faces
+    offsets, faces, sign = mesh.cell_faces
     count = np.diff(offsets)[cells]
     for k in range(int(count.max(initial=0))):
         has = k < count
-        face = faces[offsets[cells] + np.where(has, k, 0)]
-        corner = mesh.face_points[face]
+        entry = offsets[cells] + np.where(has, k, 0)
+        corner = mesh.polygons(faces[entry], sign[entry])
         size = np.where(corner[:, 3] < 0, 3, 4)
         ring = mesh.points[corner]
         ring[size == 3, 3] = 0.0
@@ -224,6 +224,8 @@ def _corner_means(mesh: Mesh, used: np.ndarray) -> tuple[sparse.csr_matrix, list
     """Weights of the cells around each used mesh point, and those times (point - centre)."""
     wanted = np.zeros(len(mesh.points), bool)
     wanted[used] = True
+    for pair in [*mesh.joined.values()] * len(mesh.joined):  # images of images at edges
+        wanted[pair.point_pairs] |= wanted[pair.point_pairs].any(axis=1)[:, None]
     rows, columns = [], []
     for _, conn, cells in mesh.cell_blocks:
         hit = wanted[conn]
@@ -232,12 +234,24 @@ def _corner_means(mesh: Mesh, used: np.ndarray) -> tuple[sparse.csr_matrix, list
         columns.append(cells[i])
     row, column = np.concatenate(rows), np.concatenate(columns)
     arm = mesh.points[row] - mesh.cell_centre[column]
+    for pair in mesh.joined.values():
+        row, column, arm = _with_images(pair.point_pairs, row, column, arm)
     weight = 1.0 / np.linalg.norm(arm, axis=1)
     weight /= np.bincount(row, weight, len(mesh.points))[row]
     shape = (len(mesh.points), mesh.n_cells)
     mean = sparse.csr_matrix((weight, (row, column)), shape=shape)
     arms = [sparse.csr_matrix((weight * arm[:, k], (row, column)), shape=shape) for k in range(3)]
     return mean, arms
+
+
+def _with_images(pairs: np.ndarray, row: np.ndarray, column: np.ndarray,
+                 arm: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Points of joined boundaries see the cells around their images, too."""
+    image = np.full(max(int(row.max(initial=0)), int(pairs.max())) + 1, -1)
+    image[pairs[:, 0]], image[pairs[:, 1]] = pairs[:, 1], pairs[:, 0]
+    twice = np.flatnonzero(image[row] >= 0)
+    return (np.concatenate([row, image[row[twice]]]), np.concatenate([column, column[twice]]),
+            np.concatenate([arm, arm[twice]]))
 
 
 def _gradient_rows(gradient: GradientOperator, cells: np.ndarray, axis: int,
