@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+import signal
+import threading
 import time
 import warnings
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from types import MappingProxyType
 from typing import Any
 
@@ -13,6 +16,7 @@ import numpy as np
 from .. import errors
 from ..errors import CaseError, DivergenceError, Fv3dWarning, Outcome
 from . import coupling
+from .checkpoint import Beginning
 from .coupling import Record, Workspace
 from .monitors import Monitor, Series
 from .outlets import at_levels
@@ -24,25 +28,30 @@ Advance = Callable[[Problem, State, Workspace], tuple[State, Record]]
 Stop = Callable[[list[Record]], Outcome | None]
 
 
-def drive(problem: Problem, state: State, workspace: Workspace, *, advance: Advance, stop: Stop,
-          name: str, monitors: Sequence[Monitor], progress: Progress, clock: str) -> Run:
+def drive(problem: Problem, beginning: Beginning, workspace: Workspace, *, advance: Advance,
+          stop: Stop, name: str, monitors: Sequence[Monitor], progress: Progress, clock: str,
+          moment: Callable[[Problem, State], Problem] = at_levels) -> Run:
     """Advance a state until ``stop`` or a monitor ends it, the user does, or it diverges.
 
     Parameters
     ----------
+    beginning : Beginning
+        State and records to go on from, and how the run is stored on its way.
     advance : (problem, state, workspace) -> (state, record)
     stop : list of records -> Outcome or None
     clock : str
         What the history counts: ``"iteration"`` or ``"time"``.
+    moment : (problem, state) -> problem
+        The problem as monitors and the run see it with that state.
 
     Raises
     ------
     DivergenceError
         The fields stopped being finite; carries the last finite run.
     """
-    began, records, outcome = time.perf_counter(), list[Record](), None
-    last = state
-    with progress as bar, np.errstate(all="ignore"):
+    began, records, outcome = time.perf_counter(), beginning.records, None
+    last, storing = beginning.state, beginning.storing
+    with progress as bar, np.errstate(all="ignore"), between_steps() as asked:
         try:
             while outcome is None:
                 state, record = advance(problem, last, workspace)
@@ -52,18 +61,49 @@ def drive(problem: Problem, state: State, workspace: Workspace, *, advance: Adva
                 records.append(record)
                 last = state
                 bar.show(record)
-                reason = next(filter(None, (m.see(problem, state, record) for m in monitors)), None)
+                seen = moment(problem, state) if monitors else problem
+                reason = next(filter(None, [m.see(seen, state, record) for m in monitors]), None)
                 outcome = stop(records)
                 if outcome is None and reason:
                     outcome = errors.stopped_by_monitor(len(records), reason)
+                if outcome is None and asked():
+                    outcome = errors.interrupted(len(records))
+                if storing is not None:
+                    storing.after(records, state, workspace, monitors, end=outcome is not None)
         except KeyboardInterrupt:
             outcome, state = errors.interrupted(len(records)), last
     if outcome.name != "diverged":
         state = coupling.conserve(problem, state, workspace)
-    run = Run(at_levels(problem, state), state, history(records, clock), outcome, name,
-              time.perf_counter() - began, _collected(monitors))
+    run = Run(moment(problem, state), state, history(records, clock), outcome, name,
+              beginning.seconds + time.perf_counter() - began, _collected(monitors))
     report(run)
     return run
+
+
+@contextmanager
+def between_steps() -> Iterator[Callable[[], bool]]:
+    """Lets an interruption from the keyboard wait for the end of the step; a second one does not.
+
+    Yields
+    ------
+    function that tells whether the user asked for an end
+    """
+    asked: list[int] = []
+
+    def note(number: int, frame: Any) -> None:
+        if asked:
+            raise KeyboardInterrupt
+        asked.append(number)
+
+    usual = threading.current_thread() is threading.main_thread() and \
+        signal.getsignal(signal.SIGINT) is signal.default_int_handler
+    if usual:
+        signal.signal(signal.SIGINT, note)
+    try:
+        yield lambda: bool(asked)
+    finally:
+        if usual:
+            signal.signal(signal.SIGINT, signal.default_int_handler)
 
 
 def _collected(monitors: Sequence[Monitor]) -> Mapping[str, Series]:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from typing import Any, Protocol
 
 import numpy as np
@@ -45,26 +45,39 @@ class Series:
         raise AttributeError(f"this series has {', '.join(columns)}, not '{name}'")
 
 
-@dataclass(eq=False)
-class _Keeper:
-    """Rows kept so far."""
+class Keeper:
+    """A monitor that keeps one row of arrays per step: iteration, time and columns."""
 
-    iteration: list[int] = field(default_factory=list)
-    time: list[float] = field(default_factory=list)
-    rows: list[dict[str, np.ndarray]] = field(default_factory=list)
+    def __init__(self, name: str) -> None:
+        self.name = name
+        self._rows: list[tuple[int, float, dict[str, np.ndarray]]] = []
 
     def keep(self, state: State, **row: np.ndarray) -> None:
-        self.iteration.append(state.iteration)
-        self.time.append(state.time)
-        self.rows.append(row)
+        """Add one row."""
+        self._rows.append((state.iteration, state.time, row))
 
     def series(self) -> Series:
-        names = list(self.rows[0]) if self.rows else []
-        columns = {name: np.array([row[name] for row in self.rows]) for name in names}
-        return Series(np.array(self.iteration, dtype=int), np.array(self.time), columns)
+        """What was kept."""
+        names = list(self._rows[0][2]) if self._rows else []
+        columns = {name: np.array([row[name] for _, _, row in self._rows]) for name in names}
+        return Series(np.array([count for count, _, _ in self._rows], dtype=int),
+                      np.array([time for _, time, _ in self._rows], dtype=float), columns)
+
+    def stored(self) -> dict[str, Any]:
+        """What was kept, for a checkpoint."""
+        series = self.series()
+        return {"iteration": series.iteration, "time": series.time, "columns": series.columns}
+
+    def restore(self, stored: dict[str, Any]) -> None:
+        """Go on from what a checkpoint kept."""
+        columns = stored["columns"]
+        self._rows = [(int(count), float(time), {name: column[k] for name, column
+                                                 in columns.items()})
+                      for k, (count, time) in enumerate(zip(stored["iteration"], stored["time"],
+                                                            strict=True))]
 
 
-class PointMonitor:
+class PointMonitor(Keeper):
     """Velocity and pressure at points, by the interpolation of ``run.sample``.
 
     Parameters
@@ -81,8 +94,8 @@ class PointMonitor:
     """
 
     def __init__(self, points: Any, *, name: str) -> None:
-        self.points, self.name = checked_points(points, "PointMonitor(points)"), name
-        self._keeper = _Keeper()
+        super().__init__(name)
+        self.points = checked_points(points, "PointMonitor(points)")
         self._to_points: tuple[Any, PointInterpolation] | None = None
 
     def see(self, problem: Problem, state: State, record: Record) -> str | None:
@@ -94,16 +107,12 @@ class PointMonitor:
         n = problem.mesh.n_internal
         at = self._to_points[1]
         face = pressure_fields(problem, state.pressure, state.mass_flux[n:]).face
-        self._keeper.keep(state, velocity=at(state.velocity, state.boundary_velocity),
-                          pressure=at(state.pressure, face[n:]))
+        self.keep(state, velocity=at(state.velocity, state.boundary_velocity),
+                  pressure=at(state.pressure, face[n:]))
         return None
 
-    def series(self) -> Series:
-        """What was kept."""
-        return self._keeper.series()
 
-
-class ForceMonitor:
+class ForceMonitor(Keeper):
     """Force of the fluid on a boundary, pressure and friction apart, and the moment.
 
     Parameters
@@ -123,9 +132,9 @@ class ForceMonitor:
 
     def __init__(self, boundary: str, *, name: str,
                  centre: Sequence[float] = (0.0, 0.0, 0.0)) -> None:
-        self.boundary, self.name = boundary, name
-        self.centre = np.asarray(centre, dtype=float)
-        self._keeper = _Keeper()
+        super().__init__(name)
+        self.boundary = boundary
+        self.centre = checked_points(np.asarray(centre), "ForceMonitor(centre=)")[0]
 
     def see(self, problem: Problem, state: State, record: Record) -> str | None:
         """Keep one row."""
@@ -141,10 +150,6 @@ class ForceMonitor:
         gradient = problem.velocity_gradient(state.velocity, state.boundary_velocity)
         drag = -boundary_traction(problem, state.velocity, gradient, state.boundary_velocity)[rows]
         moment = np.cross(mesh.face_centre[faces] - self.centre, push + drag).sum(axis=0)
-        self._keeper.keep(state, force=(push + drag).sum(axis=0), pressure_force=push.sum(axis=0),
-                          friction=drag.sum(axis=0), moment=moment)
+        self.keep(state, force=(push + drag).sum(axis=0), pressure_force=push.sum(axis=0),
+                  friction=drag.sum(axis=0), moment=moment)
         return None
-
-    def series(self) -> Series:
-        """What was kept."""
-        return self._keeper.series()

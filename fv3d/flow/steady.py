@@ -11,6 +11,7 @@ import numpy as np
 from .. import errors
 from ..errors import CaseError, Outcome, as_number
 from . import coupling
+from .checkpoint import Checkpoint, begin
 from .coupling import Record, make_workspace
 from .loop import check_kind, drive
 from .monitors import Monitor
@@ -47,7 +48,8 @@ def iterate(case: Case, *, sources: Sequence[Source] = (),
 
 def solve_steady(case: Case, *, tolerance: float, max_iterations: int,
                  sources: Sequence[Source] = (), start: Any = None, name: str | None = None,
-                 monitors: Sequence[Monitor] = (), progress: bool = True) -> Run:
+                 monitors: Sequence[Monitor] = (), progress: bool = True,
+                 checkpoint: Checkpoint | None = None) -> Run:
     """Iterate to a steady solution.
 
     Parameters
@@ -57,13 +59,16 @@ def solve_steady(case: Case, *, tolerance: float, max_iterations: int,
         On the largest of momentum, mass and misfit residual (see :class:`Record`).
     max_iterations : int
     sources : sequence of sources such as :class:`Feedback`
-    start : Run (of any mesh), velocity vector, function of points, or None
-        None: irrotational flow through the given fluxes.
+    start : Run (of any mesh), velocity vector, function of points, checkpoint, or None
+        None: irrotational flow through the given fluxes.  After :func:`read_checkpoint` the
+        iteration goes on where it was, to the last bit, and counts on.
     name : str, optional
         Default: ``"plain"`` without sources, else ``"guided"``.
     monitors : sequence of Monitor
     progress : bool
         Estimate of memory and time before, bar with time left during the run.
+    checkpoint : Checkpoint, optional
+        Where and how often the run is stored on its way.
 
     Returns
     -------
@@ -81,13 +86,14 @@ def solve_steady(case: Case, *, tolerance: float, max_iterations: int,
     check_kind(sources, ("start", "force", "correct"), "sources")
     check_kind(monitors, ("see",), "monitors")
     return _iterate_to_end(case, tolerance, max_iterations, tuple(sources), start, name, monitors,
-                           progress, None)
+                           progress, checkpoint, None)
 
 
 def solve_pseudo_transient(case: Case, *, tolerance: float, max_iterations: int,
                            pseudo_step: LocalStep | GlobalStep, sources: Sequence[Source] = (),
                            start: Any = None, name: str | None = None,
-                           monitors: Sequence[Monitor] = (), progress: bool = True) -> Run:
+                           monitors: Sequence[Monitor] = (), progress: bool = True,
+                           checkpoint: Checkpoint | None = None) -> Run:
     """Iterate to a steady solution with pseudo-time steps in place of relaxation factors.
 
     The steps imitate time but are none: history and monitors count iterations.
@@ -97,7 +103,7 @@ def solve_pseudo_transient(case: Case, *, tolerance: float, max_iterations: int,
     pseudo_step : LocalStep or GlobalStep
         Takes the place of the coupling's velocity relaxation; with ``ramp`` it grows as the
         residual falls.
-    case, tolerance, max_iterations, sources, start, name, monitors, progress
+    case, tolerance, max_iterations, sources, start, name, monitors, progress, checkpoint
         As in :func:`solve_steady`.
 
     Returns
@@ -117,17 +123,19 @@ def solve_pseudo_transient(case: Case, *, tolerance: float, max_iterations: int,
     check_kind(sources, ("start", "force", "correct"), "sources")
     check_kind(monitors, ("see",), "monitors")
     return _iterate_to_end(case, tolerance, max_iterations, tuple(sources), start, name, monitors,
-                           progress, pseudo_step)
+                           progress, checkpoint, pseudo_step)
 
 
 def _iterate_to_end(case: Case, tolerance: float, max_iterations: int,
                     sources: tuple[Source, ...], start: Any, name: str | None,
-                    monitors: Sequence[Monitor], progress: bool,
+                    monitors: Sequence[Monitor], progress: bool, checkpoint: Checkpoint | None,
                     pseudo_step: LocalStep | GlobalStep | None) -> Run:
     problem = make_problem(case, sources)
     workspace = make_workspace(problem, pseudo_step)
-    state = replace(start_state(problem, start, workspace), time=float("nan"), older=None)
     name = name or ("guided" if sources else "plain")
+
+    def fresh() -> State:
+        return replace(start_state(problem, start, workspace), time=float("nan"), older=None)
 
     def stop(records: list[Record]) -> Outcome | None:
         if records[-1].residual <= tolerance:
@@ -139,7 +147,9 @@ def _iterate_to_end(case: Case, tolerance: float, max_iterations: int,
             return errors.iteration_limit(len(records), records[-1].residual, tolerance)
         return None
 
-    return drive(problem, state, workspace, advance=coupling.step, stop=stop, name=name,
+    beginning = begin(problem, workspace, start=start, fresh=fresh, checkpoint=checkpoint,
+                      clock="iteration", name=name, monitors=monitors)
+    return drive(problem, beginning, workspace, advance=coupling.step, stop=stop, name=name,
                  monitors=monitors, clock="iteration",
                  progress=Progress(problem, name, tolerance, max_iterations, progress))
 

@@ -9,9 +9,11 @@ from typing import Any
 import numpy as np
 
 from ..errors import CaseError, Outcome, as_number
-from .coupling import Record, make_workspace
+from .checkpoint import Checkpoint, begin
+from .coupling import Record, Workspace, make_workspace
 from .loop import check_kind, drive
 from .monitors import Monitor
+from .outlets import refuse_flow_outlets
 from .problem import Case, Problem, State, make_problem
 from .progress import Progress
 from .run import Run
@@ -25,7 +27,7 @@ __all__ = ["TimeStep", "solve_transient"]
 def solve_transient(case: Case, *, time_step: float | CourantStep, end_time: float,
                     sources: Sequence[Any] = (), start: Any = None, outer_iterations: int = 1,
                     name: str | None = None, monitors: Sequence[Monitor] = (),
-                    progress: bool = True) -> Run:
+                    progress: bool = True, checkpoint: Checkpoint | None = None) -> Run:
     """Follow the flow in time.
 
     Parameters
@@ -38,14 +40,17 @@ def solve_transient(case: Case, *, time_step: float | CourantStep, end_time: flo
         Counted from the start field, or on from the time of a transient start run.
     sources : sequence of sources such as :class:`Feedback`
         With readings resolved in time, which are interpolated to every step.
-    start : Run, velocity vector, function of points, or None
-        None: irrotational flow.  A transient run on the same mesh is continued where it stopped.
+    start : Run, velocity vector, function of points, checkpoint, or None
+        None: irrotational flow.  A transient run on the same mesh is continued where it stopped,
+        after :func:`read_checkpoint` to the last bit.
     outer_iterations : int
         Repetitions within a step, for large Courant numbers.
     name : str, optional
         Default: ``"transient"`` without sources, else ``"guided"``.
     monitors : sequence of Monitor
         Afterwards in ``run.series`` under their names.
+    checkpoint : Checkpoint, optional
+        Where and how often the run is stored on its way.
 
     Returns
     -------
@@ -66,25 +71,33 @@ def solve_transient(case: Case, *, time_step: float | CourantStep, end_time: flo
     check_kind(sources, (), "sources")
     timed = tuple(getattr(source, "in_time", source) for source in sources)
     check_kind(timed, ("start", "force", "advance"), "sources")
+    refuse_flow_outlets(case.boundaries)
     problem = make_problem(case, timed)
     workspace = make_workspace(problem)
-    state, began = _begin(problem, start, workspace)
-    if not end_time > began:
+    name = name or ("guided" if timed else "transient")
+    beginning = begin(problem, workspace, start=start, checkpoint=checkpoint, clock="time",
+                      name=name, fresh=lambda: _fresh(problem, start, workspace),
+                      monitors=monitors)
+    state = beginning.state
+    if not end_time > state.time:
         raise CaseError("The end lies before the start.", where="solve_transient(end_time=)",
-                        got=f"{end_time:g} s, start at {began:g} s", remedy="Give a later time.")
+                        got=f"{end_time:g} s, start at {state.time:g} s",
+                        remedy="Give a later time.")
     last = None if state.older is None else state.older.step
-    steps = int(np.ceil((end_time - began) / sizes.size(problem, state, last) * (1.0 - 1e-12)))
-    end = began + steps * sizes.seconds if isinstance(sizes, FixedStep) else end_time
+    size = sizes.size(problem, state, last)
+    steps = int(np.ceil((end_time - state.time) / size * (1.0 - 1e-12)))
+    end = state.time + steps * size if isinstance(sizes, FixedStep) else end_time
 
     def stop(records: list[Record]) -> Outcome | None:
-        if records[-1].time < end - 1e-6 * (records[-1].time - began) / len(records):
+        span = records[-1].time - beginning.began
+        if records[-1].time < end - 1e-6 * span / len(records):
             return None
         return Outcome("finished", f"Reached {records[-1].time:g} s in {len(records)} steps of "
-                                   f"{_span(records, began)} s.", "", True)
+                                   f"{_sizes(records, beginning.began)} s.", "", True)
 
-    name = name or ("guided" if timed else "transient")
-    return drive(problem, state, workspace, stop=stop, name=name, monitors=monitors, clock="time",
-                 advance=TimeStep(sizes, end=end, outer=outer_iterations),
+    return drive(problem, beginning, workspace, stop=stop, name=name, monitors=monitors,
+                 clock="time", advance=TimeStep(sizes, end=end, outer=outer_iterations),
+                 moment=lambda problem, state: problem_at(problem, state.time),
                  progress=Progress(problem, name, 1e-300, steps, progress))
 
 
@@ -102,19 +115,18 @@ def _checked(time_step: Any, end_time: Any, outer_iterations: Any) -> StepSize:
     return sizes
 
 
-def _begin(problem: Problem, start: Any, workspace: Any) -> tuple[State, float]:
-    """State before the first step and its time [s]; a run in time is continued."""
+def _fresh(problem: Problem, start: Any, workspace: Workspace) -> State:
+    """State before the first step; a run in time on the same mesh is continued."""
     goes_on = hasattr(start, "state") and start.mesh is problem.mesh \
         and not np.isnan(start.state.time)
     began = float(start.state.time) if goes_on else 0.0
     state = start_state(problem_at(problem, began), start, workspace)
     if not goes_on:
-        return replace(state, time=began, older=None), began
-    return replace(state, time=began, older=start.state.older,
-                   iteration=start.state.iteration), began
+        return replace(state, time=began, older=None)
+    return replace(state, time=began, older=start.state.older, iteration=start.state.iteration)
 
 
-def _span(records: list[Record], began: float) -> str:
+def _sizes(records: list[Record], began: float) -> str:
     steps = np.diff([began, *(record.time for record in records)])
     least, most = float(steps.min()), float(steps.max())
     return f"{most:g}" if most - least <= 1e-6 * most else f"{least:.3g} to {most:.3g}"

@@ -59,9 +59,9 @@ class FeedbackInTime:
         used = np.flatnonzero(_directions_used(fed).ravel())
         projection = make_projection(problem)
         potential, rest, answer = _columns(problem, projection, layout, used)
-        begun = StateInTime(
-            fed, layout, used, potential, rest, answer, self.law.gains(problem, fed, layout, velocity),
-            np.zeros(fed.n_components), np.zeros((len(fed), 3)), self.law.advice(problem, layout))
+        gain = self.law.gains(problem, fed, layout, velocity)
+        begun = StateInTime(fed, layout, used, potential, rest, answer, gain, np.zeros(len(gain)),
+                            np.zeros((len(fed), 3)), self.law.advice(problem, layout))
         if isinstance(earlier, StateInTime) and len(earlier.strength) == fed.n_components:
             begun = replace(begun, gain=earlier.gain, strength=earlier.strength,
                             vector=earlier.vector, tally=earlier.tally)
@@ -142,8 +142,9 @@ class StateInTime:
     """Strengths ``a`` (m,) [m/s^2] with the projected kernels.
 
     ``used`` (k,) columns of place and axis that readings need, ``potential`` and ``rest``
-    (n_cells, k) theirs [m^2/s^2], see :func:`fv3d.flow.projected.full_potential`; ``answer`` (n_places, 3, n_places, 3) velocity at each place along each axis to the
-    projected kernel of each place and axis; ``vector`` (n_places, 3) the force's strengths.
+    (n_cells, k) theirs [m^2/s^2], see :func:`fv3d.flow.projected.full_potential`; ``answer``
+    (n_places, 3, n_places, 3) velocity at each place along each axis to the projected kernel of
+    each place and axis; ``vector`` (n_places, 3) the force's strengths.
     """
 
     readings: Readings
