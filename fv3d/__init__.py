@@ -15,6 +15,7 @@ from .errors import (
     ReadingError,
 )
 from .flow.boundary import Inlet, Outlet, Slip, Symmetry, Wall
+from .flow.checkpoint import Checkpoint, read_checkpoint
 from .flow.developed import DevelopedProfile, developed_profile
 from .flow.fluid import Fluid, moist_air, water
 from .flow.inlets import InletTable
@@ -58,10 +59,10 @@ from .signals import Estimate, dominant_frequency, lag, mean_value, strouhal_num
 
 __all__ = [
     "SIMPLE", "SIMPLEC", "BarthJespersen", "Blended", "BoundaryError", "BoundaryForce",
-    "ByAnisotropy", "Case", "CaseError", "Central", "Classical", "Comparison", "CourantStep",
-    "DevelopedProfile", "DivergenceError", "Estimate", "Feedback", "FileError", "FlowOutlet",
-    "FlowSplit", "Fluid", "ForceBudget", "ForceCoefficients", "ForceMonitor", "Fv3dError",
-    "Fv3dWarning", "GlobalStep", "GreenGauss", "Inlet", "InletTable", "LeastSquares",
+    "ByAnisotropy", "Case", "CaseError", "Central", "Checkpoint", "Classical", "Comparison",
+    "CourantStep", "DevelopedProfile", "DivergenceError", "Estimate", "Feedback", "FileError",
+    "FlowOutlet", "FlowSplit", "Fluid", "ForceBudget", "ForceCoefficients", "ForceMonitor",
+    "Fv3dError", "Fv3dWarning", "GlobalStep", "GreenGauss", "Inlet", "InletTable", "LeastSquares",
     "LimitedUpwind", "LocalStep", "Mesh", "MeshError", "MichalakOllivierGooch", "MomentumBudget",
     "Numerics", "OneSided", "Outcome", "Outlet", "PointMonitor", "Profile", "ReadingError",
     "Readings", "Reference", "Reversals", "Run", "SecondOrderUpwind", "Slip", "SmoothedAggregation",
@@ -70,8 +71,8 @@ __all__ = [
     "developed_profile", "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget",
     "force_coefficients", "get_threads", "inlet_table", "iterate", "join_periodic", "lag",
     "mean_value", "mixed_box", "moist_air", "momentum_budget", "nozzle", "observe", "picture",
-    "picture_readings", "pipe", "profile", "pyramid_box", "quality", "read_mesh", "read_readings",
-    "set_threads", "shear_reversals", "skewed", "solve_pseudo_transient", "solve_steady",
-    "solve_transient", "strouhal_number", "wall_shear", "water", "wedge_box", "write_history",
-    "write_mesh", "write_readings", "write_surface", "write_vtk",
+    "picture_readings", "pipe", "profile", "pyramid_box", "quality", "read_checkpoint", "read_mesh",
+    "read_readings", "set_threads", "shear_reversals", "skewed", "solve_pseudo_transient",
+    "solve_steady", "solve_transient", "strouhal_number", "wall_shear", "water", "wedge_box",
+    "write_history", "write_mesh", "write_readings", "write_surface", "write_vtk",
 ]
