@@ -7,7 +7,20 @@ from typing import Any
 
 import numpy as np
 import pytest
-from test_bad_input import AIR, INF, MESH, NAN, Bad, boundaries, case, readings, run, steady
+from test_bad_input import (
+    AIR,
+    INF,
+    MESH,
+    NAN,
+    Bad,
+    boundaries,
+    case,
+    no_such_column,
+    readings,
+    run,
+    steady,
+    wrong_shape,
+)
 
 import fv3d
 import fv3d.flow.coupling
@@ -24,6 +37,16 @@ REFERENCE: dict[str, Any] = {"density": 1.2, "speed": 1.0, "area": 1.0, "length"
 LINE: dict[str, Any] = {"start": (0.1, 0.5, 0.5), "end": (0.9, 0.5, 0.5), "count": 5}
 PROFILE: dict[str, Any] = {"fluid": AIR, "mean_speed": 1.0}
 PLANE = np.array([[0.0, 0.0, 0.0], [0.0, 1.0, 0.0], [0.0, 0.0, 1.0], [0.0, 1.0, 1.0]])
+
+
+VALUES = {b: fv3d.ScalarValue(0.0) for b in MESH.boundaries}
+SCALAR: dict[str, Any] = {"diffusivity": 1.0, "tolerance": 1e-8, "max_iterations": 50,
+                          "boundaries": VALUES}
+
+
+def scalar(**changed: Any) -> fv3d.ScalarField:
+    """A scalar with these conditions in a uniform stream along (1, 1, 1)."""
+    return fv3d.solve_scalar(run(), **SCALAR | {"boundaries": VALUES | changed})
 
 
 def inlet(points: np.ndarray) -> fv3d.Case:
@@ -119,6 +142,36 @@ TABLE: dict[str, tuple[type[Fv3dError], Bad]] = {
                               y_max=fv3d.FlowOutlet(share=0.6))))),
     "flow outlet: share without inlet": (BoundaryError, lambda d: steady(of=case(
         boundaries=boundaries(x_min=fv3d.Outlet(1.0), y_max=fv3d.FlowOutlet(share=0.6))))),
+    # scalars
+    "scalar: value a text": (BoundaryError, lambda d: fv3d.ScalarValue("warm")),
+    "scalar: value NaN": (BoundaryError, lambda d: fv3d.ScalarValue(NAN)),
+    "scalar: flux a vector": (BoundaryError, lambda d: fv3d.ScalarFlux((1.0, 0.0, 0.0))),
+    "scalar: of a case": (CaseError, lambda d: fv3d.solve_scalar(case(), **SCALAR)),
+    "scalar: negative diffusivity":
+        (CaseError, lambda d: fv3d.solve_scalar(run(), **SCALAR | {"diffusivity": -1.0})),
+    "scalar: diffusivity of foreign length":
+        (CaseError, lambda d: fv3d.solve_scalar(run(), **SCALAR | {"diffusivity": np.ones(5)})),
+    "scalar: source a text":
+        (CaseError, lambda d: fv3d.solve_scalar(run(), **SCALAR | {"source": "sun"})),
+    "scalar: zero tolerance":
+        (CaseError, lambda d: fv3d.solve_scalar(run(), **SCALAR | {"tolerance": 0.0})),
+    "scalar: no iterations":
+        (CaseError, lambda d: fv3d.solve_scalar(run(), **SCALAR | {"max_iterations": 0})),
+    "scalar: scheme by name":
+        (CaseError, lambda d: fv3d.solve_scalar(run(), **SCALAR | {"convection": "upwind"})),
+    "scalar: boundary misspelt": (BoundaryError, lambda d: scalar(x_mim=fv3d.ScalarValue(1.0))),
+    "scalar: boundary of another kind": (BoundaryError, lambda d: scalar(x_min=fv3d.Wall())),
+    "scalar: not a mapping":
+        (BoundaryError, lambda d: fv3d.solve_scalar(run(), **SCALAR | {"boundaries": [1.0]})),
+    "scalar: inflow without value": (BoundaryError, lambda d: scalar(x_min=fv3d.ScalarFlux())),
+    "scalar: function of wrong shape":
+        (BoundaryError, lambda d: scalar(x_min=fv3d.ScalarValue(wrong_shape))),
+    "scalar: function that raises":
+        (BoundaryError, lambda d: scalar(x_min=fv3d.ScalarValue(no_such_column))),
+    "scalar: flux without diffusivity": (BoundaryError, lambda d: fv3d.solve_scalar(
+        run(), **SCALAR | {"diffusivity": 0.0, "boundaries": {
+            "x_min": fv3d.ScalarValue(0.0), "y_min": fv3d.ScalarValue(0.0),
+            "z_min": fv3d.ScalarValue(0.0), "x_max": fv3d.ScalarFlux(1.0)}})),
     # profiles
     "profile: of a case": (CaseError, lambda d: fv3d.profile(case(), **LINE)),
     "profile: one point": (CaseError, lambda d: fv3d.profile(run(), **LINE | {"count": 1})),
@@ -158,5 +211,6 @@ def test_good_input_passes(tmp_path: Path) -> None:
     fv3d.shear_reversals(run(), "y_min", along=(1.0, 0.0, 0.0))
     fv3d.flow_split(run())
     assert inlet(PLANE).mesh is MESH
+    assert scalar(x_min=fv3d.ScalarValue(1.0)).outcome.good
     assert fv3d.developed_profile(MESH, "x_min", **PROFILE).mean_speed == 1.0
     assert len(fv3d.inlet_table(readings(), unmeasured=(0.0, 0.0, 0.0)).points) == 2

@@ -183,3 +183,24 @@ def limited_extension(mesh: Mesh, cells: np.ndarray, edge: np.ndarray, gradient:
     kernels.limited_reach(mesh.left[:mesh.n_internal], mesh.right, mesh.face_centre,
                           mesh.cell_centre, mesh.delta, mass_flux, cells, gradient, low, high, out)
     return out
+
+
+def limited_outflow(mesh: Mesh, cells: np.ndarray, edge: np.ndarray,
+                    gradient: np.ndarray) -> np.ndarray:
+    """As :func:`limited_extension`, from the owner to each boundary face.
+
+    Parameters
+    ----------
+    cells : (n_cells, k), edge : (n_boundary, k), gradient : (n_cells, k, 3)
+
+    Returns
+    -------
+    (n_boundary, k)
+    """
+    n = mesh.n_internal
+    low, high = value_range(mesh, cells, edge, np.ones(mesh.n_boundary, bool), rings=2)
+    out = np.empty((mesh.n_boundary, cells.shape[1]))
+    owner = mesh.left[n:]
+    kernels.limited_reach(owner, owner, mesh.face_centre[n:], mesh.cell_centre, mesh.delta[n:],
+                          np.ones(mesh.n_boundary), cells, gradient, low, high, out)
+    return out
