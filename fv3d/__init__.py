@@ -43,6 +43,7 @@ from .mesh.periodic import join_periodic
 from .mesh.quality import check_mesh, quality
 from .mesh.read import read_mesh
 from .mesh.surfaces import boundary_map
+from .mesh.wall_distance import wall_distance
 from .mesh.write import write_mesh
 from .operators.fluxes import Blended, Central, LimitedUpwind, SecondOrderUpwind, Upwind
 from .operators.gradient import GreenGauss, LeastSquares
@@ -76,6 +77,6 @@ __all__ = [
     "moist_air", "momentum_budget", "nozzle", "observe", "picture", "picture_readings", "pipe",
     "profile", "pyramid_box", "quality", "read_checkpoint", "read_mesh", "read_readings",
     "set_threads", "shear_reversals", "skewed", "solve_pseudo_transient", "solve_scalar",
-    "solve_steady", "solve_transient", "strouhal_number", "wall_shear", "water", "wedge_box",
-    "write_history", "write_mesh", "write_readings", "write_surface", "write_vtk",
+    "solve_steady", "solve_transient", "strouhal_number", "wall_distance", "wall_shear", "water",
+    "wedge_box", "write_history", "write_mesh", "write_readings", "write_surface", "write_vtk",
 ]

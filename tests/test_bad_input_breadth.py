@@ -172,6 +172,12 @@ TABLE: dict[str, tuple[type[Fv3dError], Bad]] = {
         run(), **SCALAR | {"diffusivity": 0.0, "boundaries": {
             "x_min": fv3d.ScalarValue(0.0), "y_min": fv3d.ScalarValue(0.0),
             "z_min": fv3d.ScalarValue(0.0), "x_max": fv3d.ScalarFlux(1.0)}})),
+    # wall distance
+    "wall distance: no mesh": (MeshError, lambda d: fv3d.wall_distance("y_min", MESH)),
+    "wall distance: no walls": (MeshError, lambda d: fv3d.wall_distance(MESH, [])),
+    "wall distance: no such wall": (MeshError, lambda d: fv3d.wall_distance(MESH, ["y_mni"])),
+    "wall distance: points of two coordinates":
+        (MeshError, lambda d: fv3d.wall_distance(MESH, ["y_min"], points=[[0.0, 1.0]])),
     # profiles
     "profile: of a case": (CaseError, lambda d: fv3d.profile(case(), **LINE)),
     "profile: one point": (CaseError, lambda d: fv3d.profile(run(), **LINE | {"count": 1})),
