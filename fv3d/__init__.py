@@ -17,11 +17,13 @@ from .errors import (
 from .flow.boundary import Inlet, Outlet, Slip, Symmetry, Wall
 from .flow.checkpoint import Checkpoint, read_checkpoint
 from .flow.developed import DevelopedProfile, developed_profile
+from .flow.driving import pressure_drop
 from .flow.fluid import Fluid, moist_air, water
 from .flow.inlets import InletTable
 from .flow.monitors import ForceMonitor, PointMonitor
 from .flow.numerics import SIMPLE, SIMPLEC, GlobalStep, LocalStep, Numerics
 from .flow.outlets import FlowOutlet
+from .flow.periodic import Periodic
 from .flow.problem import Case
 from .flow.run import Run
 from .flow.scalar import ScalarField, solve_scalar
@@ -67,16 +69,17 @@ __all__ = [
     "FlowOutlet", "FlowSplit", "Fluid", "ForceBudget", "ForceCoefficients", "ForceMonitor",
     "Fv3dError", "Fv3dWarning", "GlobalStep", "GreenGauss", "Inlet", "InletTable", "LeastSquares",
     "LimitedUpwind", "LocalStep", "Mesh", "MeshError", "MichalakOllivierGooch", "MomentumBudget",
-    "Numerics", "OneSided", "Outcome", "Outlet", "PointMonitor", "Profile", "ReadingError",
-    "Readings", "Reference", "Reversals", "Run", "ScalarField", "ScalarFlux", "ScalarValue",
-    "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided",
-    "Uniform", "Upwind", "Wall", "backward_step", "boundary_map", "box", "build_mesh",
+    "Numerics", "OneSided", "Outcome", "Outlet", "Periodic", "PointMonitor", "Profile",
+    "ReadingError", "Readings", "Reference", "Reversals", "Run", "ScalarField", "ScalarFlux",
+    "ScalarValue", "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing", "Symmetry",
+    "TwoSided", "Uniform", "Upwind", "Wall", "backward_step", "boundary_map", "box", "build_mesh",
     "channel_with_block", "channel_with_cylinder", "check_mesh", "compare", "developed_profile",
     "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget", "force_coefficients",
     "get_threads", "inlet_table", "iterate", "join_periodic", "lag", "mean_value", "mixed_box",
     "moist_air", "momentum_budget", "nozzle", "observe", "picture", "picture_readings", "pipe",
-    "profile", "pyramid_box", "quality", "read_checkpoint", "read_mesh", "read_readings",
-    "set_threads", "shear_reversals", "skewed", "solve_pseudo_transient", "solve_scalar",
-    "solve_steady", "solve_transient", "strouhal_number", "wall_distance", "wall_shear", "water",
-    "wedge_box", "write_history", "write_mesh", "write_readings", "write_surface", "write_vtk",
+    "pressure_drop", "profile", "pyramid_box", "quality", "read_checkpoint", "read_mesh",
+    "read_readings", "set_threads", "shear_reversals", "skewed", "solve_pseudo_transient",
+    "solve_scalar", "solve_steady", "solve_transient", "strouhal_number", "wall_distance",
+    "wall_shear", "water", "wedge_box", "write_history", "write_mesh", "write_readings",
+    "write_surface", "write_vtk",
 ]

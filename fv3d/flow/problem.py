@@ -19,6 +19,7 @@ from .fluid import Fluid
 from .inlets import warn_of_beyond
 from .numerics import Numerics
 from .outlets import OutletFlow, outlet_flows
+from .periodic import Periodic, joined
 
 BodyForce = Any
 
@@ -40,10 +41,12 @@ class Case:
     viscosity : (n_cells,) array, optional
         Viscosity of each cell [Pa s] where it differs from the fluid's.
     numerics : Numerics
+    periodic : mapping, made by the case
+        Its periodic conditions, taken out of ``boundaries``; their pairs are joined in ``mesh``.
 
     Raises
     ------
-    BoundaryError, CaseError
+    BoundaryError, CaseError, MeshError
         A boundary missing, misspelt or not a condition; a value of wrong shape or not finite.
     """
 
@@ -54,6 +57,7 @@ class Case:
     body_force_factor: Callable[[float], float] | None = field(default=None, kw_only=True)
     viscosity: np.ndarray | None = field(default=None, kw_only=True)
     numerics: Numerics = field(default_factory=Numerics, kw_only=True)
+    periodic: Mapping[str, Periodic] = field(default_factory=dict, kw_only=True, repr=False)
 
     def __post_init__(self) -> None:
         if not isinstance(self.mesh, Mesh):
@@ -72,6 +76,10 @@ class Case:
             raise CaseError("The factor of the body force is a function of time.",
                             where="Case(body_force_factor=)", got=repr(self.body_force_factor),
                             remedy="Give a function of seconds that returns a number.")
+        mesh, boundaries, periodic = joined(self.mesh, self.boundaries)
+        for name, value in (("mesh", mesh), ("boundaries", boundaries),
+                            ("periodic", {**self.periodic, **periodic})):
+            object.__setattr__(self, name, value)
         boundary_table(self.mesh, self.boundaries)
         body_force_cells(self)
         _cell_viscosity(self)
@@ -157,12 +165,31 @@ class Source(Protocol):
         ...
 
     def correct(self, own: Any, problem: Problem, state: State, change: np.ndarray,
-                relax: Callable[..., Any]) -> tuple[Any, np.ndarray, float]:
-        """New own state, corrected velocity change, and the misfit of ``state`` over its scale.
+                relax: Callable[..., Any]) -> Correction:
+        """What becomes of the source and of the velocity change (n_cells, 3) of an iteration.
 
-        ``relax`` is the inexact momentum solve: right-hand side [N] to velocity change.
+        ``relax`` is the inexact momentum solve: right-hand side [N] to velocity change, by
+        ``relax.count`` sweeps.
         """
         ...
+
+
+@dataclass(frozen=True, eq=False)
+class Correction:
+    """A source's part in an iteration.
+
+    Attributes
+    ----------
+    own : its new state
+    change : (n_cells, 3) the velocity change with its correction [m/s]
+    misfit : misfit of the state before the iteration, over its scale
+    pressure : (n_cells,) pressure change that goes with the new force [Pa], or None
+    """
+
+    own: Any
+    change: np.ndarray
+    misfit: float = 0.0
+    pressure: np.ndarray | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -212,6 +239,7 @@ def make_problem(case: Case, sources: tuple[Source, ...] = ()) -> Problem:
     if not isinstance(case, Case):
         raise CaseError("Only a case can be solved.", where="the first argument",
                         got=type(case).__name__, remedy="Give Case(mesh, fluid, boundaries=...).")
+    from .driving import drives_of
     mesh, numerics = case.mesh, case.numerics
     table = boundary_table(mesh, case.boundaries)
     inside = mesh.n_internal
@@ -238,7 +266,7 @@ def make_problem(case: Case, sources: tuple[Source, ...] = ()) -> Problem:
                    numerics.gradient.weights(mesh, BoundaryKnowledge.everywhere(mesh)),
                    unlimited(numerics.gradient).weights(mesh, known), viscosity, face_viscosity,
                    full, None if cell_force is None else balanced_force(mesh, cell_force),
-                   fixed_flux, closed, sources,
+                   fixed_flux, closed, (*sources, *drives_of(case)),
                    outlet_flows(mesh, case.boundaries, table, fixed_flux, case.fluid.density))
 
 

@@ -76,11 +76,23 @@ class Run:
         """Force of all sources [m/s^2], as the equations use it."""
         mesh = self.mesh
         parts = [source.force(own) for source, own
-                 in zip(self.problem.sources, self.state.sources, strict=True)]
+                 in zip(self.problem.sources, self.state.sources, strict=True)
+                 if getattr(source, "artificial", True)]
         cell, drop = np.zeros((mesh.n_cells, 3)), np.zeros(mesh.n_faces)
         for part in parts:
             cell, drop = cell + part.cell, drop + part.drop
         return Force(cell, drop)
+
+    @property
+    def body_force(self) -> np.ndarray:
+        """(n_cells, 3) body force of the case and drives of periodic pairs [m/s^2]."""
+        total = np.zeros((self.mesh.n_cells, 3))
+        if self.problem.force is not None:
+            total += self.problem.force.cell
+        for source, own in zip(self.problem.sources, self.state.sources, strict=True):
+            if not getattr(source, "artificial", True):
+                total += source.force(own).cell
+        return total
 
     @property
     def artificial_force(self) -> np.ndarray:

@@ -28,9 +28,10 @@ def run_sheet(run: Any) -> str:
         f"{type(numerics.gradient).__name__}",
         f"  outcome    {run.outcome}",
     ]
+    guided = any(getattr(source, "artificial", True) for source in run.problem.sources)
     if last:
         lines.append(f"  residuals  momentum {last['momentum']:.1e}, mass {last['mass']:.1e}"
-                     + (f", readings {last['misfit']:.1e}" if run.problem.sources else ""))
+                     + (f", readings {last['misfit']:.1e}" if guided else ""))
     imbalance = mass_residual(run.problem, run.mass_flux, run.velocity, run.state.pressure)
     lines.append(f"  mass       summed imbalance {imbalance:.1e} of the reference flux")
     speed = np.linalg.norm(run.velocity, axis=1)

@@ -26,17 +26,22 @@ def start_state(problem: Problem, start: Any, workspace: Workspace) -> State:
     CaseError
         The start is of another kind, has a wrong shape or is not finite.
     """
-    earlier: dict[int, Any] = {}
+    earlier: dict[Any, Any] = {}
     if start is None:
         state = potential_start(problem, workspace)
     elif hasattr(start, "state") and hasattr(start, "problem"):
         state = _from_run(problem, start)
-        earlier = dict(zip(map(id, start.problem.sources), start.state.sources, strict=True))
+        earlier = dict(zip(map(_key, start.problem.sources), start.state.sources, strict=True))
     else:
         state = _from_values(problem, start)
-    sources = tuple(source.start(problem, state, earlier.get(id(source)))
+    sources = tuple(source.start(problem, state, earlier.get(_key(source)))
                     for source in problem.sources)
     return replace(state, sources=sources, levels=start_levels(problem, start))
+
+
+def _key(source: Any) -> Any:
+    """What a source is known by in a start run: its own key, or that it is the same object."""
+    return getattr(source, "key", id(source))
 
 
 def _from_values(problem: Problem, start: Any) -> State:

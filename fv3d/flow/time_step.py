@@ -73,13 +73,14 @@ class Moment:
     """A projected velocity on its way to a new level, as sources see it.
 
     ``time`` [s]; ``step`` [s] over the leading coefficient: what a force is multiplied with to
-    change the velocity.
+    change the velocity; ``mass_flux`` (n_faces,) [kg/s].
     """
 
     velocity: np.ndarray
     boundary_velocity: np.ndarray
     time: float
     step: float
+    mass_flux: np.ndarray
 
 
 @dataclass(frozen=True, eq=False)
@@ -254,7 +255,8 @@ def _push(problem: Problem, state: State, gradient: np.ndarray,
     """The state after what the sources' forces have changed by, and their largest misfit."""
     n, step, misfit, sources = problem.mesh.n_internal, difference.step / difference.lead, 0.0, []
     for source, own in zip(problem.sources, state.sources, strict=True):
-        moment = Moment(state.velocity, state.boundary_velocity, state.time, step)
+        moment = Moment(state.velocity, state.boundary_velocity, state.time, step,
+                        state.mass_flux)
         own, push, error = source.advance(own, problem, moment)  # type: ignore[attr-defined]
         sources.append(own)
         misfit = max(misfit, error)

@@ -167,7 +167,7 @@ def _as_internal(mesh: Mesh, match: _Match) -> Mesh:
 def _check_period(mesh: Mesh, match: _Match, key: np.ndarray, left: np.ndarray,
                   right: np.ndarray) -> None:
     """A cell cannot be its own neighbour, nor a neighbour twice."""
-    values, first, count = np.unique(key, return_index=True, return_counts=True)
+    _, first, count = np.unique(key, return_index=True, return_counts=True)
     bad = np.concatenate([np.flatnonzero(left == right), first[count > 1]])
     if bad.size:
         raise MeshError("Joined boundaries need three cells from one to the other.",

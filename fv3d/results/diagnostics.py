@@ -116,7 +116,7 @@ class MomentumBudget:
     ----------
     boundaries : mapping of name to the force of the boundary on the fluid (pressure, friction)
     convected : momentum carried in through the boundaries
-    body : body force of the case
+    body : body force of the case and drives of periodic pairs
     artificial : force of the sources, without its irrotational part
     """
 
@@ -178,9 +178,7 @@ def momentum_budget(run: Run) -> MomentumBudget:
                                run.state.boundary_velocity, run.mass_flux[n:])
     convected = -(run.mass_flux[n:, None] * carried).sum(axis=0)
     volume = mesh.cell_volume[:, None]
-    body = np.zeros(3)
-    if run.problem.force is not None:
-        body = density * (run.problem.force.cell * volume).sum(axis=0)
+    body = density * (run.body_force * volume).sum(axis=0)
     return MomentumBudget(boundaries, convected, body, net_artificial_force(run))
 
 
