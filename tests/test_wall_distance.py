@@ -33,8 +33,9 @@ def test_pipe(tetra: bool) -> None:
     mesh = fv3d.pipe(length=1.0, diameter=2.0, cells=4, core=4, tetra=tetra)
     got = fv3d.wall_distance(mesh, ["wall"])
     circle = 1.0 - np.linalg.norm(mesh.cell_centre[:, :2], axis=1)
-    sides = mesh.face_centre[mesh.boundaries["wall"], :2]
-    sagitta = 1.0 - np.linalg.norm(sides, axis=1).min()
+    corners = mesh.points[mesh.face_points[mesh.boundaries["wall"]][:, :3]]
+    halfway = 0.5 * (corners + np.roll(corners, 1, axis=1))[:, :, :2]
+    sagitta = 1.0 - np.linalg.norm(halfway, axis=2).min()
     assert 1e-3 < sagitta < 0.01
     assert np.all(got <= circle + 1e-12) and np.all(got >= circle - sagitta - 1e-12)
     axis = fv3d.wall_distance(mesh, ["wall"], points=np.array([[0.0, 0.0, 0.4]]))
