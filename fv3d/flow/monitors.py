@@ -8,7 +8,7 @@ from typing import Any, Protocol
 
 import numpy as np
 
-from ..errors import CaseError
+from ..errors import CaseError, did_you_mean
 from ..operators.interpolation import PointInterpolation, checked_points, point_interpolation
 from .coupling import Record
 from .equations import boundary_traction, pressure_fields
@@ -31,7 +31,8 @@ class Series:
 
     ``iteration`` (n,) counts iterations or time steps, ``time`` (n,) is in seconds in transient
     runs and nan in steady ones, where an iteration is no time.  The other columns are attributes:
-    ``velocity``, ``pressure`` of points; ``force``, ``pressure_force``, ``friction``, ``moment``.
+    ``velocity``, ``pressure`` of points; ``force``, ``pressure_force``, ``friction``, ``moment``;
+    ``flow_rate``.
     """
 
     iteration: np.ndarray
@@ -139,11 +140,7 @@ class ForceMonitor(Keeper):
     def see(self, problem: Problem, state: State, record: Record) -> str | None:
         """Keep one row."""
         mesh, n = problem.mesh, problem.mesh.n_internal
-        if self.boundary not in mesh.boundaries:
-            raise CaseError("No such boundary.", where=f"ForceMonitor '{self.name}'",
-                            got=repr(self.boundary),
-                            remedy=f"The mesh has: {', '.join(mesh.boundaries)}.")
-        faces = mesh.boundaries[self.boundary]
+        faces = boundary_span(problem, self.boundary, f"ForceMonitor '{self.name}'")
         rows = slice(faces.start - n, faces.stop - n)
         fields = pressure_fields(problem, state.pressure, state.mass_flux[n:])
         push = fields.face[faces, None] * mesh.face_area[faces] + fields.warp_force[faces]
@@ -153,3 +150,48 @@ class ForceMonitor(Keeper):
         self.keep(state, force=(push + drag).sum(axis=0), pressure_force=push.sum(axis=0),
                   friction=drag.sum(axis=0), moment=moment)
         return None
+
+
+class FlowRateMonitor(Keeper):
+    """Flow through a boundary, positive out of the domain.
+
+    Parameters
+    ----------
+    boundary : str
+    name : str
+        Key in ``run.series``; the series has ``flow_rate`` [m^3/s] and ``mass_flow`` [kg/s], both
+        (steps,), and ``back_flow`` [m^3/s], the part that flows against the net flow.
+
+    Raises
+    ------
+    CaseError
+        No such boundary, at the first step.
+    """
+
+    def __init__(self, boundary: str, *, name: str) -> None:
+        super().__init__(name)
+        self.boundary = boundary
+
+    def see(self, problem: Problem, state: State, record: Record) -> str | None:
+        """Keep one row."""
+        flux = state.mass_flux[boundary_span(problem, self.boundary, f"monitor '{self.name}'")]
+        net, gross = flux.sum(), np.abs(flux).sum()
+        density = problem.case.fluid.density
+        self.keep(state, flow_rate=net / density, mass_flow=net,
+                  back_flow=0.5 * (gross - abs(net)) / density)
+        return None
+
+
+def boundary_span(problem: Problem, name: str, where: str) -> slice:
+    """Faces of a boundary.
+
+    Raises
+    ------
+    CaseError
+        No such boundary.
+    """
+    known = problem.mesh.boundaries
+    if name not in known:
+        raise CaseError("No such boundary.", where=where, got=repr(name),
+                        remedy=f"The mesh has: {', '.join(known)}.{did_you_mean(name, known)}")
+    return known[name]
