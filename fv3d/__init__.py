@@ -20,7 +20,7 @@ from .flow.developed import DevelopedProfile, developed_profile
 from .flow.driving import pressure_drop
 from .flow.fluid import Fluid, moist_air, water
 from .flow.inlets import InletTable
-from .flow.monitors import ForceMonitor, PointMonitor
+from .flow.monitors import FlowRateMonitor, ForceMonitor, PointMonitor
 from .flow.numerics import SIMPLE, SIMPLEC, GlobalStep, LocalStep, Numerics
 from .flow.outlets import FlowOutlet
 from .flow.periodic import Periodic
@@ -28,6 +28,7 @@ from .flow.problem import Case
 from .flow.run import Run
 from .flow.scalar import ScalarField, solve_scalar
 from .flow.scalar_boundary import ScalarFlux, ScalarValue
+from .flow.statistics import FieldStatistics, MeanMonitor, PhaseAverage, PhaseMonitor
 from .flow.steady import iterate, solve_pseudo_transient, solve_steady
 from .flow.step_size import CourantStep
 from .flow.transient import solve_transient
@@ -57,29 +58,32 @@ from .results.diagnostics import BoundaryForce, MomentumBudget, force, momentum_
 from .results.files import write_history, write_readings, write_vtk
 from .results.flow_rates import FlowSplit, flow_rate, flow_split
 from .results.force_budget import ForceBudget, force_budget
+from .results.lines import plot_history, plot_series
 from .results.pictures import picture, picture_readings
 from .results.profiles import Profile, profile
+from .results.series import VtkSeries, frame_strip
 from .results.walls import Reversals, shear_reversals, wall_shear, write_surface
 from .signals import Estimate, dominant_frequency, lag, mean_value, strouhal_number
 
 __all__ = [
     "SIMPLE", "SIMPLEC", "BarthJespersen", "Blended", "BoundaryError", "BoundaryForce",
     "ByAnisotropy", "Case", "CaseError", "Central", "Checkpoint", "Classical", "Comparison",
-    "CourantStep", "DevelopedProfile", "DivergenceError", "Estimate", "Feedback", "FileError",
-    "FlowOutlet", "FlowSplit", "Fluid", "ForceBudget", "ForceCoefficients", "ForceMonitor",
-    "Fv3dError", "Fv3dWarning", "GlobalStep", "GreenGauss", "Inlet", "InletTable", "LeastSquares",
-    "LimitedUpwind", "LocalStep", "Mesh", "MeshError", "MichalakOllivierGooch", "MomentumBudget",
-    "Numerics", "OneSided", "Outcome", "Outlet", "Periodic", "PointMonitor", "Profile",
-    "ReadingError", "Readings", "Reference", "Reversals", "Run", "ScalarField", "ScalarFlux",
-    "ScalarValue", "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing", "Symmetry",
-    "TwoSided", "Uniform", "Upwind", "Wall", "backward_step", "boundary_map", "box", "build_mesh",
+    "CourantStep", "DevelopedProfile", "DivergenceError", "Estimate", "Feedback", "FieldStatistics",
+    "FileError", "FlowOutlet", "FlowRateMonitor", "FlowSplit", "Fluid", "ForceBudget",
+    "ForceCoefficients", "ForceMonitor", "Fv3dError", "Fv3dWarning", "GlobalStep", "GreenGauss",
+    "Inlet", "InletTable", "LeastSquares", "LimitedUpwind", "LocalStep", "MeanMonitor", "Mesh",
+    "MeshError", "MichalakOllivierGooch", "MomentumBudget", "Numerics", "OneSided", "Outcome",
+    "Outlet", "Periodic", "PhaseAverage", "PhaseMonitor", "PointMonitor", "Profile", "ReadingError",
+    "Readings", "Reference", "Reversals", "Run", "ScalarField", "ScalarFlux", "ScalarValue",
+    "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided",
+    "Uniform", "Upwind", "VtkSeries", "Wall", "backward_step", "boundary_map", "box", "build_mesh",
     "channel_with_block", "channel_with_cylinder", "check_mesh", "compare", "developed_profile",
     "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget", "force_coefficients",
-    "get_threads", "inlet_table", "iterate", "join_periodic", "lag", "mean_value", "mixed_box",
-    "moist_air", "momentum_budget", "nozzle", "observe", "picture", "picture_readings", "pipe",
-    "pressure_drop", "profile", "pyramid_box", "quality", "read_checkpoint", "read_mesh",
-    "read_readings", "set_threads", "shear_reversals", "skewed", "solve_pseudo_transient",
-    "solve_scalar", "solve_steady", "solve_transient", "strouhal_number", "wall_distance",
-    "wall_shear", "water", "wedge_box", "write_history", "write_mesh", "write_readings",
-    "write_surface", "write_vtk",
+    "frame_strip", "get_threads", "inlet_table", "iterate", "join_periodic", "lag", "mean_value",
+    "mixed_box", "moist_air", "momentum_budget", "nozzle", "observe", "picture", "picture_readings",
+    "pipe", "plot_history", "plot_series", "pressure_drop", "profile", "pyramid_box", "quality",
+    "read_checkpoint", "read_mesh", "read_readings", "set_threads", "shear_reversals", "skewed",
+    "solve_pseudo_transient", "solve_scalar", "solve_steady", "solve_transient", "strouhal_number",
+    "wall_distance", "wall_shear", "water", "wedge_box", "write_history", "write_mesh",
+    "write_readings", "write_surface", "write_vtk",
 ]
