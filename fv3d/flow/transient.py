@@ -18,13 +18,13 @@ from .problem import Case, Problem, State, make_problem
 from .progress import Progress
 from .run import Run
 from .start import start_state
-from .step_size import CourantStep, FixedStep, StepSize
+from .step_size import FixedStep, StepSize
 from .time_step import TimeStep, problem_at
 
 __all__ = ["TimeStep", "solve_transient"]
 
 
-def solve_transient(case: Case, *, time_step: float | CourantStep, end_time: float,
+def solve_transient(case: Case, *, time_step: float | StepSize, end_time: float,
                     sources: Sequence[Any] = (), start: Any = None, outer_iterations: int = 1,
                     name: str | None = None, monitors: Sequence[Monitor] = (),
                     progress: bool = True, checkpoint: Checkpoint | None = None) -> Run:
@@ -34,7 +34,7 @@ def solve_transient(case: Case, *, time_step: float | CourantStep, end_time: flo
     ----------
     case : Case
         Inlets may carry a ``factor`` and the case a ``body_force_factor``, functions of time [s].
-    time_step : float [s] or CourantStep
+    time_step : float [s], or CourantStep
         The local error is of third order in it; Courant numbers around one are usual.
     end_time : float [s]
         Counted from the start field, or on from the time of a transient start run.
@@ -102,7 +102,7 @@ def solve_transient(case: Case, *, time_step: float | CourantStep, end_time: flo
 
 
 def _checked(time_step: Any, end_time: Any, outer_iterations: Any) -> StepSize:
-    sizes: StepSize = time_step if isinstance(time_step, CourantStep) \
+    sizes: StepSize = time_step if callable(getattr(time_step, "size", None)) \
         else FixedStep(as_number(time_step))
     for label, value in (("time_step", sizes.seconds if isinstance(sizes, FixedStep) else 1.0),
                          ("end_time", end_time)):
