@@ -13,6 +13,8 @@ from .equations import boundary_velocity
 from .outlets import start_levels
 from .problem import Problem, State
 
+OVERLAP = 0.5  # share of the cells that must lie inside the mesh of a start run
+
 
 def start_state(problem: Problem, start: Any, workspace: Workspace) -> State:
     """State before the first iteration.
@@ -71,11 +73,21 @@ def _from_run(problem: Problem, run: Any) -> State:
 
 
 def sample_anywhere(run: Any, points: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Velocity and pressure at points; outside the run's mesh those of the nearest cell."""
+    """Velocity and pressure at points; outside the run's mesh those of the nearest cell.
+
+    Raises
+    ------
+    CaseError
+        Most points lie outside: the run is of another domain.
+    """
     from scipy.spatial import cKDTree
 
     from ..operators.interpolation import locate
     inside = locate(run.mesh, points) >= 0
+    if np.mean(inside) < OVERLAP:
+        raise CaseError("The start run is of another domain.", where="start=",
+                        got=f"{np.mean(inside):.0%} of the cells lie inside its mesh",
+                        remedy="Check the unit and the axes of both meshes, or start otherwise.")
     velocity, pressure = np.empty((len(points), 3)), np.empty(len(points))
     if inside.any():
         sample = run.sample(points[inside])
