@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import itertools
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -162,7 +162,9 @@ def test_starts_that_do_not_fit() -> None:
     run = fv3d.solve_transient(other, time_step=0.1, end_time=0.2, progress=False)
     moved = fv3d.solve_transient(case, time_step=0.1, end_time=0.2, start=run, progress=False)
     assert moved.history["time"][0] == pytest.approx(0.1)
-    from dataclasses import replace
+    away = duct(box((9, 0, 0), (11, 1, 1), cells=(4, 3, 3)))
+    with pytest.raises(CaseError, match="another domain"):
+        fv3d.solve_transient(away, time_step=0.1, end_time=0.2, start=run, progress=False)
     spoilt = replace(run, state=replace(run.state, velocity=run.velocity * np.nan))
     for start in (spoilt, (np.nan, 0, 0), lambda x: x[:, :2]):
         with pytest.raises(CaseError):
