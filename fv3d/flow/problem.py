@@ -5,7 +5,7 @@ from __future__ import annotations
 import warnings
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
-from typing import Any, Protocol
+from typing import TYPE_CHECKING, Any, Protocol
 
 import numpy as np
 
@@ -20,6 +20,9 @@ from .inlets import warn_of_beyond
 from .numerics import Numerics
 from .outlets import OutletFlow, outlet_flows
 from .periodic import Periodic, joined
+
+if TYPE_CHECKING:
+    from .turbulence import SubgridModel
 
 BodyForce = Any
 
@@ -41,6 +44,8 @@ class Case:
     viscosity : (n_cells,) array, optional
         Viscosity of each cell [Pa s] where it differs from the fluid's.
     numerics : Numerics
+    turbulence : subgrid model such as WALE, optional
+        Viscosity of the eddies that the mesh does not resolve, in runs in time.
     periodic : mapping, made by the case
         Its periodic conditions, taken out of ``boundaries``; their pairs are joined in ``mesh``.
 
@@ -57,6 +62,7 @@ class Case:
     body_force_factor: Callable[[float], float] | None = field(default=None, kw_only=True)
     viscosity: np.ndarray | None = field(default=None, kw_only=True)
     numerics: Numerics = field(default_factory=Numerics, kw_only=True)
+    turbulence: SubgridModel | None = field(default=None, kw_only=True)
     periodic: Mapping[str, Periodic] = field(default_factory=dict, kw_only=True, repr=False)
 
     def __post_init__(self) -> None:
@@ -80,6 +86,11 @@ class Case:
         for name, value in (("mesh", mesh), ("boundaries", boundaries),
                             ("periodic", {**self.periodic, **periodic})):
             object.__setattr__(self, name, value)
+        if self.turbulence is not None and (isinstance(self.turbulence, type) or not hasattr(
+                self.turbulence, "viscosity")):
+            raise CaseError("A turbulence model is an object of its kind.",
+                            where="Case(turbulence=)", got=repr(self.turbulence),
+                            remedy="Give WALE(), or leave it out for laminar flow.")
         boundary_table(self.mesh, self.boundaries)
         body_force_cells(self)
         _cell_viscosity(self)

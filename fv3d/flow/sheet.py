@@ -37,6 +37,10 @@ def run_sheet(run: Any) -> str:
     speed = np.linalg.norm(run.velocity, axis=1)
     lines.append(f"  speed      mean {np.average(speed, weights=mesh.cell_volume):.4g} m/s, "
                  f"largest {speed.max():.4g} m/s")
+    if case.turbulence is not None:
+        ratio = run.problem.viscosity.max() / case.fluid.viscosity - 1.0
+        lines.append(f"  eddies     {case.turbulence}, viscosity up to {ratio:.3g} times the "
+                     "fluid's")
     lines += [f"  inlet      {share:.1%} of '{name}' lie beyond the points of its table"
               for name, share in beyond_shares(mesh, case.boundaries).items()]
     lines += [f"  outlet     '{one.name}' at {level:.6g} Pa for {one.flow:.6g} kg/s"
