@@ -20,6 +20,7 @@ from .problem import Case, Source, State, make_problem
 from .progress import Progress
 from .run import Run
 from .start import start_state
+from .turbulence import refuse_eddies
 from .watch import oscillating, repeating_period
 
 
@@ -38,6 +39,7 @@ def iterate(case: Case, *, sources: Sequence[Source] = (),
         The start does not fit.
     """
     problem = make_problem(case, tuple(sources))
+    refuse_eddies(problem)
     workspace = make_workspace(problem)
     state = start_state(problem, start, workspace)
     while True:
@@ -131,6 +133,7 @@ def _iterate_to_end(case: Case, tolerance: float, max_iterations: int,
                     monitors: Sequence[Monitor], progress: bool, checkpoint: Checkpoint | None,
                     pseudo_step: LocalStep | GlobalStep | None) -> Run:
     problem = make_problem(case, sources)
+    refuse_eddies(problem)
     workspace = make_workspace(problem, pseudo_step)
     name = name or ("guided" if sources else "plain")
 

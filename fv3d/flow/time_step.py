@@ -50,6 +50,7 @@ from .equations import (
 from .problem import Force, Problem, State
 from .projected import Push, make_projection
 from .step_size import FixedStep, StepSize, within
+from .turbulence import with_eddies
 
 
 class SourceInTime(Protocol):
@@ -183,6 +184,7 @@ class TimeStep:
                before: Level | None, difference: Differencing,
                workspace: Workspace) -> tuple[State, Record]:
         """Momentum, face fluxes and projection from a trial state of the new level."""
+        problem = with_eddies(problem, gradient)
         mesh, density = problem.mesh, problem.case.fluid.density
         n, rate = mesh.n_internal, density / difference.step
         inertia = difference.lead * rate * mesh.cell_volume

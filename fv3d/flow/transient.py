@@ -16,10 +16,12 @@ from .monitors import Monitor
 from .outlets import refuse_flow_outlets
 from .problem import Case, Problem, State, make_problem
 from .progress import Progress
+from .resolution import warn_of_poor_resolution
 from .run import Run
 from .start import start_state
 from .step_size import FixedStep, StepSize
 from .time_step import TimeStep, problem_at
+from .turbulence import eddies_of
 
 __all__ = ["TimeStep", "solve_transient"]
 
@@ -95,10 +97,12 @@ def solve_transient(case: Case, *, time_step: float | StepSize, end_time: float,
         return Outcome("finished", f"Reached {records[-1].time:g} s in {len(records)} steps of "
                                    f"{_sizes(records, beginning.began)} s.", "", True)
 
-    return drive(problem, beginning, workspace, stop=stop, name=name, monitors=monitors,
-                 clock="time", advance=TimeStep(sizes, end=end, outer=outer_iterations),
-                 moment=lambda problem, state: problem_at(problem, state.time),
-                 progress=Progress(problem, name, 1e-300, steps, progress))
+    run = drive(problem, beginning, workspace, stop=stop, name=name, monitors=monitors,
+                clock="time", advance=TimeStep(sizes, end=end, outer=outer_iterations),
+                moment=lambda problem, state: eddies_of(problem_at(problem, state.time), state),
+                progress=Progress(problem, name, 1e-300, steps, progress))
+    warn_of_poor_resolution(run.problem, run.state, name)
+    return run
 
 
 def _checked(time_step: Any, end_time: Any, outer_iterations: Any) -> StepSize:
