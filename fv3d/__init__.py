@@ -32,6 +32,7 @@ from .flow.statistics import FieldStatistics, MeanMonitor, PhaseAverage, PhaseMo
 from .flow.steady import iterate, solve_pseudo_transient, solve_steady
 from .flow.step_size import CourantStep
 from .flow.transient import solve_transient
+from .flow.turbulence import WALE
 from .measured.compare import Comparison, compare
 from .measured.feedback import Feedback
 from .measured.inlet import inlet_table
@@ -66,7 +67,7 @@ from .results.walls import Reversals, shear_reversals, wall_shear, write_surface
 from .signals import Estimate, dominant_frequency, lag, mean_value, strouhal_number
 
 __all__ = [
-    "SIMPLE", "SIMPLEC", "BarthJespersen", "Blended", "BoundaryError", "BoundaryForce",
+    "SIMPLE", "SIMPLEC", "WALE", "BarthJespersen", "Blended", "BoundaryError", "BoundaryForce",
     "ByAnisotropy", "Case", "CaseError", "Central", "Checkpoint", "Classical", "Comparison",
     "CourantStep", "DevelopedProfile", "DivergenceError", "Estimate", "Feedback", "FieldStatistics",
     "FileError", "FlowOutlet", "FlowRateMonitor", "FlowSplit", "Fluid", "ForceBudget",
