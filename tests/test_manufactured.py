@@ -72,12 +72,12 @@ def errors(mesh: fv3d.Mesh, numerics: fv3d.Numerics) -> tuple[float, float]:
             float(np.sqrt(np.average(pressure**2, weights=volume))))
 
 
-def orders(levels: tuple[int, ...], numerics: fv3d.Numerics | None = None,
-           **kind: Any) -> tuple[float, float]:
+def orders(levels: tuple[int, ...], numerics: fv3d.Numerics | None = None, *,
+           make: Callable[..., fv3d.Mesh] = box, **kind: Any) -> tuple[float, float]:
     """Observed orders of velocity and pressure over a family; prints the errors."""
     found = []
     for n in levels:
-        mesh = box((0, 0, 0), (1, 1, 1), cells=(n, n, n), **kind)
+        mesh = make((0, 0, 0), (1, 1, 1), cells=(n, n, n), **kind)
         found.append(errors(mesh, numerics or fv3d.Numerics()))
         print(f"n {n:3d}  cells {mesh.n_cells:7d}  velocity {found[-1][0]:.3e}  "
               f"pressure {found[-1][1]:.3e}")
@@ -115,11 +115,44 @@ def test_order_on_four_levels(kind: dict[str, Any], velocity_must: float, pressu
     assert pressure >= pressure_must
 
 
+FAMILIES = {
+    "wedges": (fv3d.wedge_box, {"skew": 0.2}, (6, 9, 13)),
+    "pyramids and hexahedra": (fv3d.pyramid_box, {"skew": 0.1}, (4, 6, 9)),
+    "all kinds": (fv3d.mixed_box, {"skew": 0.1}, (4, 8, 12)),
+    "warped hexahedra": (box, {"warp": 0.08, "skew": 0.2}, (6, 9, 13)),
+}
+
+
+@pytest.mark.parametrize(("make", "kind", "levels"), FAMILIES.values(), ids=FAMILIES)
+def test_order_on_other_kinds_of_cells(make: Any, kind: dict[str, Any],
+                                       levels: tuple[int, ...]) -> None:
+    velocity, pressure = orders(levels, make=make, **kind)
+    assert velocity >= 1.8
+    assert pressure >= 1.4
+
+
+@pytest.mark.long
+@pytest.mark.parametrize(("make", "kind", "levels"), FAMILIES.values(), ids=FAMILIES)
+def test_order_on_other_kinds_of_cells_four_levels(make: Any, kind: dict[str, Any],
+                                                   levels: tuple[int, ...]) -> None:
+    velocity, pressure = orders((*levels, round(1.5 * levels[-1])), make=make, **kind)
+    assert velocity >= 1.8
+    assert pressure >= 1.4
+
+
 @pytest.mark.parametrize(("scheme", "least", "most"), [
-    (fv3d.Upwind(), 0.6, 1.4), (fv3d.Central(), 1.8, 9.0), (fv3d.Blended(), 1.8, 9.0)], ids=repr)
+    (fv3d.Upwind(), 0.6, 1.4), (fv3d.Central(), 1.8, 9.0), (fv3d.Blended(), 1.8, 9.0),
+    (fv3d.LimitedUpwind(), 1.8, 9.0)], ids=repr)
 def test_other_schemes_have_their_order(scheme: Any, least: float, most: float) -> None:
     velocity, _ = orders((6, 9, 13), fv3d.Numerics(convection=scheme), skew=0.2)
     assert least <= velocity <= most
+
+
+@pytest.mark.parametrize(("gradient", "least"), [
+    (fv3d.BarthJespersen(), 1.8), (fv3d.MichalakOllivierGooch(), 1.8)], ids=["sharp", "smooth"])
+def test_limited_gradients_keep_the_order_of_the_flow(gradient: Any, least: float) -> None:
+    velocity, _ = orders((6, 9, 13), fv3d.Numerics(gradient=gradient), skew=0.2)
+    assert velocity >= least
 
 
 def test_full_stress_changes_nothing_in_the_limit() -> None:
