@@ -1,4 +1,4 @@
-"""Plain time series: dominant frequency, mean and lag, each with an uncertainty."""
+"""Plain time series: start-up, dominant frequency, mean, phase and lag, with uncertainties."""
 
 from __future__ import annotations
 
@@ -157,18 +157,127 @@ def lag(values: np.ndarray, reference: np.ndarray, *, step: float) -> float:
     CaseError
         Different lengths, or a record as in :func:`mean_value`.
     """
-    if np.shape(values) != np.shape(reference):
-        raise CaseError("Two records of one length are compared.", where="lag(values, reference)",
-                        got=f"{np.shape(values)} and {np.shape(reference)}",
-                        remedy="Cut both to the same times.")
-    grid = np.arange(len(np.atleast_1d(values)), dtype=float)
-    a, b = (_record(grid, v)[1] for v in (values, reference))
+    a, b = _pair(values, reference, "lag(values, reference)")
     n = len(a)
     size = 1 << (2 * n - 1).bit_length()
     product = np.fft.rfft(a - a.mean(), size) * np.conj(np.fft.rfft(b - b.mean(), size))
     both = np.roll(np.fft.irfft(product, size), n)[1:2 * n]
     i = int(np.argmax(both))
     return step * (i - (n - 1) + _vertex(both, i))
+
+
+def phase(values: np.ndarray, reference: np.ndarray, *, step: float,
+          frequency: float) -> Estimate:
+    """Phase by which ``values`` runs behind ``reference`` at a frequency [rad].
+
+    Sinusoids of that frequency, with mean and trend, are fitted to both records.  The uncertainty
+    is the larger of the Cramer-Rao bound (both records in white noise) and half the difference
+    between the halves of the records.
+
+    Parameters
+    ----------
+    values, reference : (n,)
+    step : float [s]
+    frequency : float [Hz]
+
+    Returns
+    -------
+    Estimate
+        Between minus pi and pi.
+
+    Raises
+    ------
+    CaseError
+        Different lengths, records as in :func:`mean_value`, or fewer than two cycles in them.
+
+    Notes
+    -----
+    The phase of a tone of known frequency has the variance ``2 sigma^2 / (A^2 n)``: Rife, D. C.
+    and Boorstyn, R. R. (1974), IEEE Trans. Inf. Theory 20, 591-598.
+    """
+    a, b = _pair(values, reference, "phase(values, reference)")
+    n = len(a)
+    time = step * np.arange(n)
+    if not frequency * n * step >= 2.0:
+        raise CaseError("The records hold no two cycles of that frequency.",
+                        where="phase(frequency=)", got=f"{frequency * n * step:.2g} cycles",
+                        remedy="Record longer, or check frequency and step.")
+    behind = _behind(time, a, b, frequency)
+    bound = np.sqrt(2.0 / n * sum((noise / max(size, 1e-300)) ** 2
+                                  for size, noise in (_tone(time, v, frequency) for v in (a, b))))
+    spread = {"Cramer-Rao bound": float(bound)}
+    half = n // 2
+    if frequency * half * step >= 2.0:
+        halves = [_behind(time[part], a[part], b[part], frequency)
+                  for part in (slice(half), slice(half, n))]
+        drift = (halves[0] - halves[1] + np.pi) % (2 * np.pi) - np.pi
+        spread["drift between the halves"] = 0.5 * abs(drift)
+    basis = max(spread, key=lambda key: spread[key])
+    return Estimate(behind, float(spread[basis]), basis, "rad")
+
+
+def settling_time(time: np.ndarray, values: np.ndarray) -> float:
+    """Time from which mean and strength of a record's fluctuations are those of its end [s].
+
+    Both are averaged over one period of the strongest oscillation of the last half.  Settled is
+    the record from where they stay within one and a half times their largest deviation in the last
+    half (or 2 % and 5 %, if that is more; common practice, no source).
+
+    Parameters
+    ----------
+    time : (n,) [s]
+        Evenly spaced.
+    values : (n,)
+
+    Raises
+    ------
+    CaseError
+        The record has not settled in its first half; records as in :func:`dominant_frequency`.
+    """
+    time, values = _record(time, values)
+    n, step = len(time), (time[-1] - time[0]) / (len(time) - 1)
+    half = n // 2
+    if np.ptp(values[half:]) <= 1e-12 * np.abs(values).max():
+        window = 1
+    else:
+        window = int(np.clip(round(1.0 / (_peak(values[half:], step) * step)), 1, half // 3))
+    level = _moving(values, window)
+    power = np.maximum(_moving(values ** 2, window) - level ** 2, 0.0)
+    scale = max(np.sqrt(power[-half:].mean()), 0.01 * abs(level[-half:].mean()))
+    away = np.zeros(len(level), dtype=bool)
+    for local, least in ((level, 0.02 * scale), (power, 0.05 * scale ** 2)):
+        end, third, last = local[-half:], local[-half:-half // 2], local[-half // 2:]
+        band = max(1.5 * float(np.abs(end - end.mean()).max()), least)
+        away |= np.abs(local - end.mean()) > band
+        if abs(third.mean() - last.mean()) > 5.0 * least:
+            away[:] = True
+    settled = int(np.flatnonzero(away)[-1]) + 1 if away.any() else 0
+    if settled > n - half:
+        raise CaseError("The record has not settled in its first half.", where="settling_time",
+                        got=f"{time[-1] - time[0]:.4g} s", remedy="Run longer.")
+    return float(time[settled])
+
+
+def _moving(values: np.ndarray, window: int) -> np.ndarray:
+    """(n - window + 1,) means over ``window`` samples, each from its first sample on."""
+    return np.lib.stride_tricks.sliding_window_view(values, window).mean(axis=1)
+
+
+def _behind(time: np.ndarray, a: np.ndarray, b: np.ndarray, frequency: float) -> float:
+    angles = []
+    for values in (a, b):
+        cosine, sine, *_ = np.linalg.lstsq(_design(time, frequency), values, rcond=None)[0]
+        angles.append(np.arctan2(sine, cosine))
+    return float((angles[0] - angles[1] + np.pi) % (2 * np.pi) - np.pi)
+
+
+def _pair(values: np.ndarray, reference: np.ndarray, where: str) -> tuple[np.ndarray, np.ndarray]:
+    if np.shape(values) != np.shape(reference):
+        raise CaseError("Two records of one length are compared.", where=where,
+                        got=f"{np.shape(values)} and {np.shape(reference)}",
+                        remedy="Cut both to the same times.")
+    grid = np.arange(len(np.atleast_1d(values)), dtype=float)
+    return _record(grid, values)[1], _record(grid, reference)[1]
 
 
 def _record(time: np.ndarray, values: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
