@@ -64,7 +64,15 @@ from .results.pictures import picture, picture_readings
 from .results.profiles import Profile, profile
 from .results.series import VtkSeries, frame_strip
 from .results.walls import Reversals, shear_reversals, wall_shear, write_surface
-from .signals import Estimate, dominant_frequency, lag, mean_value, strouhal_number
+from .signals import (
+    Estimate,
+    dominant_frequency,
+    lag,
+    mean_value,
+    phase,
+    settling_time,
+    strouhal_number,
+)
 
 __all__ = [
     "SIMPLE", "SIMPLEC", "WALE", "BarthJespersen", "Blended", "BoundaryError", "BoundaryForce",
@@ -81,10 +89,10 @@ __all__ = [
     "channel_with_block", "channel_with_cylinder", "check_mesh", "compare", "developed_profile",
     "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget", "force_coefficients",
     "frame_strip", "get_threads", "inlet_table", "iterate", "join_periodic", "lag", "mean_value",
-    "mixed_box", "moist_air", "momentum_budget", "nozzle", "observe", "picture", "picture_readings",
-    "pipe", "plot_history", "plot_series", "pressure_drop", "profile", "pyramid_box", "quality",
-    "read_checkpoint", "read_mesh", "read_readings", "set_threads", "shear_reversals", "skewed",
-    "solve_pseudo_transient", "solve_scalar", "solve_steady", "solve_transient", "strouhal_number",
-    "wall_distance", "wall_shear", "water", "wedge_box", "write_history", "write_mesh",
-    "write_readings", "write_surface", "write_vtk",
+    "mixed_box", "moist_air", "momentum_budget", "nozzle", "observe", "phase", "picture",
+    "picture_readings", "pipe", "plot_history", "plot_series", "pressure_drop", "profile",
+    "pyramid_box", "quality", "read_checkpoint", "read_mesh", "read_readings", "set_threads",
+    "settling_time", "shear_reversals", "skewed", "solve_pseudo_transient", "solve_scalar",
+    "solve_steady", "solve_transient", "strouhal_number", "wall_distance", "wall_shear", "water",
+    "wedge_box", "write_history", "write_mesh", "write_readings", "write_surface", "write_vtk",
 ]
