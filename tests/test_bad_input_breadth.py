@@ -178,6 +178,13 @@ TABLE: dict[str, tuple[type[Fv3dError], Bad]] = {
     "wall distance: no such wall": (MeshError, lambda d: fv3d.wall_distance(MESH, ["y_mni"])),
     "wall distance: points of two coordinates":
         (MeshError, lambda d: fv3d.wall_distance(MESH, ["y_min"], points=[[0.0, 1.0]])),
+    # further fields
+    "fields: foreign length":
+        (CaseError, lambda d: fv3d.write_vtk(run(), d / "a.vtu", fields={"smoke": np.ones(5)})),
+    "fields: a name that is taken": (CaseError, lambda d: fv3d.write_vtk(
+        run(), d / "a.vtu", fields={"pressure": np.ones(27)})),
+    "fields: an array": (CaseError, lambda d: fv3d.write_vtk(
+        run(), d / "a.vtu", fields=np.ones(27))),
     # profiles
     "profile: of a case": (CaseError, lambda d: fv3d.profile(case(), **LINE)),
     "profile: one point": (CaseError, lambda d: fv3d.profile(run(), **LINE | {"count": 1})),

@@ -16,7 +16,7 @@ from fv3d.flow.problem import make_problem
 from fv3d.mesh.generate import box
 
 CONDITIONS = [fv3d.Inlet((1.0, -2.0, 0.5)), fv3d.Inlet(lambda x: 2.0 * x), fv3d.Outlet(3.0),
-              fv3d.Wall(), fv3d.Symmetry()]
+              fv3d.Wall(), fv3d.Symmetry(), fv3d.FlowOutlet(flow_rate=0.5)]
 FLUID = fv3d.Fluid(density=2.0, viscosity=0.1)
 
 

@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pytest
+import pyvista as pv
 from contracts import linear, observed_order, skewed
 from made import made_run
 from scipy.special import erfc
@@ -180,6 +182,19 @@ def test_what_enters_and_is_made_leaves() -> None:
     assert got.outflow("z_max") == pytest.approx(-0.4, rel=1e-12)
     assert abs(got.outflow("z_min")) < 1e-12
     assert "converged" in str(got) and "'z_max' -0.4" in str(got)
+
+
+def test_a_scalar_is_written_beside_the_flow(tmp_path: Path) -> None:
+    mesh = skewed(3)
+    run = made_run(mesh, uniform((1.0, 0.0, 0.0)), nothing)
+    got = solved(run, diffusivity=0.1, boundaries={"x_min": fv3d.ScalarValue(1.0),
+                                                   "y_min": fv3d.ScalarValue(0.0)})
+    path = fv3d.write_vtk(run, tmp_path / "a.vtu", fields={
+        "smoke": got.values, "wall_distance": fv3d.wall_distance(mesh, ["y_min"])})
+    data = pv.read(path).cell_data
+    order = np.argsort(mesh.file_index)
+    np.testing.assert_array_equal(data["smoke"], got.values[order])
+    np.testing.assert_allclose(data["wall_distance"], mesh.cell_centre[order, 1], atol=1e-14)
 
 
 def test_residual_against_a_plain_loop() -> None:

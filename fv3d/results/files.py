@@ -7,13 +7,13 @@ from __future__ import annotations
 
 import csv
 import os
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from ..errors import FileError, expect_readings, expect_run
+from ..errors import CaseError, FileError, expect_readings, expect_run
 from ..measured.readings import Readings, observe
 from ..mesh.mesh import Mesh
 
@@ -22,7 +22,8 @@ VTK_CELL_TYPE = {"tetra": 10, "hexahedron": 12, "wedge": 13, "pyramid": 14}  # V
 PathLike = str | os.PathLike[str]
 
 
-def write_vtk(run: Any, path: PathLike) -> Path:
+def write_vtk(run: Any, path: PathLike, *,
+              fields: Mapping[str, np.ndarray] | None = None) -> Path:
     """Write the fields of a run as a VTK unstructured grid (``.vtu``).
 
     Cells stand in the order of the mesh file and points keep its numbers.  Cell data:
@@ -32,6 +33,8 @@ def write_vtk(run: Any, path: PathLike) -> Path:
     ----------
     run : Run
     path : path ending in ``.vtu``
+    fields : mapping of name to (n_cells,) or (n_cells, 3) array, optional
+        More cell data in the mesh's own numbering, such as a scalar or the wall distance.
 
     Returns
     -------
@@ -40,16 +43,38 @@ def write_vtk(run: Any, path: PathLike) -> Path:
 
     Raises
     ------
+    CaseError
+        Not a run; a field of another length or under a name that is taken.
     FileError
         The folder does not exist, the file cannot be written, or another ending.
     """
     expect_run(run, "write_vtk(run, path)")
     target = target_path(path, (".vtu",))
-    grid = vtk_grid(run.mesh, cell_data={
-        "velocity": run.velocity, "pressure": run.pressure,
-        "vorticity": vorticity(run.velocity_gradient()),
-        "artificial_force": run.artificial_force})
+    own = {"velocity": run.velocity, "pressure": run.pressure,
+           "vorticity": vorticity(run.velocity_gradient()),
+           "artificial_force": run.artificial_force}
+    grid = vtk_grid(run.mesh, cell_data=own | _more_fields(run.mesh, fields, own))
     return write_aside(target, lambda aside: write_xml(grid, aside))
+
+
+def _more_fields(mesh: Mesh, fields: Any, taken: Mapping[str, Any]) -> dict[str, np.ndarray]:
+    """Further cell data, checked."""
+    if fields is not None and not isinstance(fields, Mapping):
+        raise CaseError("Further fields are a mapping of name to array.", got=type(fields).__name__,
+                        where="write_vtk(fields=)", remedy="Give {'smoke': scalar.values}, say.")
+    more = {}
+    for name, values in (fields or {}).items():
+        try:
+            more[name] = np.asarray(values, dtype=float)
+        except (TypeError, ValueError):
+            more[name] = np.empty(0)
+        if name in taken or more[name].shape not in ((mesh.n_cells,), (mesh.n_cells, 3)):
+            raise CaseError("A further field needs a name of its own and a value per cell.",
+                            where=f"write_vtk(fields=), {name!r}",
+                            got=f"shape {more[name].shape} for {mesh.n_cells} cells",
+                            remedy=f"Give an (n_cells,) or (n_cells, 3) array; "
+                                   f"{', '.join(taken)} are taken.")
+    return more
 
 
 def write_readings(readings: Readings, path: PathLike, *, run: Any = None) -> Path:
