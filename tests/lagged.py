@@ -15,7 +15,7 @@ from typing import Any
 import numpy as np
 
 import fv3d
-from fv3d.flow.problem import Force, Problem, State
+from fv3d.flow.problem import Correction, Force, Problem, State
 from fv3d.measured.feedback import FeedbackState
 
 
@@ -32,9 +32,10 @@ class Lagged:
         return self.law.force(own)
 
     def correct(self, own: FeedbackState, problem: Problem, state: State, change: np.ndarray,
-                relax: Callable[..., Any]) -> tuple[FeedbackState, np.ndarray, float]:
+                relax: Callable[..., Any]) -> Correction:
         before = own.layout.sample(problem, state.velocity, state.boundary_velocity)
         off = own.misfit(before) - own.strength / own.gain
         misfit = own.misfit(before + own.layout.sample_change(problem, change))
         scale = max(float(np.abs(own.readings.component_value).max()), 1e-300)
-        return replace(own, strength=own.gain * misfit), change, float(np.abs(off).max()) / scale
+        return Correction(replace(own, strength=own.gain * misfit), change,
+                          float(np.abs(off).max()) / scale)

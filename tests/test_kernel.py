@@ -14,7 +14,7 @@ from scipy.spatial.distance import cdist
 
 import fv3d
 from fv3d.flow.equations import pressure_fields
-from fv3d.flow.problem import Force, Problem, balanced_force, make_problem
+from fv3d.flow.problem import Correction, Force, Problem, balanced_force, make_problem
 from fv3d.measured.feedback import make_layout
 from fv3d.measured.kernel import Gaussian, Neighbourhood, SingleCell
 from fv3d.mesh.generate import box
@@ -126,7 +126,7 @@ class Given:
         return own
 
     def correct(self, own: Force, problem: Any, state: Any, change: Any, relax: Any) -> Any:
-        return own, change, 0.0
+        return Correction(own, change)
 
 
 CENTRE, WIDTH = np.array([0.9, 0.45, 0.5]), 0.2

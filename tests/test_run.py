@@ -120,7 +120,8 @@ class Explosion:
         return balanced_force(self.mesh, own)
 
     def correct(self, own: Any, problem: Any, state: Any, change: Any, relax: Any) -> Any:
-        return 1e8 * own * (1.0 + self.mesh.cell_centre), change, 1.0
+        from fv3d.flow.problem import Correction
+        return Correction(1e8 * own * (1.0 + self.mesh.cell_centre), change, 1.0)
 
 
 def test_divergence_raises_with_the_last_finite_run() -> None:

@@ -154,13 +154,17 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     if numerics.sweeps is None and sweeps_are_due(state.iteration):
         left = replace(equation.rows, block=relaxed, rhs=residual).residual(change)
         workspace.sweeps = sweeps_needed(sweeps.count, residual, left)
-    sources, misfit = [], 0.0
+    sources, misfit, pressure = [], 0.0, state.pressure
     for source, own in zip(problem.sources, state.sources, strict=True):
-        own, change, error = source.correct(own, problem, state, change, sweeps)
-        sources.append(own)
-        misfit = max(misfit, error)
+        part = source.correct(own, problem, state, change, sweeps)
+        sources.append(part.own)
+        change, misfit = part.change, max(misfit, part.misfit)
+        if part.pressure is not None:
+            pressure = pressure + part.pressure
     velocity = state.velocity + change
-    state = replace(state, velocity=velocity, sources=tuple(sources))
+    if pressure is not state.pressure:
+        fields = pressure_fields(problem, pressure, edge_flux)
+    state = replace(state, velocity=velocity, pressure=pressure, sources=tuple(sources))
     force = total_force(problem, state)
     edge = boundary_velocity(problem, velocity, gradient, edge_flux)
     flux = interpolated_flux(problem, velocity, gradient, edge, fields, force,

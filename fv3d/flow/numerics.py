@@ -68,7 +68,7 @@ class SIMPLEC:
 
 _METHODS = {  # what a method of each kind must have, and an example
     "coupling": ("correction_diagonal", "SIMPLEC()"),
-    "convection": ("upwind_share", "SecondOrderUpwind()"),
+    "convection": ("limited_share", "SecondOrderUpwind()"),
     "gradient": ("weights", "LeastSquares()"),
     "multigrid": ("prolongations", "ByAnisotropy()"),
 }
@@ -182,7 +182,8 @@ class Numerics:
                                 remedy=f"Give {example}, say.")
         if self.sweeps is not None and not as_number(self.sweeps) >= 1:
             raise CaseError("At least one sweep of the momentum equations is needed.",
-                            where="Numerics(sweeps=)", got=self.sweeps, remedy="Leave it out, or give 4, say.")
+                            where="Numerics(sweeps=)", got=self.sweeps,
+                            remedy="Leave it out, or give 4, say.")
         if not 0.0 < as_number(self.pressure_tolerance) < 1.0:
             raise CaseError("The pressure tolerance lies between 0 and 1.",
                             where="Numerics(pressure_tolerance=)", got=self.pressure_tolerance,

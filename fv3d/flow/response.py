@@ -12,6 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from ..mesh.mesh import Mesh
 from ..operators import linear
 from ..operators.assembly import symmetric_matrix
 from .numerics import SIMPLE, SIMPLEC
@@ -61,6 +62,12 @@ class PressureResponse:
         return () if self.skewed else (1.1 / self.fine, 2.0 / self.fine)
 
 
+def mostly_hexahedra(mesh: Mesh) -> bool:
+    """Whether nearly all cells are hexahedra."""
+    count = sum(len(cells) for kind, _, cells in mesh.cell_blocks if kind == "hexahedron")
+    return count > 0.95 * mesh.n_cells
+
+
 def pressure_response(problem: Problem, *, steps: int = 12) -> PressureResponse:
     """Estimate the response of a case's mesh and boundaries.
 
@@ -70,8 +77,7 @@ def pressure_response(problem: Problem, *, steps: int = 12) -> PressureResponse:
         Power iterations for each number.
     """
     mesh, n = problem.mesh, problem.mesh.n_internal
-    hexahedra = sum(len(cells) for kind, _, cells in mesh.cell_blocks if kind == "hexahedron")
-    decoupled = hexahedra > 0.95 * mesh.n_cells
+    decoupled = mostly_hexahedra(mesh)
     cosine = np.einsum("ij,ij->i", mesh.face_normal, mesh.delta)
     cosine /= np.linalg.norm(mesh.delta, axis=1)
     if cosine.min() > 0.996:

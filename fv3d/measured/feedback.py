@@ -6,10 +6,11 @@ The momentum equation gains ``f = -sum_j phi_j a_j`` [m/s^2] with ``a_j = K (H_j
 
 The strengths are unknowns, corrected in every iteration after the momentum sweeps,
 
-    da = (1/K + H g)^-1 (H (u + du) - u* - a/K),    u += du - g da,    a += da,
+    da = (1/K + H g)^-1 (H (u + du) - u* - a/K),    u += du - g da,    a += da,    p -= rho psi da,
 
-``g`` being the response of the *same* sweeps to each kernel; so the iteration is stable for any
-gain, and its fixed point does not depend on ``g`` (derived here; nudging after Hoke, J. E. and
+``g`` being the response of the *same* sweeps to each kernel less the gradient of its potential
+``psi``, the part that moves nothing but the pressure; so the iteration is stable for any gain, and
+its fixed point depends neither on ``g`` nor on ``psi`` (derived here; nudging after Hoke, J. E. and
 Anthes, R. A. 1976, Mon. Weather Rev. 104, 1551-1556).
 """
 
@@ -24,11 +25,13 @@ import numpy as np
 import scipy.sparse as sparse
 
 from ..errors import CaseError, ReadingError, as_number
-from ..flow.problem import Force, Problem, State
+from ..flow.problem import Correction, Force, Problem, State
+from ..flow.response import mostly_hexahedra
 from .feedback_time import FeedbackInTime
 from .kernel import Gaussian, Kernel, SingleCell
-from .layout import Layout, Response, make_layout, sweep_response
+from .layout import Layout, make_layout
 from .readings import Readings, linearised_direction, predict
+from .response import SHARE_OF_ROUGH, make_pushes, sweep_response
 
 REFRESH_EARLY = (0, 2, 5, 10, 20)  # responses are renewed at these iterations,
 REFRESH_EVERY = 30                 # then at every multiple of this
@@ -145,32 +148,25 @@ class Feedback:
         return own.layout.force(own.place_strength(own.strength))
 
     def correct(self, own: FeedbackState, problem: Problem, state: State, change: np.ndarray,
-                relax: Callable[..., Any]) -> tuple[FeedbackState, np.ndarray, float]:
+                relax: Callable[..., Any]) -> Correction:
         """Solve for the strengths together with the momentum change, see the module text."""
         active = own.gain > 0
         if not active.any():
-            return own, change, 0.0
-        due = own.count in REFRESH_EARLY or own.count % REFRESH_EVERY == 0
-        response = own.response
-        if due or response is None:
-            response = sweep_response(problem, own.layout, relax)
-        own = _turned(own, problem, state)
-        acting = active & (np.abs(own.direction).max(axis=1) > 0)
+            return Correction(own, change)
+        rough = self.radius is None and not mostly_hexahedra(problem.mesh)
+        own = _renewed(_turned(own, problem, state), problem, relax,
+                       share=SHARE_OF_ROUGH if rough else 1.0)
         slack = np.divide(own.strength, own.gain, out=np.zeros_like(own.gain), where=active)
         before = own.layout.sample(problem, state.velocity, state.boundary_velocity)
         misfit = np.where(active, own.misfit(before) - slack, 0.0)
         after = before + own.layout.sample_change(problem, change)
-        error = np.where(active, own.misfit(after) - slack, 0.0)
-        matrix = response.between(own.spread())[np.ix_(acting, acting)]
-        matrix[np.diag_indices(len(matrix))] += 1.0 / own.gain[acting]
-        step = np.zeros_like(own.strength)
-        if acting.any():
-            step[acting] = np.linalg.lstsq(matrix, error[acting], rcond=1e-13)[0]
-        change = change - response.apply(own.place_strength(step, sign=1.0))
+        step = _strength_step(own, np.where(active, own.misfit(after) - slack, 0.0))
+        change = change + own.response.apply(own.place_strength(step))
         scale = max(float(np.abs(own.readings.component_value).max()),
                     float(np.linalg.norm(before, axis=1).max()), 1e-300)
-        own = replace(own, strength=own.strength + step, response=response, count=own.count + 1)
-        return own, change, float(np.abs(misfit).max()) / scale
+        return Correction(replace(own, strength=own.strength + step, count=own.count + 1), change,
+                          float(np.abs(misfit).max()) / scale,
+                          own.pushes.pressure_change(own.place_strength(step)))
 
     def describe(self, own: FeedbackState) -> list[str]:
         """Lines for the sheet of a run."""
@@ -197,6 +193,32 @@ class Feedback:
                 lines.append(f"           gain * radius / speed is {bite.min():.2g} at one "
                              f"reading, below {BITES_FROM:g}: the fluid passes uncorrected there")
         return lines
+
+
+def _renewed(own: FeedbackState, problem: Problem, relax: Any, *,
+             share: float) -> FeedbackState:
+    """With pushes, and with the response of the present sweeps where it is due."""
+    pushes, response = own.pushes, own.response
+    if pushes is None:
+        fed = np.zeros((len(own.readings), 3), dtype=bool)
+        direction = own.readings.component_direction
+        np.logical_or.at(fed, own.readings.component_place, direction != 0)  # speed: NaN, all
+        pushes = make_pushes(problem, own.layout, fed.ravel(), share=share)
+    due = own.count in REFRESH_EARLY or own.count % REFRESH_EVERY == 0
+    if due or response is None or response.sweeps != relax.count:
+        response = sweep_response(problem, own.layout, pushes, relax)
+    return replace(own, pushes=pushes, response=response)
+
+
+def _strength_step(own: FeedbackState, error: np.ndarray) -> np.ndarray:
+    """(m,) change of the strengths that ends an error (m,) at the readings."""
+    acting = (own.gain > 0) & (np.abs(own.direction).max(axis=1) > 0)
+    matrix = own.response.between(own.spread())[np.ix_(acting, acting)]
+    matrix[np.diag_indices(len(matrix))] += 1.0 / own.gain[acting]
+    step = np.zeros_like(own.strength)
+    if acting.any():
+        step[acting] = np.linalg.lstsq(matrix, error[acting], rcond=1e-13)[0]
+    return step
 
 
 def _turned(own: FeedbackState, problem: Problem, state: State) -> FeedbackState:
@@ -236,7 +258,8 @@ class FeedbackState:
     direction: np.ndarray
     speed: np.ndarray
     advice: tuple[str, ...] = ()
-    response: Response | None = None
+    pushes: Any = None
+    response: Any = None
     count: int = 0
 
     def misfit(self, velocity: np.ndarray) -> np.ndarray:

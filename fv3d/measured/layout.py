@@ -1,10 +1,8 @@
-"""Where the forces of readings act on one mesh, and how the momentum sweeps answer them."""
+"""Where the forces of readings act on one mesh."""
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 import scipy.sparse as sparse
@@ -58,28 +56,6 @@ def edge_change(problem: Problem, rows: np.ndarray, change: np.ndarray) -> np.nd
     table = problem.table
     return (table.keep_tangential[rows, None] * (inner - across)
             + table.keep_normal[rows, None] * across)
-
-
-@dataclass(frozen=True, eq=False)
-class Response:
-    """Answer of the momentum sweeps to a unit strength of each kernel.
-
-    ``velocity`` (3 n_cells, 3 n_places) sparse; ``at_places`` (3 n_places, 3 n_places).
-    """
-
-    velocity: sparse.csr_matrix
-    at_places: np.ndarray
-
-    def apply(self, strength: np.ndarray) -> np.ndarray:
-        """(n_cells, 3) velocity change for strengths (n_places, 3)."""
-        return np.asarray(self.velocity @ strength.ravel()).reshape(-1, 3)
-
-    def between(self, spread: sparse.csr_matrix) -> np.ndarray:
-        """(m, m) response of each component to the strength of each.
-
-        ``spread`` (3 n_places, m) are the directions of the components.
-        """
-        return np.asarray(spread.T @ (spread.T @ self.at_places.T).T)
 
 
 def make_layout(problem: Problem, readings: Readings, kernel: Kernel, *,
@@ -180,36 +156,3 @@ def _check_off_walls(problem: Problem, readings: Readings, home: np.ndarray) -> 
                                where=f"reading '{readings.name[place]}'",
                                got=f"{readings.point[place].tolist()} m",
                                remedy="Move it into the fluid, or withhold it.")
-
-
-def sweep_response(problem: Problem, layout: Layout, relax: Callable[..., Any]) -> Response:
-    """Sweep every kernel over its own region."""
-    mesh, density = problem.mesh, problem.case.fluid.density
-    n_places = len(layout.regions)
-    push = layout.cell.tocsc()
-    scratch = np.zeros((mesh.n_cells, 3))
-    rhs = np.zeros((mesh.n_cells, 3))
-    columns, values, rows = [], [], []
-    for column in range(3 * n_places):
-        region = layout.regions[column // 3]
-        part = slice(push.indptr[column], push.indptr[column + 1])
-        flat = push.indices[part]
-        rhs.reshape(-1)[flat] = push.data[part] * density * mesh.cell_volume[flat // 3]
-        relax(rhs, region, scratch)
-        rows.append((3 * region[:, None].astype(np.int64) + np.arange(3)).ravel())
-        values.append(scratch[region].ravel())
-        columns.append(np.full(3 * len(region), column))
-        scratch[region] = 0.0
-        rhs.reshape(-1)[flat] = 0.0
-    velocity = sparse.csr_matrix(
-        (np.concatenate(values), (np.concatenate(rows), np.concatenate(columns))),
-        shape=(3 * mesh.n_cells, 3 * n_places))
-    return Response(velocity, _at_places(problem, layout, velocity))
-
-
-def _at_places(problem: Problem, layout: Layout, velocity: sparse.csr_matrix) -> np.ndarray:
-    out = np.empty((velocity.shape[1], velocity.shape[1]))
-    for column in range(velocity.shape[1]):
-        change = velocity[:, [column]].toarray().reshape(-1, 3)
-        out[:, column] = layout.sample_change(problem, change).ravel()
-    return out
