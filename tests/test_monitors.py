@@ -7,6 +7,7 @@ from types import SimpleNamespace
 from typing import Any
 
 import numpy as np
+import pandas as pd
 import pytest
 import pyvista as pv
 from made import duct
@@ -123,6 +124,25 @@ def test_a_mean_over_iterations_is_refused(pulsing: fv3d.Case) -> None:
     for bad in ({"period": 0.0}, {"period": 1.0, "bins": 0}):
         with pytest.raises(CaseError):
             fv3d.PhaseMonitor(name="phase", **bad)
+
+
+def test_the_mean_is_a_run_of_its_own(pulsing: fv3d.Case, tmp_path: Path) -> None:
+    """Of a pulsing flow: its flow rate is that of the inflow's mean, and it can be compared."""
+    run = pulsed(pulsing, fv3d.MeanMonitor(name="mean", begin=0.4), end=1.2)
+    mean = fv3d.mean_run(run, name="mean")
+    steady = fv3d.flow_rate(pulsed(pulsing, end=0.2, step=0.1), "x_min")  # factor one at 0.2 s
+    assert fv3d.flow_rate(mean, "x_min") == pytest.approx(steady, rel=1e-9)
+    sample = mean.sample(PLACES).velocity
+    readings = fv3d.Readings(pd.DataFrame({
+        "x [m]": [p[0] for p in PLACES], "y [m]": [p[1] for p in PLACES],
+        "z [m]": [p[2] for p in PLACES], "u [m/s]": sample[:, 0], "u_std [m/s]": 0.1}))
+    np.testing.assert_allclose(fv3d.observe(mean, readings), sample[:, 0])
+    assert "pulsed, mean" in str(fv3d.compare(
+        [fv3d.mean_run(pulsed(pulsing, fv3d.MeanMonitor(name="mean"), end=0.1, name="pulsed"),
+                       name="mean")], readings))
+    assert fv3d.write_vtk(mean, tmp_path / "mean.vtu").is_file() and "Mean over 0.8 s" in str(mean)
+    with pytest.raises(CaseError, match="no mean"):
+        fv3d.mean_run(run, name="points")
 
 
 def test_before_its_begin_a_mean_is_empty(pulsing: fv3d.Case) -> None:

@@ -201,18 +201,17 @@ def write_whole(target: Path, about: dict[str, Any], arrays: list[np.ndarray]) -
         It cannot be written.
     """
     text = json.dumps(about, sort_keys=True)
-    buffer = io.BytesIO()
-    np.savez(buffer, allow_pickle=False, about=np.array(text),
-             digest=np.array(array_digest(text, arrays)),
-             **{f"array_{k}": array for k, array in enumerate(arrays)})
     aside = target.with_name(f".{target.name}.part")
     try:
         with open(aside, "wb") as file:
-            file.write(buffer.getbuffer())
+            np.savez(file, allow_pickle=False, about=np.array(text),
+                     digest=np.array(array_digest(text, arrays)),
+                     **{f"array_{k}": array for k, array in enumerate(arrays)})
             file.flush()
             os.fsync(file.fileno())
         os.replace(aside, target)
     except OSError as error:
+        aside.unlink(missing_ok=True)
         raise FileError("The checkpoint cannot be written.", where=str(target),
                         got=error.strerror or str(error),
                         remedy="Check permissions and free space of the folder.") from None

@@ -21,7 +21,7 @@ from .coupling import Record, Workspace
 from .monitors import Monitor, Series
 from .outlets import at_levels
 from .problem import Problem, State
-from .progress import Progress
+from .progress import Progress, TimeProgress
 from .run import Run, reverse_flow_share
 
 Advance = Callable[[Problem, State, Workspace], tuple[State, Record]]
@@ -29,7 +29,8 @@ Stop = Callable[[list[Record]], Outcome | None]
 
 
 def drive(problem: Problem, beginning: Beginning, workspace: Workspace, *, advance: Advance,
-          stop: Stop, name: str, monitors: Sequence[Monitor], progress: Progress, clock: str,
+          stop: Stop, name: str, monitors: Sequence[Monitor], clock: str,
+          progress: Progress | TimeProgress,
           moment: Callable[[Problem, State], Problem] = at_levels) -> Run:
     """Advance a state until ``stop`` or a monitor ends it, the user does, or it diverges.
 

@@ -77,3 +77,42 @@ class Progress:
                  trace: TracebackType | None) -> None:
         if self._bar is not None:
             self._bar.close()
+
+
+class TimeProgress:
+    """Progress bar of a run in time, by the share of the time that has passed."""
+
+    def __init__(self, problem: Problem, name: str, *, begin: float, end: float, steps: int,
+                 shown: bool) -> None:
+        self._problem, self._name, self._shown = problem, name, shown
+        self._begin, self._end, self._steps = begin, end, steps
+        self._bar: Any = None
+        self._began = 0.0
+
+    def __enter__(self) -> TimeProgress:
+        if self._shown:
+            from tqdm import tqdm
+            print(f"{self._name}: {self._problem.mesh.n_cells} cells, about {self._steps} steps to "
+                  f"{self._end:g} s", file=sys.stderr)
+            self._bar = tqdm(total=100.0, desc=self._name, unit="%", file=sys.stderr, leave=False,
+                             bar_format="{desc}: {percentage:3.0f}%|{bar:24}| {postfix}",
+                             mininterval=0.5)
+        self._began = time.perf_counter()
+        return self
+
+    def show(self, record: Record) -> None:
+        """Move the bar; computing time left from the share done."""
+        if self._bar is None:
+            return
+        share = min((record.time - self._begin) / (self._end - self._begin), 1.0)
+        elapsed = time.perf_counter() - self._began
+        self._bar.n = 100.0 * share
+        self._bar.set_postfix_str(f"{record.time:.4g} s of {self._end:g} s, "
+                                  f"{elapsed * (1.0 / max(share, 1e-9) - 1.0):.0f} s left",
+                                  refresh=False)
+        self._bar.update(0)
+
+    def __exit__(self, kind: type[BaseException] | None, value: BaseException | None,
+                 trace: TracebackType | None) -> None:
+        if self._bar is not None:
+            self._bar.close()

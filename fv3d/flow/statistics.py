@@ -7,14 +7,15 @@ Commun. ACM 22, 532-535; from memory).
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
 
-from ..errors import CaseError, as_number
+from ..errors import CaseError, Outcome, as_number
 from .coupling import Record
 from .problem import Problem, State
+from .run import Run
 
 PAIRS = ((0, 0), (1, 1), (2, 2), (0, 1), (0, 2), (1, 2))  # of the Reynolds stresses kept
 
@@ -28,6 +29,7 @@ class FieldStatistics:
     velocity : (n_cells, 3) mean [m/s], pressure : (n_cells,) mean [Pa]
     reynolds_stress : (n_cells, 3, 3) mean product of velocity fluctuations [m^2/s^2]
     pressure_rms : (n_cells,) [Pa]
+    mass_flux : (n_faces,) mean [kg/s], boundary_velocity : (n_boundary, 3) mean [m/s]
     seconds : time averaged over [s], steps : their number
     """
 
@@ -35,6 +37,8 @@ class FieldStatistics:
     pressure: np.ndarray
     reynolds_stress: np.ndarray
     pressure_rms: np.ndarray
+    mass_flux: np.ndarray
+    boundary_velocity: np.ndarray
     seconds: float
     steps: int
 
@@ -77,13 +81,16 @@ class MeanMonitor:
         kept, n = self._kept, problem.mesh.n_cells
         if kept["steps"] == 0:
             kept.update(velocity=np.zeros((n, 3)), pressure=np.zeros(n), stress=np.zeros((n, 6)),
-                        square=np.zeros(n))
+                        square=np.zeros(n), mass_flux=np.zeros(problem.mesh.n_faces),
+                        boundary_velocity=np.zeros((problem.mesh.n_boundary, 3)))
         total = kept["weight"] + weight
         away = state.velocity - kept["velocity"]
         up = state.pressure - kept["pressure"]
         share = kept["weight"] * weight / total
         kept["velocity"] += (weight / total) * away
         kept["pressure"] += (weight / total) * up
+        for name in ("mass_flux", "boundary_velocity"):
+            kept[name] += (weight / total) * (getattr(state, name) - kept[name])
         for k, (i, j) in enumerate(PAIRS):
             kept["stress"][:, k] += share * away[:, i] * away[:, j]
         kept["square"] += share * up * up
@@ -95,13 +102,14 @@ class MeanMonitor:
         kept = self._kept
         if kept["steps"] == 0:
             return FieldStatistics(np.empty((0, 3)), np.empty(0), np.empty((0, 3, 3)), np.empty(0),
-                                   0.0, 0)
+                                   np.empty(0), np.empty((0, 3)), 0.0, 0)
         stress = np.empty((len(kept["square"]), 3, 3))
         for k, (i, j) in enumerate(PAIRS):
             stress[:, i, j] = stress[:, j, i] = kept["stress"][:, k] / kept["weight"]
         return FieldStatistics(kept["velocity"].copy(), kept["pressure"].copy(), stress,
-                               np.sqrt(kept["square"] / kept["weight"]), kept["weight"],
-                               kept["steps"])
+                               np.sqrt(kept["square"] / kept["weight"]),
+                               kept["mass_flux"].copy(), kept["boundary_velocity"].copy(),
+                               kept["weight"], kept["steps"])
 
     def stored(self) -> dict[str, Any]:
         """The sums, for a checkpoint."""
@@ -110,6 +118,35 @@ class MeanMonitor:
     def restore(self, stored: dict[str, Any]) -> None:
         """Go on from what a checkpoint kept."""
         self._kept = _own(stored)
+
+
+def mean_run(run: Run, *, name: str) -> Run:
+    """The mean of a run in time as a run of its own: to be compared, drawn and written like one.
+
+    It carries the fluid's own viscosity and no artificial force.  Momentum does not balance in it:
+    the Reynolds stresses are missing.
+
+    Parameters
+    ----------
+    run : Run
+    name : str
+        Of the :class:`MeanMonitor` that saw the run.
+
+    Raises
+    ------
+    CaseError
+        No such monitor, or one that saw no step.
+    """
+    found = run.series.get(name)
+    if not isinstance(found, FieldStatistics) or found.steps == 0:
+        raise CaseError("There is no mean of this name.", where="mean_run(run, name=)",
+                        got=repr(name), remedy="Give the run a MeanMonitor that begins before it "
+                        f"ends; it has {', '.join(run.series) or 'no monitor'}.")
+    state = State(found.velocity, found.pressure, found.mass_flux, found.boundary_velocity,
+                  levels=run.state.levels)
+    still = replace(run.problem, sources=())
+    outcome = Outcome("mean", f"Mean over {found.seconds:g} s, {found.steps} steps.", "", True)
+    return Run(still, state, {"iteration": np.arange(0)}, outcome, f"{run.name}, mean")
 
 
 @dataclass(frozen=True, eq=False)

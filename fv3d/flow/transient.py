@@ -15,7 +15,7 @@ from .loop import check_kind, drive
 from .monitors import Monitor
 from .outlets import refuse_flow_outlets
 from .problem import Case, Problem, State, make_problem
-from .progress import Progress
+from .progress import TimeProgress
 from .resolution import warn_of_poor_resolution
 from .run import Run
 from .start import start_state
@@ -100,7 +100,8 @@ def solve_transient(case: Case, *, time_step: float | StepSize, end_time: float,
     run = drive(problem, beginning, workspace, stop=stop, name=name, monitors=monitors,
                 clock="time", advance=TimeStep(sizes, end=end, outer=outer_iterations),
                 moment=lambda problem, state: eddies_of(problem_at(problem, state.time), state),
-                progress=Progress(problem, name, 1e-300, steps, progress))
+                progress=TimeProgress(problem, name, begin=state.time, end=end, steps=steps,
+                                      shown=progress))
     warn_of_poor_resolution(run.problem, run.state, name)
     return run
 

@@ -47,6 +47,11 @@ class FeedbackInTime:
         """Records of the fed readings."""
         return records(self.law.readings.velocity_only())
 
+    @property
+    def readings(self) -> Readings:
+        """The fed readings, each place once."""
+        return self.records.places
+
     def start(self, problem: Problem, state: State, earlier: Any) -> StateInTime:
         """Kernels with their potentials, gains, and zero strengths or those of an earlier run."""
         if not self.law.readings.timed:
