@@ -28,7 +28,7 @@ from .flow.problem import Case
 from .flow.run import Run
 from .flow.scalar import ScalarField, solve_scalar
 from .flow.scalar_boundary import ScalarFlux, ScalarValue
-from .flow.statistics import FieldStatistics, MeanMonitor, PhaseAverage, PhaseMonitor
+from .flow.statistics import FieldStatistics, MeanMonitor, PhaseAverage, PhaseMonitor, mean_run
 from .flow.steady import iterate, solve_pseudo_transient, solve_steady
 from .flow.step_size import CourantStep
 from .flow.transient import solve_transient
@@ -88,11 +88,12 @@ __all__ = [
     "Uniform", "Upwind", "VtkSeries", "Wall", "backward_step", "boundary_map", "box", "build_mesh",
     "channel_with_block", "channel_with_cylinder", "check_mesh", "compare", "developed_profile",
     "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget", "force_coefficients",
-    "frame_strip", "get_threads", "inlet_table", "iterate", "join_periodic", "lag", "mean_value",
-    "mixed_box", "moist_air", "momentum_budget", "nozzle", "observe", "phase", "picture",
-    "picture_readings", "pipe", "plot_history", "plot_series", "pressure_drop", "profile",
-    "pyramid_box", "quality", "read_checkpoint", "read_mesh", "read_readings", "set_threads",
-    "settling_time", "shear_reversals", "skewed", "solve_pseudo_transient", "solve_scalar",
-    "solve_steady", "solve_transient", "strouhal_number", "wall_distance", "wall_shear", "water",
-    "wedge_box", "write_history", "write_mesh", "write_readings", "write_surface", "write_vtk",
+    "frame_strip", "get_threads", "inlet_table", "iterate", "join_periodic", "lag", "mean_run",
+    "mean_value", "mixed_box", "moist_air", "momentum_budget", "nozzle", "observe", "phase",
+    "picture", "picture_readings", "pipe", "plot_history", "plot_series", "pressure_drop",
+    "profile", "pyramid_box", "quality", "read_checkpoint", "read_mesh", "read_readings",
+    "set_threads", "settling_time", "shear_reversals", "skewed", "solve_pseudo_transient",
+    "solve_scalar", "solve_steady", "solve_transient", "strouhal_number", "wall_distance",
+    "wall_shear", "water", "wedge_box", "write_history", "write_mesh", "write_readings",
+    "write_surface", "write_vtk",
 ]
