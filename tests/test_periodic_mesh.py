@@ -145,6 +145,27 @@ def test_diffusion_over_the_pair_solves_a_periodic_poisson_problem() -> None:
     np.testing.assert_allclose(solution, exact * (step / 2 / np.sin(step / 2))**2, atol=1e-8)
 
 
+@pytest.mark.parametrize("method", [fv3d.ByAnisotropy(), fv3d.Classical(),
+                                    fv3d.SmoothedAggregation()], ids=repr)
+def test_multigrid_of_a_mesh_without_boundaries(method: object) -> None:
+    """Against SciPy's direct solver, one value held."""
+    from scipy.sparse.linalg import spsolve
+
+    from fv3d.operators import linear
+    mesh = fv3d.join_periodic(wavy("hex", 12), {"x_min": "x_max", "y_min": "y_max",
+                                                "z_min": "z_max"})
+    assert mesh.n_boundary == 0
+    inner = orthogonal_factor(mesh) * np.exp(np.random.default_rng(0).normal(size=mesh.n_faces))
+    matrix = symmetric_matrix(mesh, pattern(mesh), inner, np.zeros(0))
+    rhs = np.random.default_rng(1).normal(size=mesh.n_cells)
+    rhs -= rhs.mean()
+    result = linear.solve(linear.prepare(matrix, method=method, singular=True), rhs,
+                          matrix=matrix, tolerance=1e-10)
+    assert result.outcome.good and result.iterations <= 30
+    exact = np.concatenate([[0.0], spsolve(matrix[1:, 1:].tocsc(), rhs[1:])])
+    np.testing.assert_allclose(result.solution, exact - exact.mean(), atol=1e-7 * np.ptp(exact))
+
+
 def test_points_off_by_rounding_are_moved_and_the_cells_stay_closed() -> None:
     mesh = box((0, 0, 0), (1, 1, 1), cells=(4, 4, 4))
     r = np.random.default_rng(0)
