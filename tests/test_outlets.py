@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -9,7 +10,7 @@ import pytest
 from made import solved
 
 import fv3d
-from fv3d.errors import BoundaryError
+from fv3d.errors import BoundaryError, CaseError, Fv3dWarning
 from fv3d.flow.problem import make_problem
 from fv3d.mesh.generate import box
 
@@ -83,6 +84,26 @@ def test_restarts_keep_the_level_and_the_sheet_tells_it() -> None:
     assert finer.state.levels[0] == pytest.approx(run.state.levels[0], rel=0.1)
     other = make_problem(crossing(y_min=fv3d.Outlet(), y_max=fv3d.Outlet()))
     assert other.outlets == ()
+
+
+def test_checkpoints_carry_the_level_to_the_last_bit(tmp_path: Path) -> None:
+    case = crossing(y_min=fv3d.Outlet(), y_max=fv3d.FlowOutlet(share=0.8))
+
+    def run(steps: int, **options: Any) -> fv3d.Run:
+        with pytest.warns(Fv3dWarning, match="iteration limit"):
+            return fv3d.solve_steady(case, tolerance=1e-30, max_iterations=steps, progress=False,
+                                     **options)
+    whole = run(24)
+    run(11, checkpoint=fv3d.Checkpoint(tmp_path / "half"))
+    again = run(24, start=fv3d.read_checkpoint(tmp_path / "half"))
+    assert again.state.levels == whole.state.levels
+    np.testing.assert_array_equal(again.velocity, whole.velocity)
+
+
+def test_a_run_in_time_refuses_them() -> None:
+    with pytest.raises(CaseError, match="takes no outlet of given flow"):
+        fv3d.solve_transient(crossing(y_min=fv3d.Outlet(), y_max=fv3d.FlowOutlet(share=0.8)),
+                             time_step=0.1, end_time=0.2, progress=False)
 
 
 def test_a_flow_that_is_not_met_yet_counts_as_misfit() -> None:

@@ -172,6 +172,22 @@ def test_heat_transfer_between_plates() -> None:
     assert abs(found[1] - 140 / 17) < 0.35 * abs(found[0] - 140 / 17)
 
 
+def test_scalar_in_a_periodic_duct() -> None:
+    """Conduction between plates while the stream turns round: linear, whatever the flow."""
+    mesh = box((0, 0, 0), (1, 1, 1), cells=(4, 6, 3))
+    sides = {"x_min": fv3d.Periodic("x_max", drop_per_length=1.0), "y_min": fv3d.Wall(),
+             "y_max": fv3d.Wall(), "z_min": fv3d.Symmetry(), "z_max": fv3d.Symmetry()}
+    flow = fv3d.solve_steady(fv3d.Case(mesh, fv3d.Fluid(density=1.0, viscosity=0.2),
+                                       boundaries=sides), tolerance=1e-9, max_iterations=1500,
+                             progress=False)
+    got = solved(flow, diffusivity=0.1, boundaries={"y_min": fv3d.ScalarValue(1.0),
+                                                    "y_max": fv3d.ScalarValue(3.0)})
+    assert flow.velocity[:, 0].max() > 0.3
+    np.testing.assert_allclose(got.values, 1.0 + 2.0 * flow.mesh.cell_centre[:, 1], atol=1e-8)
+    assert got.outflow("y_max") == pytest.approx(-0.2, rel=1e-7)
+    assert got.outflow("y_min") == pytest.approx(-got.outflow("y_max"), rel=1e-7)
+
+
 def test_what_enters_and_is_made_leaves() -> None:
     mesh = skewed(5, tetra=True)
     got = solved(made_run(mesh, uniform((1.0, 0.3, 0.0)), nothing), diffusivity=0.05, source=0.7,

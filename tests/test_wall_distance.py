@@ -8,6 +8,7 @@ import pyvista as pv
 from contracts import skewed
 
 import fv3d
+from fv3d.mesh.periodic import join_periodic
 from fv3d.mesh.wall_distance import triangle_distance
 
 
@@ -69,6 +70,25 @@ def test_against_vtk(kind: str) -> None:
         [np.full(len(triangles), 3), np.arange(3 * len(triangles)).reshape(-1, 3)]))
     cloud = pv.PolyData(np.array(mesh.cell_centre)).compute_implicit_distance(surface)
     np.testing.assert_allclose(got, np.abs(cloud["implicit_distance"]), atol=2e-8)
+
+
+def test_images_of_walls_count_across_joined_boundaries() -> None:
+    """A block near one end of a periodic channel is near the other end's cells, too."""
+    mesh = fv3d.box((0, 0, 0), (4, 3, 1), cells=(8, 6, 2))
+    faces = {name: mesh.face_points[where] for name, where in mesh.boundaries.items()}
+    bottom = mesh.face_centre[mesh.boundaries["y_min"], 0] < 0.6
+    floor = faces.pop("y_min")
+    parts = {**faces, "plate": floor[bottom], "rest": floor[~bottom]}
+    mesh = fv3d.build_mesh(mesh.points, [(k, c) for k, c, _ in mesh.cell_blocks],
+                           {name: [rows] for name, rows in parts.items()})
+    joined = join_periodic(mesh, {"x_min": "x_max"})
+    x, y, _ = joined.cell_centre.T
+    beside = np.maximum(np.minimum(x - 0.5, 4.0 - x), 0.0)
+    np.testing.assert_allclose(fv3d.wall_distance(joined, ["plate"]), np.hypot(beside, y),
+                               atol=1e-13)
+    np.testing.assert_allclose(fv3d.wall_distance(mesh, ["plate"]),
+                               np.hypot(np.maximum(mesh.cell_centre[:, 0] - 0.5, 0.0),
+                                        mesh.cell_centre[:, 1]), atol=1e-13)
 
 
 def test_against_a_plain_loop() -> None:

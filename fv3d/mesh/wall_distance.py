@@ -17,7 +17,8 @@ def wall_distance(mesh: Mesh, walls: Sequence[str], *,
 
     Triangles are taken as they are, quadrilaterals as four triangles about the mean of their
     points.  Faces are searched in classes of like size, so that large faces far off do not
-    lengthen the search among small ones nearby.
+    lengthen the search among small ones nearby.  Across joined boundaries the images of the walls
+    one translation away count, too.
 
     Parameters
     ----------
@@ -43,10 +44,20 @@ def wall_distance(mesh: Mesh, walls: Sequence[str], *,
     radius = np.linalg.norm(triangles - centre[:, None], axis=2).max(axis=1)
     grade = np.floor(np.log2(radius / radius.min())).astype(int)
     best = np.full(len(places), np.inf)
-    for one in np.unique(grade):
-        chosen = grade == one
-        _search(places, triangles[chosen], centre[chosen], float(radius[chosen].max()), best)
+    for shift in _images(mesh):
+        for one in np.unique(grade):
+            chosen = grade == one
+            _search(places + shift, triangles[chosen], centre[chosen],
+                    float(radius[chosen].max()), best)
     return best
+
+
+def _images(mesh: Mesh) -> list[np.ndarray]:
+    """Translations to the images of a point next to it; zero first."""
+    images = [np.zeros(3)]
+    for pair in mesh.joined.values():
+        images += [image + turn * pair.shift for image in images for turn in (-1.0, 1.0)]
+    return images
 
 
 def _checked_names(mesh: Mesh, walls: Any) -> list[str]:
