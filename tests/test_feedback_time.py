@@ -33,6 +33,7 @@ def record(time: np.ndarray, velocity: Any, *, places: Any = (CENTRE,),
     return fv3d.Readings(pd.DataFrame(rows))
 
 
+FRICTIONLESS = pytest.mark.filterwarnings("ignore:Run 'guided' is laminar but")
 ALWAYS = np.linspace(-5.0, 20.0, 300)
 
 
@@ -70,6 +71,7 @@ def test_a_scalar_decays_at_the_gain(gain: float) -> None:
         assert abs((1.0 - levels[-1]) / np.exp(-gain * k * step) - 1.0) <= 1e-3
 
 
+@FRICTIONLESS
 @pytest.mark.parametrize("kind, share", [("hex", 2 / 3), ("tet", 2 / 3)])
 def test_in_the_solver_a_reading_relaxes_at_its_own_rate(kind: str, share: float) -> None:
     """exp(-K HPphi t) to 1 %, HPphi near the 2/3 of a Gaussian in unbounded fluid."""
@@ -82,6 +84,7 @@ def test_in_the_solver_a_reading_relaxes_at_its_own_rate(kind: str, share: float
     np.testing.assert_allclose(left, np.exp(-gain * answer[0] * series.time), rtol=0.01)
 
 
+@FRICTIONLESS
 @pytest.mark.parametrize("kind", ["hex", "tet"])
 @pytest.mark.parametrize("product", [1e-2, 1.0, 1e2, 1e4, 1e6])
 def test_no_gain_is_too_large(product: float, kind: str) -> None:
@@ -197,6 +200,7 @@ def test_speeds_are_met() -> None:
     assert np.linalg.norm(run.sample([(1.2, 0.5, 0.5)]).velocity) == pytest.approx(0.3, rel=1e-3)
 
 
+@FRICTIONLESS
 def test_samples_do_not_depend_on_the_step() -> None:
     """A measured wave is followed alike at two steps: not held between its samples."""
     def wave(t: float) -> Any:
