@@ -29,7 +29,7 @@ def channel(n: int = 8, **drive: Any) -> fv3d.Case:
 
 def winding(kind: str = "hex", **drive: Any) -> fv3d.Case:
     """Channel between wavy walls, periodic along x and z: the section varies along x."""
-    mesh = wavy(kind, 8 if kind == "hex" else 5)
+    mesh = wavy(kind, 8) if kind == "hex" else wavy(kind, 5, size=0.1)
     return fv3d.Case(mesh, FLUID, boundaries={
         "x_min": fv3d.Periodic("x_max", **drive), "z_min": fv3d.Periodic("z_max"),
         "y_min": fv3d.Wall(), "y_max": fv3d.Wall()})

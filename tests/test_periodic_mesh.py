@@ -19,15 +19,15 @@ LENGTH = np.array([2.0, 1.0, 0.7])
 WAVE = 2.0 * np.pi / LENGTH
 
 
-def wavy(kind: str, n: int = 6) -> Mesh:
-    """A box whose opposite sides are shaken alike: points moved by a periodic function."""
+def wavy(kind: str, n: int = 6, *, size: float = 0.3) -> Mesh:
+    """A box whose opposite sides are shaken alike: points moved by up to ``size`` cells."""
     makers = {"hex": lambda: box((0, 0, 0), LENGTH, cells=(n, n, n)),
               "tet": lambda: box((0, 0, 0), LENGTH, cells=(n, n, n), tetra=True),
               "wedge": lambda: fv3d.wedge_box((0, 0, 0), LENGTH, cells=(n, n, n)),
               "pyramid": lambda: fv3d.pyramid_box((0, 0, 0), LENGTH, cells=(n, n, n))}
     mesh = makers[kind]()
     x = mesh.points * WAVE
-    shake = 0.05 * LENGTH / n * 6 * np.stack(
+    shake = size * LENGTH / n * np.stack(
         [np.sin(x[:, 1] + 2 * x[:, 2]), np.sin(x[:, 2] + x[:, 0]), np.cos(x[:, 0] - x[:, 1])],
         axis=1)
     faces = {name: [np.array([row[row >= 0] for row in mesh.face_points[where]])]
