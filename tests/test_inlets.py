@@ -12,6 +12,7 @@ import fv3d
 from fv3d.errors import BoundaryError, Fv3dWarning, ReadingError
 from fv3d.flow.inlets import beyond_shares
 from fv3d.flow.problem import make_problem
+from fv3d.mesh.surfaces import edge_pairs, rim_edges
 
 WATER = fv3d.Fluid(density=1000.0, viscosity=1e-3)
 
@@ -206,3 +207,32 @@ def test_a_bent_inlet_has_no_developed_profile() -> None:
     mesh = fv3d.pipe(length=0.1, diameter=2.0, cells=2)
     with pytest.raises(BoundaryError, match="flat"):
         fv3d.developed_profile(mesh, "wall", fluid=WATER, mean_speed=1.0)
+
+
+def test_edges_around_a_boundary_and_what_lies_beside_them() -> None:
+    """Against a plain loop over all pairs of faces, on triangles and quadrilaterals."""
+    mesh = fv3d.mixed_box((0, 0, 0), (1, 1, 1), cells=(4, 3, 3))
+    found, beside = rim_edges(mesh, "x_min")
+    edges: dict[tuple[int, int], list[str]] = {}
+    for name, faces in mesh.boundaries.items():
+        for row in mesh.face_points[faces]:
+            ring = row[row >= 0].tolist()
+            for one, other in zip(ring, [*ring[1:], ring[0]]):
+                edges.setdefault((min(one, other), max(one, other)), []).append(name)
+    wanted = {edge: next(n for n in names if n != "x_min") for edge, names in edges.items()
+              if names.count("x_min") == 1}
+    assert {tuple(edge): name for edge, name in zip(found.tolist(), beside)} == wanted
+    middle = mesh.points[found].mean(axis=1)
+    for name, place in zip(beside, middle):
+        axis, side = "xyz".index(name[0]), float(name.endswith("max"))
+        assert place[axis] == side
+
+
+def test_pairs_of_faces_beside_each_other() -> None:
+    mesh = skewed(4, tetra=True)
+    rows = mesh.face_points[mesh.boundaries["z_min"]]
+    one, other = edge_pairs(rows)
+    found = {frozenset(pair) for pair in zip(one.tolist(), other.tolist())}
+    wanted = {frozenset((a, b)) for a in range(len(rows)) for b in range(a)
+              if len(set(rows[a, :3]) & set(rows[b, :3])) == 2}
+    assert found == wanted
