@@ -34,7 +34,8 @@ def spatial_interpolation(points: np.ndarray, values: np.ndarray, *,
     """Radial basis interpolation with the linear kernel and a constant.
 
     Exact at the points, and the smoothest such field in the sense of Duchon (1977) for this
-    kernel; coordinates are scaled by the largest extent.  Several values at one place are
+    kernel.  Lengths count alike along all directions, or are measured by the spread of the
+    points along their principal axes: whichever foretells better the points left out in turn.  Several values at one place are
     averaged; one place alone gives a constant.
 
     Parameters
@@ -51,11 +52,36 @@ def spatial_interpolation(points: np.ndarray, values: np.ndarray, *,
     means = np.bincount(number, values) / np.bincount(number)
     if len(places) == 1:
         return np.full(len(where), means[0])
-    origin, extent = places.mean(axis=0), np.ptp(places, axis=0).max()
+    origin, unit = places.mean(axis=0), _unit(places, means)
     near = NEIGHBOURS if len(places) > 20 * NEIGHBOURS else None
-    field = RBFInterpolator((places - origin) / extent, means, kernel="linear", degree=0,
+    field = RBFInterpolator((places - origin) @ unit, means, kernel="linear", degree=0,
                             neighbors=near)
-    return field((where - origin) / extent)
+    return np.asarray(field((where - origin) @ unit))
+
+
+def _unit(places: np.ndarray, values: np.ndarray) -> np.ndarray:
+    """(3, 3) matrix from lengths [m] to scaled ones, see :func:`spatial_interpolation`.
+
+    What is left out in turn follows from one inverse (Rippa, S. 1999, Adv. Comput. Math. 11,
+    193-210).
+    """
+    n = len(places)
+    _, spread, axes = np.linalg.svd(places - places.mean(axis=0))
+    spread = np.resize(np.append(spread, [0.0, 0.0]), 3)
+    alike = np.eye(3) / np.ptp(places, axis=0).max()
+    if n < 4 or n > 20 * NEIGHBOURS:
+        return alike
+    choices = (alike, axes.T / np.where(spread > 1e-6 * spread[0], spread, spread[0]))
+    misfit = []
+    for unit in choices:
+        scaled = places @ unit
+        system = np.ones((n + 1, n + 1))
+        system[:n, :n] = -np.linalg.norm(scaled[:, None] - scaled, axis=2)
+        system[n, n] = 0.0
+        inverse = np.linalg.inv(system)
+        weights = inverse[:n, :n] @ values
+        misfit.append(float(np.sum((weights / np.diag(inverse)[:n]) ** 2)))
+    return choices[int(np.argmin(misfit))]
 
 
 def nearest_reading(points: np.ndarray, values: np.ndarray, *, where: np.ndarray) -> np.ndarray:
