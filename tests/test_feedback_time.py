@@ -114,7 +114,7 @@ def off(kind: str, **options: Any) -> fv3d.Readings:
     return record(ALWAYS, flow(kind).sample(PLACES).velocity + OFF, places=PLACES, **options)
 
 
-@pytest.mark.parametrize("kind, radius, steps", [("hex", 0.12, (0.05, 0.3)), ("tet", 0.2, (0.2,)),
+@pytest.mark.parametrize("kind, radius, steps", [("hex", 0.12, (0.1, 0.4)), ("tet", 0.2, (0.2,)),
                                                  ("hex", None, (0.2,))])
 def test_the_steady_end_is_that_of_the_steady_law(kind: str, radius: float | None,
                                                   steps: tuple[float, ...]) -> None:
@@ -257,3 +257,46 @@ def test_what_cannot_be_fed_in_time() -> None:
     outside = record(ALWAYS, OFF[:1], places=((9.0, 0.5, 0.5),))
     with pytest.raises(ReadingError, match="outside"):
         fed(flow("hex").case, fv3d.Feedback(outside, radius=0.12))
+
+
+@pytest.mark.parametrize("kind", ["hex", "tet"])
+def test_monitors_see_the_pressure_without_the_artificial_part(kind: str) -> None:
+    """Forces and pressures of the series are those of the run, step by step and at the end."""
+    law = fv3d.Feedback(off(kind), radius=0.2, gain=20.0)
+    wall = fv3d.ForceMonitor("y_min", name="wall")
+    run = fed(flow(kind).case, law, start=flow(kind), end_time=0.2,
+              monitors=[wall, fv3d.PointMonitor([CENTRE], name="probe")])
+    assert np.abs(run.pressure - run.state.pressure).max() > 0.01
+    force = fv3d.force(run, "y_min")
+    np.testing.assert_allclose(run.series["wall"].pressure_force[-1], force.pressure, rtol=1e-5)
+    np.testing.assert_allclose(run.series["wall"].friction[-1], force.friction, rtol=1e-5)
+    assert run.series["probe"].pressure[-1, 0] == pytest.approx(
+        run.sample([CENTRE]).pressure[0], rel=1e-5)
+
+
+def test_what_the_instruments_would_read() -> None:
+    """At fed readings the law's own misfit, at others what the field says; holes are nan."""
+    readings = record(ALWAYS[ALWAYS < 0.5], lambda t: (0.5 + 0.1 * t, 0.0, 0.0), places=PLACES)
+    law = fv3d.Feedback(off("hex"), radius=0.12, gain=1e5)
+    watch = [fv3d.ReadingMonitor(off("hex"), name="fed"),
+             fv3d.ReadingMonitor(readings, name="others")]
+    run = fed(flow("hex").case, law, start=flow("hex"), end_time=1.0, monitors=watch)
+    met = run.series["fed"]
+    assert met.computed.shape == met.measured.shape == (50, 9)
+    assert np.abs(met.computed - met.measured)[-20:].max() <= 2e-3
+    others = run.series["others"]
+    assert np.isnan(others.measured[others.time > 0.5]).all()
+    np.testing.assert_allclose(others.measured[5:10, 0], 0.5 + 0.1 * others.time[5:10], rtol=1e-6)
+    places = watch[1].places
+    np.testing.assert_allclose(others.computed[-1], fv3d.observe(run, places), atol=1e-6)
+    for use in (lambda: fv3d.observe(run, readings), lambda: fv3d.compare(run, readings)):
+        with pytest.raises(ReadingError, match="one field"):
+            use()
+
+
+def test_pseudo_transient_takes_no_time_either() -> None:
+    for options in ({}, {"start": flow("hex")}):
+        with pytest.raises(ReadingError, match="no time"):
+            fv3d.solve_pseudo_transient(flow("hex").case, tolerance=1e-4, max_iterations=5,
+                                        pseudo_step=fv3d.LocalStep(), progress=False,
+                                        sources=[fv3d.Feedback(off("hex"), radius=0.12)], **options)

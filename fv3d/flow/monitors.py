@@ -1,4 +1,7 @@
-"""Monitors see every step, keep what they were asked to keep, and may stop a run."""
+"""Monitors see every step, keep what they were asked to keep, and may stop a run.
+
+Pressures and forces are without the part that only balances artificial forces, as those of a run.
+"""
 
 from __future__ import annotations
 
@@ -11,7 +14,8 @@ import numpy as np
 from ..errors import CaseError, did_you_mean
 from ..operators.interpolation import PointInterpolation, checked_points, point_interpolation
 from .coupling import Record
-from .equations import boundary_traction, pressure_fields
+from .equations import boundary_traction
+from .potential import TruePressure
 from .problem import Problem, State
 
 
@@ -98,6 +102,7 @@ class PointMonitor(Keeper):
         super().__init__(name)
         self.points = checked_points(points, "PointMonitor(points)")
         self._to_points: tuple[Any, PointInterpolation] | None = None
+        self._pressure = TruePressure()
 
     def see(self, problem: Problem, state: State, record: Record) -> str | None:
         """Keep one row."""
@@ -105,11 +110,10 @@ class PointMonitor(Keeper):
             self._to_points = (problem.mesh, point_interpolation(
                 problem.mesh, problem.velocity_gradient, self.points,
                 where=f"PointMonitor '{self.name}'"))
-        n = problem.mesh.n_internal
         at = self._to_points[1]
-        face = pressure_fields(problem, state.pressure, state.mass_flux[n:]).face
+        _, cell, face = self._pressure(problem, state)
         self.keep(state, velocity=at(state.velocity, state.boundary_velocity),
-                  pressure=at(state.pressure, face[n:]))
+                  pressure=at(cell, face[problem.mesh.n_internal:]))
         return None
 
 
@@ -135,6 +139,7 @@ class ForceMonitor(Keeper):
                  centre: Sequence[float] = (0.0, 0.0, 0.0)) -> None:
         super().__init__(name)
         self.boundary = boundary
+        self._pressure = TruePressure()
         self.centre = checked_points(np.asarray(centre), "ForceMonitor(centre=)")[0]
 
     def see(self, problem: Problem, state: State, record: Record) -> str | None:
@@ -142,8 +147,8 @@ class ForceMonitor(Keeper):
         mesh, n = problem.mesh, problem.mesh.n_internal
         faces = boundary_span(problem, self.boundary, f"ForceMonitor '{self.name}'")
         rows = slice(faces.start - n, faces.stop - n)
-        fields = pressure_fields(problem, state.pressure, state.mass_flux[n:])
-        push = fields.face[faces, None] * mesh.face_area[faces] + fields.warp_force[faces]
+        fields, _, pressure = self._pressure(problem, state)
+        push = pressure[faces, None] * mesh.face_area[faces] + fields.warp_force[faces]
         gradient = problem.velocity_gradient(state.velocity, state.boundary_velocity)
         drag = -boundary_traction(problem, state.velocity, gradient, state.boundary_velocity)[rows]
         moment = np.cross(mesh.face_centre[faces] - self.centre, push + drag).sum(axis=0)

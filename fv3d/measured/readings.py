@@ -307,12 +307,17 @@ def observe(run: Any, readings: Readings) -> np.ndarray:
     Raises
     ------
     ReadingError
-        A reading lies outside the mesh, or not a table of readings.
+        A reading lies outside the mesh, readings resolved in time, or no table of readings.
     CaseError
         Not a run.
     """
     expect_run(run, "observe(run, readings)")
     expect_readings(readings, "observe(run, readings)")
+    if readings.timed:
+        raise ReadingError("Readings resolved in time cannot be compared with one field.",
+                           where="observe(run, readings)", got="a column 'time'",
+                           remedy="Use readings.mean() with a mean or steady run, or give the run "
+                                  "in time a ReadingMonitor.")
     try:
         sample = run.sample(readings.point)
     except CaseError:
