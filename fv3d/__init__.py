@@ -37,6 +37,7 @@ from .measured.compare import Comparison, compare
 from .measured.feedback import Feedback
 from .measured.inlet import inlet_table
 from .measured.readings import Readings, observe, read_readings
+from .measured.watched import ReadingMonitor
 from .mesh.generate import box, mixed_box, pyramid_box, skewed, wedge_box
 from .mesh.generate_channel import channel_with_block, channel_with_cylinder
 from .mesh.generate_duct import backward_step, pipe
@@ -83,17 +84,17 @@ __all__ = [
     "Inlet", "InletTable", "LeastSquares", "LimitedUpwind", "LocalStep", "MeanMonitor", "Mesh",
     "MeshError", "MichalakOllivierGooch", "MomentumBudget", "Numerics", "OneSided", "Outcome",
     "Outlet", "Periodic", "PhaseAverage", "PhaseMonitor", "PointMonitor", "Profile", "ReadingError",
-    "Readings", "Reference", "Reversals", "Run", "ScalarField", "ScalarFlux", "ScalarValue",
-    "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing", "Symmetry", "TwoSided",
-    "Uniform", "Upwind", "VtkSeries", "Wall", "backward_step", "boundary_map", "box", "build_mesh",
-    "channel_with_block", "channel_with_cylinder", "check_mesh", "compare", "developed_profile",
-    "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget", "force_coefficients",
-    "frame_strip", "get_threads", "inlet_table", "iterate", "join_periodic", "lag", "mean_run",
-    "mean_value", "mixed_box", "moist_air", "momentum_budget", "nozzle", "observe", "phase",
-    "picture", "picture_readings", "pipe", "plot_history", "plot_series", "pressure_drop",
-    "profile", "pyramid_box", "quality", "read_checkpoint", "read_mesh", "read_readings",
-    "set_threads", "settling_time", "shear_reversals", "skewed", "solve_pseudo_transient",
-    "solve_scalar", "solve_steady", "solve_transient", "strouhal_number", "wall_distance",
-    "wall_shear", "water", "wedge_box", "write_history", "write_mesh", "write_readings",
-    "write_surface", "write_vtk",
+    "ReadingMonitor", "Readings", "Reference", "Reversals", "Run", "ScalarField", "ScalarFlux",
+    "ScalarValue", "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing", "Symmetry",
+    "TwoSided", "Uniform", "Upwind", "VtkSeries", "Wall", "backward_step", "boundary_map", "box",
+    "build_mesh", "channel_with_block", "channel_with_cylinder", "check_mesh", "compare",
+    "developed_profile", "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget",
+    "force_coefficients", "frame_strip", "get_threads", "inlet_table", "iterate", "join_periodic",
+    "lag", "mean_run", "mean_value", "mixed_box", "moist_air", "momentum_budget", "nozzle",
+    "observe", "phase", "picture", "picture_readings", "pipe", "plot_history", "plot_series",
+    "pressure_drop", "profile", "pyramid_box", "quality", "read_checkpoint", "read_mesh",
+    "read_readings", "set_threads", "settling_time", "shear_reversals", "skewed",
+    "solve_pseudo_transient", "solve_scalar", "solve_steady", "solve_transient", "strouhal_number",
+    "wall_distance", "wall_shear", "water", "wedge_box", "write_history", "write_mesh",
+    "write_readings", "write_surface", "write_vtk",
 ]
