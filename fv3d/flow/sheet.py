@@ -42,7 +42,7 @@ def run_sheet(run: Any) -> str:
         lines.append(f"  eddies     {case.turbulence}, viscosity up to {ratio:.3g} times the "
                      "fluid's")
     lines += [f"  inlet      {share:.1%} of '{name}' lie beyond the points of its table"
-              for name, share in beyond_shares(mesh, case.boundaries).items()]
+              for name, share in beyond_shares(mesh, case.boundaries).items() if share > 0.0]
     lines += [f"  outlet     '{one.name}' at {level:.6g} Pa for {one.flow:.6g} kg/s"
               for one, level in zip(run.problem.outlets, run.state.levels, strict=True)]
     for source, own in zip(run.problem.sources, run.state.sources, strict=True):
