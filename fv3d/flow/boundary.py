@@ -109,7 +109,8 @@ def _check_vector(value: Any, what: str) -> None:
 class Inlet:
     """Given velocity [m/s]: a vector, a function of points (n, 3) -> (n, 3), an InletTable.
 
-    Fluid may also leave through it: the velocity is simply prescribed.
+    Fluid may also leave through it: the velocity is simply prescribed.  ``factor``, a function of
+    time [s], multiplies it in runs in time.
 
     Raises
     ------
@@ -140,7 +141,8 @@ class Outlet:
     """Given pressure [Pa]; the velocity has no normal derivative.
 
     Where fluid enters, its tangential velocity is taken as zero and ``pressure`` as the total
-    pressure; the share of such flux is reported.
+    pressure; the share of such flux is reported.  ``factor``, a function of time [s], multiplies
+    the pressure in runs in time.
 
     Raises
     ------
@@ -149,6 +151,7 @@ class Outlet:
     """
 
     pressure: float = 0.0
+    factor: Callable[[float], float] | None = field(default=None, kw_only=True)
 
     def __post_init__(self) -> None:
         if not np.ndim(self.pressure) == 0 or not np.isfinite(as_number(self.pressure)):
@@ -169,6 +172,8 @@ class Outlet:
 class Wall:
     """No slip; ``velocity`` [m/s] (vector or function of points) of a wall moving in itself.
 
+    ``factor``, a function of time [s], multiplies it in runs in time.
+
     Raises
     ------
     BoundaryError
@@ -177,6 +182,7 @@ class Wall:
     """
 
     velocity: Any = (0.0, 0.0, 0.0)
+    factor: Callable[[float], float] | None = field(default=None, kw_only=True)
 
     def __post_init__(self) -> None:
         _check_vector(self.velocity, "Wall velocity")
