@@ -38,7 +38,8 @@ def write_surface(run: Run, names: Sequence[str], *, path: PathLike) -> Path:
 
     Cell data: ``pressure`` [Pa], ``wall_shear`` (viscous force per area of the fluid on the
     boundary) [Pa], ``area`` (vector out of the fluid) [m^2], ``velocity`` [m/s] and ``boundary``,
-    the place of the face's boundary in ``names``.
+    the place of the face's boundary in ``names``.  Shear times area sums to the friction of
+    :func:`force`, pressure times area to its pressure force where the faces are flat.
 
     Parameters
     ----------
