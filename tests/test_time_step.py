@@ -144,6 +144,44 @@ def test_a_force_that_oscillates_between_plates(alpha: float) -> None:
         assert np.abs(run.velocity[:, 0] - exact).max() <= 5e-3
 
 
+def test_a_wall_that_oscillates() -> None:
+    """Stokes' second problem: exp(-k y) cos(t - k y) over the wall y = 0, k = sqrt(omega / 2 nu).
+
+    Textbook solution (Stokes, G. G. 1851); the lid at 12 layers' depth is at rest.
+    """
+    layer = 0.1
+    mesh = fv3d.box((0, 0, 0), (0.3, 1.2, 0.1), cells=(3, 48, 1),
+                    grading=(None, fv3d.OneSided(10.0), None))
+    case = fv3d.Case(mesh, fv3d.Fluid(density=1.3, viscosity=1.3 * 0.5 * layer ** 2), boundaries={
+        "x_min": fv3d.Periodic("x_max"), "y_max": fv3d.Wall(), "z_min": fv3d.Symmetry(),
+        "y_min": fv3d.Wall(velocity=(1.0, 0.0, 0.0), factor=np.cos), "z_max": fv3d.Symmetry()})
+
+    def exact(y: np.ndarray, t: float) -> np.ndarray:
+        return np.exp(-y / layer) * np.cos(t - y / layer)
+
+    end = 2 * np.pi * 1.2
+    run = fv3d.solve_transient(case, time_step=end / 120, end_time=end, progress=False,
+                               start=lambda x: np.outer(exact(x[:, 1], 0.0), (1.0, 0.0, 0.0)))
+    assert np.abs(run.velocity[:, 0] - exact(run.mesh.cell_centre[:, 1], end)).max() <= 5e-3
+
+
+def test_an_outlet_whose_pressure_swings() -> None:
+    """In a uniform stream between slip walls the pressure is that of the outlet everywhere.
+
+    To the second order of the projection.
+    """
+    mesh = fv3d.box((0, 0, 0), (2, 1, 1), cells=(6, 2, 2))
+    case = fv3d.Case(mesh, fv3d.Fluid(density=1.3, viscosity=1e-4), boundaries={
+        "x_min": fv3d.Inlet((1.0, 0.0, 0.0)), "x_max": fv3d.Outlet(1.0, factor=np.cos),
+        **{b: fv3d.Slip() for b in ("y_min", "y_max", "z_min", "z_max")}})
+    error = [np.abs(fv3d.solve_transient(case, time_step=step, end_time=2.0, progress=False
+                                         ).pressure - np.cos(2.0)).max() for step in (0.1, 0.05)]
+    assert error[0] <= 0.02 and np.log2(error[0] / error[1]) >= 1.8
+    run = fv3d.solve_transient(case, time_step=0.1, end_time=2.0, outer_iterations=8,
+                               progress=False)
+    np.testing.assert_allclose(run.pressure, np.cos(2.0), atol=1e-4)
+
+
 def test_factors_that_cannot_be() -> None:
     case = duct(box((0, 0, 0), (1, 1, 1), cells=(3, 3, 3)))
     with pytest.raises(CaseError):

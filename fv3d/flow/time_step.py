@@ -334,12 +334,14 @@ def problem_at(problem: Problem, time: float) -> Problem:
         return problem
     mesh, n = problem.mesh, problem.mesh.n_internal
     fixed, flux = problem.table.fixed.copy(), problem.fixed_flux.copy()
+    pressure = problem.table.pressure.copy()
     for name, boundary in moving.items():
         faces = mesh.boundaries[name]
         rows = slice(faces.start - n, faces.stop - n)
         factor = _factor(boundary.factor, f"boundary '{name}'", time)  # type: ignore[attr-defined]
-        fixed[rows], flux[rows] = factor * fixed[rows], factor * flux[rows]
-    table: BoundaryTable = replace(problem.table, fixed=fixed)
+        for values in (fixed, flux, pressure):
+            values[rows] = factor * values[rows]
+    table: BoundaryTable = replace(problem.table, fixed=fixed, pressure=pressure)
     return replace(problem, table=table, fixed_flux=flux)
 
 
