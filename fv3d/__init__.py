@@ -34,6 +34,7 @@ from .flow.step_size import CourantStep
 from .flow.transient import solve_transient
 from .flow.turbulence import WALE
 from .measured.compare import Comparison, compare
+from .measured.compare_time import TimedComparison, compare_in_time
 from .measured.feedback import Feedback
 from .measured.inlet import inlet_table
 from .measured.readings import Readings, observe, read_readings
@@ -86,15 +87,15 @@ __all__ = [
     "Outlet", "Periodic", "PhaseAverage", "PhaseMonitor", "PointMonitor", "Profile", "ReadingError",
     "ReadingMonitor", "Readings", "Reference", "Reversals", "Run", "ScalarField", "ScalarFlux",
     "ScalarValue", "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing", "Symmetry",
-    "TwoSided", "Uniform", "Upwind", "VtkSeries", "Wall", "backward_step", "boundary_map", "box",
-    "build_mesh", "channel_with_block", "channel_with_cylinder", "check_mesh", "compare",
-    "developed_profile", "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget",
-    "force_coefficients", "frame_strip", "get_threads", "inlet_table", "iterate", "join_periodic",
-    "lag", "mean_run", "mean_value", "mixed_box", "moist_air", "momentum_budget", "nozzle",
-    "observe", "phase", "picture", "picture_readings", "pipe", "plot_history", "plot_series",
-    "pressure_drop", "profile", "pyramid_box", "quality", "read_checkpoint", "read_mesh",
-    "read_readings", "set_threads", "settling_time", "shear_reversals", "skewed",
-    "solve_pseudo_transient", "solve_scalar", "solve_steady", "solve_transient", "strouhal_number",
-    "wall_distance", "wall_shear", "water", "wedge_box", "write_history", "write_mesh",
-    "write_readings", "write_surface", "write_vtk",
+    "TimedComparison", "TwoSided", "Uniform", "Upwind", "VtkSeries", "Wall", "backward_step",
+    "boundary_map", "box", "build_mesh", "channel_with_block", "channel_with_cylinder",
+    "check_mesh", "compare", "compare_in_time", "developed_profile", "dominant_frequency",
+    "flow_rate", "flow_split", "force", "force_budget", "force_coefficients", "frame_strip",
+    "get_threads", "inlet_table", "iterate", "join_periodic", "lag", "mean_run", "mean_value",
+    "mixed_box", "moist_air", "momentum_budget", "nozzle", "observe", "phase", "picture",
+    "picture_readings", "pipe", "plot_history", "plot_series", "pressure_drop", "profile",
+    "pyramid_box", "quality", "read_checkpoint", "read_mesh", "read_readings", "set_threads",
+    "settling_time", "shear_reversals", "skewed", "solve_pseudo_transient", "solve_scalar",
+    "solve_steady", "solve_transient", "strouhal_number", "wall_distance", "wall_shear", "water",
+    "wedge_box", "write_history", "write_mesh", "write_readings", "write_surface", "write_vtk",
 ]
