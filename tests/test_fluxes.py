@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import cache
 from typing import Any
 
 import numpy as np
@@ -145,13 +146,19 @@ def test_layers_of_unlike_viscosity_carry_the_same_shear_stress(full_stress: boo
     {"gradient": fv3d.MichalakOllivierGooch()}], ids=["scheme", "sharp", "smooth"])
 def test_limited_flow_converges_near_the_unlimited(numerics: Any) -> None:
     """Cell Reynolds number 100: nearer to second-order upwind than first-order upwind is."""
-    mesh = box((0, 0, 0), (2, 1, 1), cells=(10, 8, 8), skew=0.2)
+    wanted = limited_flow()
+    first = limited_flow(convection=fv3d.Upwind())
+    found = limited_flow(**numerics)
+    assert distance(wanted.mesh, found.velocity, wanted.velocity) < 0.3 * distance(
+        wanted.mesh, first.velocity, wanted.velocity)
 
-    def flow(**options: Any) -> np.ndarray:
-        methods = fv3d.Numerics(coupling=fv3d.SIMPLEC(velocity_relaxation=0.4), **options)
-        return solved(duct(mesh, viscosity=0.002, numerics=methods), tolerance=1e-6).velocity
-    wanted, first = flow(), flow(convection=fv3d.Upwind())
-    assert distance(mesh, flow(**numerics), wanted) < 0.3 * distance(mesh, first, wanted)
+
+@cache
+def limited_flow(**options: Any) -> fv3d.Run:
+    """Flow through a short duct with these methods, relaxed as limiters ask for."""
+    mesh = box((0, 0, 0), (2, 1, 1), cells=(10, 7, 7), skew=0.2)
+    methods = fv3d.Numerics(coupling=fv3d.SIMPLEC(velocity_relaxation=0.4), **options)
+    return solved(duct(mesh, viscosity=0.002, numerics=methods), tolerance=1e-5)
 
 
 @pytest.mark.parametrize("limiter", [fv3d.BarthJespersen, fv3d.MichalakOllivierGooch])
