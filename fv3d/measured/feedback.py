@@ -84,7 +84,7 @@ class Feedback:
             raise ReadingError("Only velocities can be fed, and there are none.",
                                where="Feedback(readings)", got=f"{len(self.readings)} places",
                                remedy="Give u, v, w, speed or along readings.")
-        if not np.all(np.isfinite(fed.component_value)):
+        if not fed.timed and not np.all(np.isfinite(fed.component_value)):
             bad = int(np.flatnonzero(~np.isfinite(fed.component_value))[0])
             raise ReadingError("A fed reading is not a number.", where="Feedback(readings)",
                                got=f"reading '{fed.name[fed.component_place[bad]]}'",

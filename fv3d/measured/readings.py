@@ -218,7 +218,16 @@ class Readings:
         return mean_readings(self)
 
     def delayed(self, seconds: float) -> Readings:
-        """The same readings on a clock that shows this much more [s]."""
+        """The same readings on a clock that shows this much more [s].
+
+        Raises
+        ------
+        ReadingError
+            No finite number.
+        """
+        if not np.isfinite(as_number(seconds)):
+            raise ReadingError("A clock is shifted by a finite number of seconds.", got=seconds,
+                               where="delayed(seconds)", remedy="Give 0.25, say.")
         return changed(self, time=self.time + as_number(seconds))
 
     def frame(self) -> pandas.DataFrame:

@@ -85,9 +85,9 @@ def records(readings: Readings) -> Records:
     time = readings.time[readings.component_place]
     stretches, size = [], np.empty(len(member))
     for i, rows in enumerate(member):
-        rows = rows[np.argsort(time[rows], kind="stable")]
+        rows = _in_order(readings, rows, time)
         value = readings.component_value[rows]
-        size[i] = np.sqrt(np.mean(value ** 2))
+        size[i] = np.sqrt(np.mean(value ** 2)) if value.size else 0.0
         stretches.append(_stretches(time[rows], value))
     return Records(places.with_values(size), tuple(stretches))
 
@@ -116,8 +116,11 @@ def mean_readings(readings: Readings) -> Readings:
     time = readings.time[readings.component_place]
     value, std = np.empty(len(member)), np.empty(len(member))
     for i, rows in enumerate(member):
-        rows = rows[np.argsort(time[rows], kind="stable")]
+        rows = _in_order(readings, rows, time)
         samples = readings.component_value[rows]
+        if samples.size == 0:
+            value[i], std[i] = np.nan, readings.component_std[member[i][0]]
+            continue
         value[i] = samples.mean()
         scatter = signals.mean_value(samples).std if len(samples) >= FEW else float(samples.std())
         std[i] = np.sqrt(np.mean(readings.component_std[rows] ** 2) + scatter ** 2)
@@ -126,6 +129,12 @@ def mean_readings(readings: Readings) -> Readings:
 
 def _constant(value: float) -> Callable[[float], np.ndarray]:
     return lambda time: np.asarray(value)
+
+
+def _in_order(readings: Readings, rows: np.ndarray, time: np.ndarray) -> np.ndarray:
+    """Components with a value, in the order of their times."""
+    rows = rows[np.isfinite(readings.component_value[rows])]
+    return rows[np.argsort(time[rows], kind="stable")]
 
 
 def _grouped(readings: Readings) -> tuple[Readings, list[np.ndarray]]:
