@@ -85,6 +85,22 @@ def test_lost_samples_may_be_empty_cells() -> None:
         np.testing.assert_array_equal(one.at(t), two.at(t))
 
 
+def test_lost_values_are_holes_too() -> None:
+    readings = fv3d.Readings(long_table())
+    place_time = readings.time[readings.component_place]
+    lost = (place_time > 0.79) & (place_time < 1.21)
+    without = readings.with_values(np.where(lost, np.nan, readings.component_value))
+    kept = records(without)
+    assert not kept.at(1.0)[1].any() and np.all(kept.at(0.4)[1] == 1.0)
+    assert np.isfinite(kept.places.component_value).all()
+    np.testing.assert_allclose(without.mean().component_value[0],
+                               readings.component_value[~lost & (readings.component_place < 100)
+                                                        ].mean())
+    assert isinstance(fv3d.Feedback(without, radius=0.1), fv3d.Feedback)
+    nothing = readings.with_values(np.full(readings.n_components, np.nan))
+    assert not records(nothing).at(1.0)[1].any() and np.isnan(nothing.mean().component_value).all()
+
+
 def test_a_wide_table_says_the_same(tmp_path: Path) -> None:
     wide = pd.DataFrame({"time [ms]": 1e3 * T, "wire 1 u [cm/s]": 100 * (1 + np.sin(5 * T)),
                          "wire 2 u [cm/s]": 100 * (2 + np.sin(5 * T)),
@@ -148,3 +164,6 @@ def test_a_record_stays_at_its_place() -> None:
 def test_another_clock() -> None:
     later = fv3d.Readings(long_table()).delayed(10.0)
     np.testing.assert_allclose(records(later).span, [10.0, 10.0 + T[-1]])
+    for bad in (np.nan, "late"):
+        with pytest.raises(ReadingError):
+            later.delayed(bad)  # type: ignore[arg-type]
