@@ -15,7 +15,9 @@ from .inlets import beyond_shares
 def run_sheet(run: Any) -> str:
     """What was run, how it ended, how well, what it cost."""
     case, mesh, history = run.case, run.mesh, run.history
-    numerics = case.numerics
+    numerics, in_time = case.numerics, "time" in history
+    coupling = "backward differencing and projection" if in_time else \
+        f"{type(numerics.coupling).__name__} {numerics.coupling.velocity_relaxation:g}"
     kinds = ", ".join(f"{len(cells)} {kind}" for kind, _, cells in mesh.cell_blocks)
     last = {key: values[-1] for key, values in history.items() if len(values)}
     lines = [
@@ -23,8 +25,7 @@ def run_sheet(run: Any) -> str:
         f"  mesh       {kinds}",
         f"  fluid      density {case.fluid.density:.6g} kg/m3, "
         f"viscosity {case.fluid.viscosity:.6g} Pa s",
-        f"  methods    {type(numerics.coupling).__name__} "
-        f"{numerics.coupling.velocity_relaxation:g}, {type(numerics.convection).__name__}, "
+        f"  methods    {coupling}, {type(numerics.convection).__name__}, "
         f"{type(numerics.gradient).__name__}",
         f"  outcome    {run.outcome}",
     ]
@@ -49,6 +50,7 @@ def run_sheet(run: Any) -> str:
         if hasattr(source, "describe"):
             lines += ["  " + line for line in source.describe(own)]
     peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 2**20
-    lines.append(f"  cost       {run.seconds:.1f} s, {len(history['iteration'])} iterations, "
+    lines.append(f"  cost       {run.seconds:.1f} s, {len(history['iteration'])} "
+                 f"{'steps' if in_time else 'iterations'}, "
                  f"peak memory of the process {peak:.2f} GiB")
     return "\n".join(lines)

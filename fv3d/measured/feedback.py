@@ -43,6 +43,9 @@ BITES_FROM = 3.0                   # gain * radius / speed above which passing f
 class Feedback:
     """Proportional feedback at velocity readings, a source for the solve verbs.
 
+    In runs in time the same object acts by projected kernels, see
+    :mod:`fv3d.measured.feedback_time`, and takes readings resolved in time.
+
     Parameters
     ----------
     readings : Readings
