@@ -136,7 +136,7 @@ def fingerprint(problem: Problem, pseudo_step: Any) -> dict[str, str]:
         "body force": digest(problem.force, _factors(case.body_force_factor)),
         "numerical methods": digest(case.numerics, pseudo_step),
         "sources and readings": digest(list(problem.sources)),
-        "rest of the case": digest([getattr(case, f.name) for f in fields(case)
+        "turbulence model or periodic pair": digest([getattr(case, f.name) for f in fields(case)
                                     if f.name not in known]),
     }
 
