@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import warnings
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -243,3 +244,23 @@ def test_the_mesh_given_stays_as_it_was() -> None:
     assert "x_min to x_max" in repr(made.mesh)
     again = replace(made, boundaries=sides(x_min=fv3d.Periodic("x_max", mean_speed=1.0)))
     assert again.mesh is made.mesh and again.periodic["x_min"].mean_speed == 1.0
+
+
+@pytest.mark.parametrize("in_time", [False, True])
+def test_a_stored_run_goes_on_to_the_last_bit(tmp_path: Path, in_time: bool) -> None:
+    """The drop that was found, and in time what it does within a step, are stored too."""
+    case = winding(mean_speed=0.3)
+
+    def run(length: int, **options: Any) -> fv3d.Run:
+        if in_time:
+            return fv3d.solve_transient(case, time_step=0.1, end_time=0.1 * length, progress=False,
+                                        **options)
+        return fv3d.solve_steady(case, tolerance=1e-30, max_iterations=length, progress=False,
+                                 **options)
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", fv3d.Fv3dWarning)  # these runs end early
+        run(6, checkpoint=fv3d.Checkpoint(tmp_path / "stored"))
+        gone_on = run(12, start=fv3d.read_checkpoint(tmp_path / "stored"))
+        whole = run(12)
+    assert gone_on.velocity.tobytes() == whole.velocity.tobytes()
+    assert fv3d.pressure_drop(gone_on, "x_min") == fv3d.pressure_drop(whole, "x_min")
