@@ -73,7 +73,7 @@ class Run:
 
     @cached_property
     def source_force(self) -> Force:
-        """Force of all sources [m/s^2], as the equations use it."""
+        """Artificial force of all sources [m/s^2], as the equations use it."""
         mesh = self.mesh
         parts = [source.force(own) for source, own
                  in zip(self.problem.sources, self.state.sources, strict=True)

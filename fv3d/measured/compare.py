@@ -35,8 +35,8 @@ def spatial_interpolation(points: np.ndarray, values: np.ndarray, *,
 
     Exact at the points, and the smoothest such field in the sense of Duchon (1977) for this
     kernel.  Lengths count alike along all directions, or are measured by the spread of the
-    points along their principal axes: whichever foretells better the points left out in turn.  Several values at one place are
-    averaged; one place alone gives a constant.
+    points along their principal axes: whichever foretells better the points left out in turn.
+    Several values at one place are averaged; one place alone gives a constant.
 
     Parameters
     ----------

@@ -36,6 +36,7 @@ from .response import SHARE_OF_ROUGH, make_pushes, sweep_response
 REFRESH_EARLY = (0, 2, 5, 10, 20)  # responses are renewed at these iterations,
 REFRESH_EVERY = 30                 # then at every multiple of this
 TURNED_AT = (0, 1, 2, 10, 30, 60)  # iterations at which a speed reading's direction follows
+CAUTION = 0.1                      # see Response.between; doubled while the misfit does not fall
 BITES_FROM = 3.0                   # gain * radius / speed above which passing fluid is corrected
 
 
@@ -167,9 +168,10 @@ class Feedback:
         change = change + own.response.apply(own.place_strength(step))
         scale = max(float(np.abs(own.readings.component_value).max()),
                     float(np.linalg.norm(before, axis=1).max()), 1e-300)
-        return Correction(replace(own, strength=own.strength + step, count=own.count + 1), change,
-                          float(np.abs(misfit).max()) / scale,
-                          own.pushes.pressure_change(own.place_strength(step)))
+        size = float(np.abs(misfit).max()) / scale
+        own = replace(own, strength=own.strength + step, count=own.count + 1,
+                      seen=(*own.seen, size)[-2 * REFRESH_EVERY:])
+        return Correction(own, change, size, own.pushes.pressure_change(own.place_strength(step)))
 
     def describe(self, own: FeedbackState) -> list[str]:
         """Lines for the sheet of a run."""
@@ -210,13 +212,22 @@ def _renewed(own: FeedbackState, problem: Problem, relax: Any, *,
     due = own.count in REFRESH_EARLY or own.count % REFRESH_EVERY == 0
     if due or response is None or response.sweeps != relax.count:
         response = sweep_response(problem, own.layout, pushes, relax)
-    return replace(own, pushes=pushes, response=response)
+    return replace(own, pushes=pushes, response=response, caution=_caution(own) if due
+                   else own.caution)
+
+
+def _caution(own: FeedbackState) -> float:
+    """Doubled where the misfit of the last iterations is no smaller than that before them."""
+    half = len(own.seen) // 2
+    if half < 5 or sum(own.seen[half:]) < 0.8 * sum(own.seen[:half]):
+        return own.caution
+    return min(2.0 * own.caution, 1.0)
 
 
 def _strength_step(own: FeedbackState, error: np.ndarray) -> np.ndarray:
     """(m,) change of the strengths that ends an error (m,) at the readings."""
     acting = (own.gain > 0) & (np.abs(own.direction).max(axis=1) > 0)
-    matrix = own.response.between(own.spread())[np.ix_(acting, acting)]
+    matrix = own.response.between(own.spread(), caution=own.caution)[np.ix_(acting, acting)]
     matrix[np.diag_indices(len(matrix))] += 1.0 / own.gain[acting]
     step = np.zeros_like(own.strength)
     if acting.any():
@@ -263,6 +274,8 @@ class FeedbackState:
     advice: tuple[str, ...] = ()
     pushes: Any = None
     response: Any = None
+    caution: float = CAUTION
+    seen: tuple[float, ...] = ()
     count: int = 0
 
     def misfit(self, velocity: np.ndarray) -> np.ndarray:

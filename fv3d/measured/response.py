@@ -94,47 +94,67 @@ def _region(push: np.ndarray) -> tuple[np.ndarray, sparse.csc_matrix]:
 class Response:
     """Answer of the momentum sweeps to a unit strength of each kernel.
 
-    ``velocity`` (3 n_cells, 3 n_places) sparse; ``at_places`` (3 n_places, 3 n_places);
-    ``sweeps`` their number.
+    Attributes
+    ----------
+    velocity : (3 n_cells, 3 n_places) sparse, answer to the net force
+    net, whole : (3 n_places, 3 n_places)
+        Answers at the readings to the net force, and to the whole with its irrotational part.
+    sweeps : int
     """
 
     velocity: sparse.csr_matrix
-    at_places: np.ndarray
+    net: np.ndarray
+    whole: np.ndarray
     sweeps: int
 
     def apply(self, strength: np.ndarray) -> np.ndarray:
         """(n_cells, 3) velocity change for strengths (n_places, 3)."""
         return np.asarray(self.velocity @ strength.ravel()).reshape(-1, 3)
 
-    def between(self, spread: sparse.csr_matrix) -> np.ndarray:
+    def between(self, spread: sparse.csr_matrix, *, caution: float) -> np.ndarray:
         """(m, m) response of each component to the strength of each.
 
-        ``spread`` (3 n_places, m) are the directions of the components.
+        Parameters
+        ----------
+        spread : (3 n_places, m) directions of the components
+        caution : float
+            Share of the whole response in it; where readings together resist the flow of a whole
+            section, almost nothing of the net response is left, and steps without caution are wild.
         """
-        return np.asarray(spread.T @ (spread.T @ self.at_places.T).T)
+        answer = self.net + caution * (self.whole - self.net)
+        return np.asarray(spread.T @ (spread.T @ answer.T).T)
 
 
-def sweep_response(problem: Problem, layout: Layout, pushes: Pushes,
-                   relax: Any) -> Response:
-    """Sweep every kernel's net force over its own region."""
+def sweep_response(problem: Problem, layout: Layout, pushes: Pushes, relax: Any) -> Response:
+    """Sweep every kernel's force over its own region."""
+    velocity = _swept(problem, pushes.net, pushes.regions, relax)
+    force = layout.cell.tocsc()
+    regions = tuple(np.union1d(region, force.indices[a:b] // 3).astype(np.int32) for region, a, b
+                    in zip(pushes.regions, force.indptr[:-1], force.indptr[1:], strict=True))
+    whole = _swept(problem, force, regions, relax)
+    return Response(velocity, _at_places(problem, layout, velocity),
+                    _at_places(problem, layout, whole), relax.count)
+
+
+def _swept(problem: Problem, force: sparse.csc_matrix, regions: tuple[np.ndarray, ...],
+           relax: Any) -> sparse.csr_matrix:
+    """(3 n_cells, 3 n_places) answers of the sweeps to forces, each in its region."""
     mesh, density = problem.mesh, problem.case.fluid.density
-    net = pushes.net
     scratch, rhs = np.zeros((mesh.n_cells, 3)), np.zeros((mesh.n_cells, 3))
     columns, values, rows = [], [], []
-    for column, region in enumerate(pushes.regions):
-        part = slice(net.indptr[column], net.indptr[column + 1])
-        flat = net.indices[part]
-        rhs.reshape(-1)[flat] = net.data[part] * density * mesh.cell_volume[flat // 3]
+    for column, region in enumerate(regions):
+        part = slice(force.indptr[column], force.indptr[column + 1])
+        flat = force.indices[part]
+        rhs.reshape(-1)[flat] = force.data[part] * density * mesh.cell_volume[flat // 3]
         relax(rhs, region, scratch)
         rows.append((3 * region[:, None].astype(np.int64) + np.arange(3)).ravel())
         values.append(scratch[region].ravel())
         columns.append(np.full(3 * len(region), column))
         scratch[region] = 0.0
         rhs.reshape(-1)[flat] = 0.0
-    velocity = sparse.csr_matrix(
+    return sparse.csr_matrix(
         (np.concatenate(values), (np.concatenate(rows), np.concatenate(columns))),
-        shape=(3 * mesh.n_cells, net.shape[1]))
-    return Response(velocity, _at_places(problem, layout, velocity), relax.count)
+        shape=(3 * mesh.n_cells, force.shape[1]))
 
 
 def _at_places(problem: Problem, layout: Layout, velocity: sparse.csr_matrix) -> np.ndarray:
