@@ -25,6 +25,7 @@ from .flow.numerics import SIMPLE, SIMPLEC, GlobalStep, LocalStep, Numerics
 from .flow.outlets import FlowOutlet
 from .flow.periodic import Periodic
 from .flow.problem import Case
+from .flow.resistance import Resistance
 from .flow.run import Run
 from .flow.scalar import ScalarField, solve_scalar
 from .flow.scalar_boundary import ScalarFlux, ScalarValue
@@ -85,17 +86,18 @@ __all__ = [
     "Inlet", "InletTable", "LeastSquares", "LimitedUpwind", "LocalStep", "MeanMonitor", "Mesh",
     "MeshError", "MichalakOllivierGooch", "MomentumBudget", "Numerics", "OneSided", "Outcome",
     "Outlet", "Periodic", "PhaseAverage", "PhaseMonitor", "PointMonitor", "Profile", "ReadingError",
-    "ReadingMonitor", "Readings", "Reference", "Reversals", "Run", "ScalarField", "ScalarFlux",
-    "ScalarValue", "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing", "Symmetry",
-    "TimedComparison", "TwoSided", "Uniform", "Upwind", "VtkSeries", "Wall", "backward_step",
-    "boundary_map", "box", "build_mesh", "channel_with_block", "channel_with_cylinder",
-    "check_mesh", "compare", "compare_in_time", "developed_profile", "dominant_frequency",
-    "flow_rate", "flow_split", "force", "force_budget", "force_coefficients", "frame_strip",
-    "get_threads", "inlet_table", "iterate", "join_periodic", "lag", "mean_run", "mean_value",
-    "mixed_box", "moist_air", "momentum_budget", "nozzle", "observe", "phase", "picture",
-    "picture_readings", "pipe", "plot_history", "plot_series", "pressure_drop", "profile",
-    "pyramid_box", "quality", "read_checkpoint", "read_mesh", "read_readings", "set_threads",
-    "settling_time", "shear_reversals", "skewed", "solve_pseudo_transient", "solve_scalar",
-    "solve_steady", "solve_transient", "strouhal_number", "wall_distance", "wall_shear", "water",
-    "wedge_box", "write_history", "write_mesh", "write_readings", "write_surface", "write_vtk",
+    "ReadingMonitor", "Readings", "Reference", "Resistance", "Reversals", "Run", "ScalarField",
+    "ScalarFlux", "ScalarValue", "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing",
+    "Symmetry", "TimedComparison", "TwoSided", "Uniform", "Upwind", "VtkSeries", "Wall",
+    "backward_step", "boundary_map", "box", "build_mesh", "channel_with_block",
+    "channel_with_cylinder", "check_mesh", "compare", "compare_in_time", "developed_profile",
+    "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget", "force_coefficients",
+    "frame_strip", "get_threads", "inlet_table", "iterate", "join_periodic", "lag", "mean_run",
+    "mean_value", "mixed_box", "moist_air", "momentum_budget", "nozzle", "observe", "phase",
+    "picture", "picture_readings", "pipe", "plot_history", "plot_series", "pressure_drop",
+    "profile", "pyramid_box", "quality", "read_checkpoint", "read_mesh", "read_readings",
+    "set_threads", "settling_time", "shear_reversals", "skewed", "solve_pseudo_transient",
+    "solve_scalar", "solve_steady", "solve_transient", "strouhal_number", "wall_distance",
+    "wall_shear", "water", "wedge_box", "write_history", "write_mesh", "write_readings",
+    "write_surface", "write_vtk",
 ]

@@ -128,13 +128,15 @@ def fingerprint(problem: Problem, pseudo_step: Any) -> dict[str, str]:
     kinds = [type(boundary).__name__ for boundary in case.boundaries.values()]
     factors = [_factors(getattr(boundary, "factor", None)) for boundary in case.boundaries.values()]
     known = ("mesh", "fluid", "boundaries", "body_force", "body_force_factor", "viscosity",
-             "numerics")
+             "numerics", "resistances")
+    zones = problem.zones
     return {
         "mesh": digest(mesh.points, mesh.left, mesh.right, mesh.face_area, mesh.cell_volume, named),
         "fluid": digest(case.fluid, problem.viscosity),
         "boundaries": digest(problem.table, list(case.boundaries), kinds, factors),
         "body force": digest(problem.force, _factors(case.body_force_factor)),
         "numerical methods": digest(case.numerics, pseudo_step),
+        "resistances": digest(None if zones is None else (zones.linear, zones.quadratic)),
         "sources and readings": digest(list(problem.sources)),
         "turbulence model or periodic pair": digest([getattr(case, f.name) for f in fields(case)
                                     if f.name not in known]),

@@ -26,10 +26,10 @@ from .outlets import (
     free_outlets,
     meet_flows,
     moved_levels,
-    with_given_flow,
 )
 from .problem import Force, Problem, State
 from .response import PressureResponse, pressure_response
+from .zones import without_zones
 
 REFRESH_AT = 1.6  # solver iterations above this multiple of a fresh hierarchy's: refresh it
 FEWEST_SWEEPS, MOST_SWEEPS = 4, 16
@@ -101,7 +101,7 @@ def make_workspace(problem: Problem,
                    pseudo_step: LocalStep | GlobalStep | None = None) -> Workspace:
     """Workspace of a problem, before the first iteration."""
     signs = np.random.default_rng(0).choice(np.array([-1.0, 1.0]), (problem.mesh.n_cells, 3))
-    return Workspace(pressure_response(problem), signs, pseudo_step)
+    return Workspace(pressure_response(without_zones(problem)), signs, pseudo_step)
 
 
 def pseudo_inertia(problem: Problem, equation: Momentum, workspace: Workspace) -> np.ndarray:
@@ -148,12 +148,15 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     inertia = pseudo_inertia(problem, equation, workspace)
     relaxed = equation.rows.block.copy()
     relaxed[:, :3] += inertia[:, None]
+    if equation.drag is not None:
+        relaxed[:, :3] += (equation.drag.tangent - equation.drag.secant) * mesh.cell_volume[:, None]
     sweeps = Sweeps(problem.pattern, equation.rows.data, inverse_blocks(relaxed),
                     numerics.sweeps or workspace.sweeps)
     change = sweeps(residual)
     if numerics.sweeps is None and sweeps_are_due(state.iteration):
         left = replace(equation.rows, block=relaxed, rhs=residual).residual(change)
-        workspace.sweeps = sweeps_needed(sweeps.count, residual, left)
+        workspace.sweeps = sweeps_needed(sweeps.count, *(counted(problem, equation, part)
+                                                         for part in (residual, left)))
     sources, misfit, pressure = [], 0.0, state.pressure
     for source, own in zip(problem.sources, state.sources, strict=True):
         part = source.correct(own, problem, state, change, sweeps)
@@ -168,16 +171,30 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     force = total_force(problem, state)
     edge = boundary_velocity(problem, velocity, gradient, edge_flux)
     flux = interpolated_flux(problem, velocity, gradient, edge, fields, force,
-                             equation.diagonal, np.zeros(mesh.n_faces))
+                             equation.diagonal, np.zeros(mesh.n_faces), equation.drag)
     record_mass = mass_residual(problem, flux, velocity, fields.cell)
     misfit = max(misfit, flow_misfit(problem, flux))
     state, effort = _correct_pressure(problem, state, flux, equation, gradient, inertia, workspace)
     tracer = float(np.einsum("ij,ij->", workspace.tracer, state.velocity))
+    residual = counted(problem, equation, residual)
     record = Record(state.iteration, float(np.abs(residual).sum() / scale), record_mass, misfit,
                     effort, tracer=tracer)
     workspace.first_residual = workspace.first_residual or record.residual
     workspace.residual = record.residual
     return replace(state, iteration=state.iteration + 1), record
+
+
+def counted(problem: Problem, equation: Momentum, force: np.ndarray) -> np.ndarray:
+    """Forces on the cells (n_cells, 3) [N] as they count in a residual.
+
+    In a zone of resistance by the change of velocity they cause: dense zones then neither hide
+    what is left in the fluid nor ask for more digits than there are.
+    """
+    if equation.drag is None:
+        return force
+    diagonal = equation.diagonal[:, None]
+    resisting = problem.mesh.cell_volume[:, None] * equation.drag.secant
+    return np.asarray(force * diagonal / (diagonal + resisting))
 
 
 def sweeps_are_due(iteration: int) -> bool:
@@ -210,7 +227,10 @@ def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, equation
     n, coupling = mesh.n_internal, numerics.coupling
     d = mesh.cell_volume / coupling.correction_diagonal(equation.diagonal, equation.neighbours,
                                                       inertia)
-    matrix, inner, outer = correction_matrix(problem, d)
+    zones = problem.zones
+    ease = None if zones is None or equation.drag is None \
+        else zones.ease(mesh.cell_volume / d, equation.drag)
+    matrix, inner, outer = correction_matrix(problem, d, ease)
     result = solve_pressure(problem, workspace, matrix, -(mesh.outflow @ flux),
                             numerics.pressure_tolerance)
     correction, shift = result.solution, np.zeros(mesh.n_boundary)
@@ -224,39 +244,40 @@ def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, equation
         problem = at_levels(problem, state)
     flux = corrected_flux(problem, flux, correction, inner, outer)
     slope = problem.pressure_gradient(correction, shift)
-    velocity = state.velocity - d[:, None] * slope
+    velocity = state.velocity - (d[:, None] if ease is None else ease.cell) * slope
     pressure = state.pressure + share * correction
     if problem.closed:
         pressure -= np.average(pressure, weights=mesh.cell_volume)
     edge = boundary_velocity(problem, velocity, gradient, flux[n:])
+    state = replace(state, velocity=velocity, pressure=pressure, mass_flux=flux,
+                    boundary_velocity=edge)
     if workspace.response.fine_steps:
-        pressure = _fine_supplement(problem, replace(state, velocity=velocity, pressure=pressure),
-                                    gradient, edge, flux[n:], equation.diagonal,
-                                    workspace)
-    return replace(state, velocity=velocity, pressure=pressure, mass_flux=flux,
-                   boundary_velocity=edge), result.iterations
+        state = _fine_supplement(problem, state, gradient, equation, workspace)
+    return state, result.iterations
 
 
-def _fine_supplement(problem: Problem, state: State, gradient: np.ndarray, edge: np.ndarray,
-                     edge_flux: np.ndarray, diagonal: np.ndarray,
-                     workspace: Workspace) -> np.ndarray:
+def _fine_supplement(problem: Problem, state: State, gradient: np.ndarray, equation: Momentum,
+                     workspace: Workspace) -> State:
     """Pressure with its cell-scale part brought nearer to the end of the iteration.
 
     At the scale of the cells the fluxes answer the pressure with the unrelaxed coefficient only, a
     tenth of the one the correction was computed with; two damped Jacobi steps on what remains of
     the imbalance make up for that.  They change the path, not the solution.
     """
-    mesh, force = problem.mesh, total_force(problem, state)
-    unrelaxed = correction_matrix(problem, mesh.cell_volume / diagonal)[0].diagonal()
-    pressure, memory = state.pressure, np.zeros(mesh.n_faces)
+    mesh, force, zones = problem.mesh, total_force(problem, state), problem.zones
+    diagonal, edge_flux = equation.diagonal, state.mass_flux[problem.mesh.n_internal:]
+    ease = None if zones is None or equation.drag is None else zones.ease(diagonal, equation.drag)
+    unrelaxed = correction_matrix(problem, mesh.cell_volume / diagonal, ease)[0].diagonal()
+    memory = np.zeros(mesh.n_faces)
     for size in workspace.response.fine_steps:
-        fields = pressure_fields(problem, pressure, edge_flux)
-        flux = interpolated_flux(problem, state.velocity, gradient, edge, fields, force,
-                                 diagonal, memory)
-        pressure = pressure - size * (mesh.outflow @ flux) / unrelaxed
+        fields = pressure_fields(problem, state.pressure, edge_flux)
+        flux = interpolated_flux(problem, state.velocity, gradient, state.boundary_velocity,
+                                 fields, force, diagonal, memory, equation.drag)
+        state = replace(state, pressure=state.pressure - size * (mesh.outflow @ flux) / unrelaxed)
     if problem.closed:
-        pressure -= np.average(pressure, weights=mesh.cell_volume)
-    return pressure
+        level = np.average(state.pressure, weights=mesh.cell_volume)
+        state = replace(state, pressure=state.pressure - level)
+    return state
 
 
 def solve_pressure(problem: Problem, workspace: Workspace, matrix: Any, rhs: np.ndarray,
@@ -302,63 +323,10 @@ def _momentum_scale(problem: Problem, equation: Momentum, velocity: np.ndarray, 
                     fields: PressureFields) -> float:
     """Sum of |a u|; a fluid at rest is measured against a millionth of its pressure forces."""
     moving = float(np.einsum("i,ij->", equation.diagonal, np.abs(velocity)))
-    resting = float(np.einsum("i,ij->", problem.mesh.cell_volume, np.abs(fields.gradient)))
+    gradient, push = (counted(problem, equation, part) for part in (fields.gradient, push))
+    resting = float(np.einsum("i,ij->", problem.mesh.cell_volume, np.abs(gradient)))
     resting += float(np.einsum("ij->", np.abs(push)))
     return max(moving + 1e-6 * resting, 1e-300)
-
-
-def potential_start(problem: Problem, workspace: Workspace) -> State:
-    """Start field: irrotational flow through the given fluxes, or rest where there are none."""
-    mesh, n = problem.mesh, problem.mesh.n_internal
-    flux = np.zeros(mesh.n_faces)
-    flux[n:] = with_given_flow(mesh, problem.outlets, problem.fixed_flux)
-    outer = np.where(free_outlets(problem), problem.orthogonal[n:], 0.0)
-    if np.any(flux):
-        inner = problem.orthogonal[:n]
-        matrix = symmetric_matrix(mesh, problem.pattern, inner, outer)
-        prepared = linear.prepare(matrix, singular=problem.closed)
-        potential = linear.solve(prepared, -(mesh.outflow @ flux), matrix=matrix, tolerance=1e-6)
-        flux = corrected_flux(problem, flux, potential.solution, inner, outer)
-    velocity = velocity_from_flux(problem, flux)
-    edge = boundary_velocity(problem, velocity, np.zeros((mesh.n_cells, 3, 3)), flux[n:])
-    return State(velocity, start_pressure(problem), flux, edge)
-
-
-def start_pressure(problem: Problem) -> np.ndarray:
-    """(n_cells,) pressure that outlets and body force alone would cause [Pa].
-
-    A constant pressure level, or a force that pressure can balance, then costs no iteration.
-    """
-    mesh, n, table = problem.mesh, problem.mesh.n_internal, problem.table
-    given = np.where(table.pressure_given, table.pressure, 0.0)
-    if problem.force is None and not given.any():
-        return np.zeros(mesh.n_cells)
-    drop = np.zeros(mesh.n_faces) if problem.force is None \
-        else problem.case.fluid.density * problem.force.drop
-    outer = np.where(table.pressure_given, problem.orthogonal[n:], 0.0)
-    matrix = symmetric_matrix(mesh, problem.pattern, problem.orthogonal[:n], outer)
-    flux = np.concatenate([problem.orthogonal[:n] * drop[:n], outer * (drop[n:] - given)])
-    prepared = linear.prepare(matrix, singular=problem.closed)
-    pressure = linear.solve(prepared, -(mesh.outflow @ flux), matrix=matrix,
-                            tolerance=1e-10).solution
-    if problem.closed:
-        pressure -= np.average(pressure, weights=mesh.cell_volume)
-    return pressure
-
-
-def velocity_from_flux(problem: Problem, flux: np.ndarray) -> np.ndarray:
-    """(n_cells, 3) velocity that fits the mass fluxes of each cell's faces best."""
-    mesh, n = problem.mesh, problem.mesh.n_internal
-    cells = np.concatenate([mesh.left, mesh.right])
-    area = np.concatenate([mesh.face_area, mesh.face_area[:n]])
-    size = np.concatenate([mesh.face_area_magnitude, mesh.face_area_magnitude[:n]])
-    through = np.concatenate([flux, flux[:n]]) / problem.case.fluid.density
-    matrix, rhs = np.zeros((mesh.n_cells, 3, 3)), np.zeros((mesh.n_cells, 3))
-    for i in range(3):
-        rhs[:, i] = np.bincount(cells, through * area[:, i] / size, mesh.n_cells)
-        for j in range(3):
-            matrix[:, i, j] = np.bincount(cells, area[:, i] * area[:, j] / size, mesh.n_cells)
-    return np.ascontiguousarray(np.linalg.solve(matrix, rhs[:, :, None])[:, :, 0])
 
 
 def conserve(problem: Problem, state: State, workspace: Workspace, *,

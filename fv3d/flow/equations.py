@@ -21,6 +21,7 @@ from ..operators import kernels
 from ..operators.assembly import Rows, symmetric_matrix
 from ..operators.limiters import limited_extension
 from .problem import Force, Problem
+from .zones import Drag, Ease
 
 
 @dataclass(frozen=True, eq=False)
@@ -44,12 +45,14 @@ class Momentum:
 
     ``rows`` holds ``A u = rhs``; ``diagonal`` (n_cells,) [kg/s] the part of its diagonal common to
     all components (the traction of walls, which acts along them only, is not in it);
-    ``neighbours`` (n_cells,) [kg/s] the sum of the neighbours' coefficients.
+    ``neighbours`` (n_cells,) [kg/s] the sum of the neighbours' coefficients; ``drag`` what zones of
+    resistance add to the rows.
     """
 
     rows: Rows
     diagonal: np.ndarray
     neighbours: np.ndarray
+    drag: Drag | None = None
 
 
 def boundary_velocity(problem: Problem, velocity: np.ndarray, gradient: np.ndarray,
@@ -94,6 +97,8 @@ def pressure_fields(problem: Problem, pressure: np.ndarray,
     face = np.empty(mesh.n_faces)
     kernels.linear_face_values(mesh.left[:n], mesh.right, mesh.weight, mesh.skew_offset, pressure,
                                gradient, face[:n])
+    if problem.zones is not None:
+        face[problem.zones.seams] = problem.zones.bending.values(pressure, gradient)
     face[n:] = boundary_pressure(problem, pressure, gradient, boundary_flux)
     return PressureFields(pressure, face, _warp_force(problem, gradient), gradient,
                           surface_gradient(problem, face, gradient))
@@ -118,7 +123,10 @@ def _warp_force(problem: Problem, slope: np.ndarray) -> np.ndarray:
     mesh = problem.mesh
     if not mesh.warped:
         return np.zeros((mesh.n_faces, 3))
-    return np.einsum("fj,fji->fi", mesh.to_faces(slope), mesh.warp)
+    at_face = mesh.to_faces(slope)
+    if problem.zones is not None:
+        at_face[problem.zones.seams] = slope[problem.zones.bending.yielding]
+    return np.einsum("fj,fji->fi", at_face, mesh.warp)
 
 
 def momentum(problem: Problem, velocity: np.ndarray, gradient: np.ndarray, edge: np.ndarray,
@@ -155,7 +163,10 @@ def momentum(problem: Problem, velocity: np.ndarray, gradient: np.ndarray, edge:
     full[:, :3] = diagonal[:, None]
     np.add.at(full, owner, block)
     np.add.at(rhs, owner, outer)
-    return Momentum(Rows(layout, data, full, rhs), diagonal, neighbours)
+    drag = None if problem.zones is None else problem.zones.drag(velocity)
+    if drag is not None:
+        full[:, :3] += mesh.cell_volume[:, None] * drag.secant
+    return Momentum(Rows(layout, data, full, rhs), diagonal, neighbours, drag)
 
 
 def _warp_convection(problem: Problem, velocity: np.ndarray, gradient: np.ndarray) -> np.ndarray:
@@ -231,7 +242,8 @@ def boundary_traction(problem: Problem, velocity: np.ndarray, gradient: np.ndarr
 
 def interpolated_flux(problem: Problem, velocity: np.ndarray, gradient: np.ndarray,
                       edge: np.ndarray, fields: PressureFields, force: Force | None,
-                      diagonal: np.ndarray, memory: np.ndarray) -> np.ndarray:
+                      diagonal: np.ndarray, memory: np.ndarray,
+                      drag: Drag | None = None) -> np.ndarray:
     """(n_faces,) mass flux by momentum interpolation [kg/s], see the module text.
 
     Parameters
@@ -239,6 +251,7 @@ def interpolated_flux(problem: Problem, velocity: np.ndarray, gradient: np.ndarr
     diagonal : (n_cells,) unrelaxed momentum diagonal, time term included [kg/s]
     memory : (n_faces,) [kg/(m^3 s) m^3/s] older face fluxes less their interpolated velocities,
         times density over time step; zero in a steady run.
+    drag : resistance of the zones, or None
     """
     mesh, n, density = problem.mesh, problem.mesh.n_internal, problem.case.fluid.density
     net, drop = fields.slope, np.zeros(mesh.n_faces)
@@ -251,10 +264,16 @@ def interpolated_flux(problem: Problem, velocity: np.ndarray, gradient: np.ndarr
                                mesh.face_area, mesh.delta, problem.orthogonal, density, velocity,
                                gradient, net, fields.cell, drop, d, memory, flux)
     owner = mesh.left[n:]
+    edge_d = d[owner]
+    if problem.zones is not None and drag is not None:
+        ease = problem.zones.ease(diagonal, drag)
+        flux[problem.zones.faces] = problem.zones.flux(velocity, gradient, fields, net, drop, ease,
+                                                       problem.orthogonal)
+        edge_d[problem.zones.edges] = ease.edge
     smooth = np.einsum("ij,ij->i", net[owner], mesh.delta[n:])
     jump = fields.face[n:] - fields.cell[owner] - drop[n:]
     through = np.einsum("ij,ij->i", edge, mesh.face_area[n:])
-    free = density * (through + d[owner] * (problem.orthogonal[n:] * (smooth - jump) + memory[n:]))
+    free = density * (through + edge_d * (problem.orthogonal[n:] * (smooth - jump) + memory[n:]))
     flux[n:] = np.where(problem.table.pressure_given, free, problem.fixed_flux)
     if mesh.warped:
         slope = mesh.to_faces(gradient)
@@ -262,18 +281,23 @@ def interpolated_flux(problem: Problem, velocity: np.ndarray, gradient: np.ndarr
     return flux
 
 
-def correction_matrix(problem: Problem,
-                      d: np.ndarray) -> tuple[sparse.csr_matrix, np.ndarray, np.ndarray]:
+def correction_matrix(problem: Problem, d: np.ndarray, ease: Ease | None = None
+                      ) -> tuple[sparse.csr_matrix, np.ndarray, np.ndarray]:
     """Pressure-correction matrix with its face and boundary coefficients [kg/(s Pa)].
 
-    ``d`` (n_cells,) is volume over the coupling's correction diagonal.
+    ``d`` (n_cells,) is volume over the coupling's correction diagonal, ``ease`` the same beside
+    resistances.
     """
     mesh, n, density = problem.mesh, problem.mesh.n_internal, problem.case.fluid.density
     inner = np.empty(n)
     kernels.face_coefficients(mesh.left[:n], mesh.right, mesh.weight, d, problem.orthogonal,
                               density, inner)
-    outer = np.where(problem.table.pressure_given,
-                     density * d[mesh.left[n:]] * problem.orthogonal[n:], 0.0)
+    edge_d = d[mesh.left[n:]]
+    if problem.zones is not None and ease is not None:
+        faces = problem.zones.faces
+        inner[faces] = density * problem.orthogonal[faces] * ease.face
+        edge_d[problem.zones.edges] = ease.edge
+    outer = np.where(problem.table.pressure_given, density * edge_d * problem.orthogonal[n:], 0.0)
     return symmetric_matrix(mesh, problem.pattern, inner, outer), inner, outer
 
 

@@ -2,24 +2,26 @@
 
 from __future__ import annotations
 
-import warnings
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any, Protocol
 
 import numpy as np
 
-from ..errors import BoundaryError, CaseError, Fv3dWarning
+from ..errors import BoundaryError, CaseError
 from ..mesh.mesh import Mesh
 from ..operators import assembly
 from ..operators.gradient import BoundaryKnowledge, GradientOperator
 from ..operators.limiters import LimitedOperator, unlimited
 from .boundary import Boundary, BoundaryTable, boundary_table
 from .fluid import Fluid
+from .given_flux import balanced_flux, warn_of_suction
 from .inlets import warn_of_beyond
 from .numerics import Numerics
 from .outlets import OutletFlow, outlet_flows
 from .periodic import Periodic, joined
+from .resistance import Resistance, resisting_cells
+from .zones import SeamGradient, Zones, zones_of
 
 if TYPE_CHECKING:
     from .turbulence import SubgridModel
@@ -46,6 +48,8 @@ class Case:
     numerics : Numerics
     turbulence : subgrid model such as WALE, optional
         Viscosity of the eddies that the mesh does not resolve, in runs in time.
+    resistances : mapping of zone name to Resistance, optional
+        Screens, honeycombs and porous blocks, in steady runs.
     periodic : mapping, made by the case
         Its periodic conditions, taken out of ``boundaries``; their pairs are joined in ``mesh``.
 
@@ -63,6 +67,7 @@ class Case:
     viscosity: np.ndarray | None = field(default=None, kw_only=True)
     numerics: Numerics = field(default_factory=Numerics, kw_only=True)
     turbulence: SubgridModel | None = field(default=None, kw_only=True)
+    resistances: Mapping[str, Resistance] = field(default_factory=dict, kw_only=True)
     periodic: Mapping[str, Periodic] = field(default_factory=dict, kw_only=True, repr=False)
 
     def __post_init__(self) -> None:
@@ -94,6 +99,7 @@ class Case:
         boundary_table(self.mesh, self.boundaries)
         body_force_cells(self)
         _cell_viscosity(self)
+        resisting_cells(self.mesh, self.resistances)
 
 
 def body_force_cells(case: Case) -> np.ndarray | None:
@@ -215,6 +221,7 @@ class Problem:
     viscosity : (n_cells,), face_viscosity : (n_faces,) [Pa s]
     force : Force of the case's body force, or None
     closed : bool, no boundary gives the pressure
+    zones : the case's resistances made ready, or None
     """
 
     case: Case
@@ -223,7 +230,7 @@ class Problem:
     orthogonal: np.ndarray
     foot: np.ndarray
     velocity_gradient: GradientOperator | LimitedOperator
-    pressure_gradient: GradientOperator
+    pressure_gradient: GradientOperator | SeamGradient
     viscosity: np.ndarray
     face_viscosity: np.ndarray
     full_stress: bool
@@ -232,6 +239,7 @@ class Problem:
     closed: bool
     sources: tuple[Source, ...] = ()
     outlets: tuple[OutletFlow, ...] = ()
+    zones: Zones | None = None
 
     @property
     def mesh(self) -> Mesh:
@@ -267,18 +275,24 @@ def make_problem(case: Case, sources: tuple[Source, ...] = ()) -> Problem:
     known = BoundaryKnowledge(table.pressure_given, table.pressure_flat)
     fixed_flux = case.fluid.density * np.einsum("ij,ij->i", table.fixed, mesh.face_area[inside:])
     closed = not bool(table.pressure_given.any())
-    _warn_of_suction(case, fixed_flux, closed)
+    warn_of_suction(mesh, fixed_flux, closed)
     warn_of_beyond(mesh, case.boundaries)
     if closed:
-        fixed_flux = _balanced_flux(mesh, table, fixed_flux)
+        fixed_flux = balanced_flux(mesh, table, fixed_flux)
     cell_force = body_force_cells(case)
     _check_symmetry(case, table, cell_force)
+    method = unlimited(numerics.gradient)
+    pressure_gradient = method.weights(mesh, known)
+    zones = zones_of(mesh, case.fluid.density, case.resistances, pressure_gradient, method=method,
+                     known=known)
     return Problem(case, table, assembly.pattern(mesh), assembly.orthogonal_factor(mesh), foot,
                    numerics.gradient.weights(mesh, BoundaryKnowledge.everywhere(mesh)),
-                   unlimited(numerics.gradient).weights(mesh, known), viscosity, face_viscosity,
-                   full, None if cell_force is None else balanced_force(mesh, cell_force),
-                   fixed_flux, closed, (*sources, *drives_of(case)),
-                   outlet_flows(mesh, case.boundaries, table, fixed_flux, case.fluid.density))
+                   pressure_gradient if zones is None else zones.bending, viscosity,
+                   face_viscosity, full,
+                   None if cell_force is None else balanced_force(mesh, cell_force), fixed_flux,
+                   closed, (*sources, *drives_of(case)),
+                   outlet_flows(mesh, case.boundaries, table, fixed_flux, case.fluid.density),
+                   zones)
 
 
 def _check_symmetry(case: Case, table: BoundaryTable, cell_force: np.ndarray | None) -> None:
@@ -294,41 +308,6 @@ def _check_symmetry(case: Case, table: BoundaryTable, cell_force: np.ndarray | N
                             where=f"boundary '{mesh.boundary_of_face(n + face)}'",
                             got=f"{across[face]:.3g} m/s2 normal to it",
                             remedy="Give that boundary Slip(), which carries the pressure.")
-
-
-def _warn_of_suction(case: Case, flux: np.ndarray, closed: bool) -> None:
-    """Say it where fluid leaves through an inlet though there is an outlet: often a wrong sign."""
-    mesh = case.mesh
-    for name, faces in mesh.boundaries.items():
-        part = flux[faces.start - mesh.n_internal:faces.stop - mesh.n_internal]
-        if not closed and part.sum() > 0.5 * np.abs(part).sum() > 0.0:
-            warnings.warn(f"The velocity given on '{name}' points out of the domain: "
-                          f"{part.sum():.3g} kg/s leave there. Check its sign, unless suction is "
-                          "meant.", Fv3dWarning, stacklevel=2)
-
-
-def _balanced_flux(mesh: Mesh, table: BoundaryTable, flux: np.ndarray) -> np.ndarray:
-    """Given fluxes of a domain without outlet, made to cancel to rounding.
-
-    A velocity *function* carries its own flux only to the order of the mesh: an imbalance below
-    1 % is spread over these faces; anything else is an error.
-    """
-    net, gross = float(flux.sum()), float(np.abs(flux).sum())
-    if gross == 0.0 or abs(net) <= 1e-10 * gross:
-        return flux
-    names = [name for name, faces in mesh.boundaries.items()
-             if np.any(flux[faces.start - mesh.n_internal:faces.stop - mesh.n_internal] != 0)]
-    sampled = np.where(table.sampled, np.abs(flux), 0.0)
-    if abs(net) > 0.01 * gross or sampled.sum() < 0.1 * gross:
-        raise BoundaryError("Without an outlet the given inflow and outflow must balance.",
-                            where=f"boundaries {', '.join(names)}",
-                            got=f"net outflow {net:.6g} kg/s of {gross / 2:.6g} kg/s",
-                            remedy="Correct the velocities, or make one boundary an Outlet.")
-    if abs(net) > 1e-3 * gross:
-        warnings.warn(f"The velocity functions on {', '.join(names)} do not balance on this mesh: "
-                      f"{abs(net) / gross:.2%} of the flux is spread over their faces.",
-                      Fv3dWarning, stacklevel=2)
-    return flux - net * sampled / sampled.sum()
 
 
 def balanced_force(mesh: Mesh, cell_force: np.ndarray) -> Force:

@@ -8,9 +8,11 @@ from typing import Any
 import numpy as np
 
 from ..errors import CaseError
-from .coupling import Workspace, potential_start, start_pressure
-from .equations import boundary_velocity
-from .outlets import start_levels
+from ..operators import linear
+from ..operators.assembly import symmetric_matrix
+from .coupling import Workspace
+from .equations import boundary_velocity, corrected_flux
+from .outlets import free_outlets, start_levels, with_given_flow
 from .problem import Problem, State
 
 OVERLAP = 0.5  # share of the cells that must lie inside the mesh of a start run
@@ -110,3 +112,57 @@ def _with_fluxes(problem: Problem, velocity: np.ndarray, pressure: np.ndarray) -
     outflow = density * np.einsum("ij,ij->i", edge, mesh.face_area[n:])
     flux[n:] = np.where(problem.table.pressure_given, outflow, problem.fixed_flux)
     return State(velocity, pressure, flux, edge)
+
+
+def potential_start(problem: Problem, workspace: Workspace) -> State:
+    """Start field: irrotational flow through the given fluxes, or rest where there are none."""
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    flux = np.zeros(mesh.n_faces)
+    flux[n:] = with_given_flow(mesh, problem.outlets, problem.fixed_flux)
+    outer = np.where(free_outlets(problem), problem.orthogonal[n:], 0.0)
+    if np.any(flux):
+        inner = problem.orthogonal[:n]
+        matrix = symmetric_matrix(mesh, problem.pattern, inner, outer)
+        prepared = linear.prepare(matrix, singular=problem.closed)
+        potential = linear.solve(prepared, -(mesh.outflow @ flux), matrix=matrix, tolerance=1e-6)
+        flux = corrected_flux(problem, flux, potential.solution, inner, outer)
+    velocity = velocity_from_flux(problem, flux)
+    edge = boundary_velocity(problem, velocity, np.zeros((mesh.n_cells, 3, 3)), flux[n:])
+    return State(velocity, start_pressure(problem), flux, edge)
+
+
+def start_pressure(problem: Problem) -> np.ndarray:
+    """(n_cells,) pressure that outlets and body force alone would cause [Pa].
+
+    A constant pressure level, or a force that pressure can balance, then costs no iteration.
+    """
+    mesh, n, table = problem.mesh, problem.mesh.n_internal, problem.table
+    given = np.where(table.pressure_given, table.pressure, 0.0)
+    if problem.force is None and not given.any():
+        return np.zeros(mesh.n_cells)
+    drop = np.zeros(mesh.n_faces) if problem.force is None \
+        else problem.case.fluid.density * problem.force.drop
+    outer = np.where(table.pressure_given, problem.orthogonal[n:], 0.0)
+    matrix = symmetric_matrix(mesh, problem.pattern, problem.orthogonal[:n], outer)
+    flux = np.concatenate([problem.orthogonal[:n] * drop[:n], outer * (drop[n:] - given)])
+    prepared = linear.prepare(matrix, singular=problem.closed)
+    pressure = linear.solve(prepared, -(mesh.outflow @ flux), matrix=matrix,
+                            tolerance=1e-10).solution
+    if problem.closed:
+        pressure -= np.average(pressure, weights=mesh.cell_volume)
+    return pressure
+
+
+def velocity_from_flux(problem: Problem, flux: np.ndarray) -> np.ndarray:
+    """(n_cells, 3) velocity that fits the mass fluxes of each cell's faces best."""
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    cells = np.concatenate([mesh.left, mesh.right])
+    area = np.concatenate([mesh.face_area, mesh.face_area[:n]])
+    size = np.concatenate([mesh.face_area_magnitude, mesh.face_area_magnitude[:n]])
+    through = np.concatenate([flux, flux[:n]]) / problem.case.fluid.density
+    matrix, rhs = np.zeros((mesh.n_cells, 3, 3)), np.zeros((mesh.n_cells, 3))
+    for i in range(3):
+        rhs[:, i] = np.bincount(cells, through * area[:, i] / size, mesh.n_cells)
+        for j in range(3):
+            matrix[:, i, j] = np.bincount(cells, area[:, i] * area[:, j] / size, mesh.n_cells)
+    return np.ascontiguousarray(np.linalg.solve(matrix, rhs[:, :, None])[:, :, 0])

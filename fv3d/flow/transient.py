@@ -22,6 +22,7 @@ from .start import start_state
 from .step_size import FixedStep, StepSize
 from .time_step import TimeStep, problem_at
 from .turbulence import eddies_of
+from .zones import refuse_resistances
 
 __all__ = ["TimeStep", "solve_transient"]
 
@@ -74,6 +75,7 @@ def solve_transient(case: Case, *, time_step: float | StepSize, end_time: float,
     timed = tuple(getattr(source, "in_time", source) for source in sources)
     check_kind(timed, ("start", "force", "advance"), "sources")
     refuse_flow_outlets(case.boundaries)
+    refuse_resistances(case.resistances)
     problem = make_problem(case, timed)
     workspace = make_workspace(problem)
     name = name or ("guided" if timed else "transient")
