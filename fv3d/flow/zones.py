@@ -214,7 +214,7 @@ def _bending(mesh: Mesh, seams: np.ndarray, size: np.ndarray, method: GradientMe
     levels = len(np.unique(size[np.concatenate([yielding, resisting])], axis=0))
     return SeamGradient(method.weights(_cut_open(mesh, seams, yielding, resisting, outward), whole),
                         yielding, mesh.face_centre[seams] - mesh.cell_centre[yielding],
-                        max(levels - 1, 1))
+                        max(levels - 1, 0))
 
 
 def _cut_open(mesh: Mesh, seams: np.ndarray, yielding: np.ndarray, resisting: np.ndarray,

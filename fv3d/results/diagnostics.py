@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -118,26 +118,31 @@ class MomentumBudget:
     convected : momentum carried in through the boundaries
     body : body force of the case and drives of periodic pairs
     artificial : force of the sources, without its irrotational part
+    resistances : mapping of name to the force of a zone of resistance on the fluid
     """
 
     boundaries: dict[str, np.ndarray]
     convected: np.ndarray
     body: np.ndarray
     artificial: np.ndarray
+    resistances: dict[str, np.ndarray] = field(default_factory=dict)
 
     @property
     def closure(self) -> np.ndarray:
         """Sum of all [N]; zero for a converged run."""
-        return sum(self.boundaries.values(), self.convected + self.body + self.artificial)
+        return sum([*self.boundaries.values(), *self.resistances.values()],
+                   self.convected + self.body + self.artificial)
 
     @property
     def size(self) -> float:
         """Sum of the magnitudes of all contributions [N]."""
-        parts = [*self.boundaries.values(), self.convected, self.body, self.artificial]
+        parts = [*self.boundaries.values(), *self.resistances.values(), self.convected, self.body,
+                 self.artificial]
         return float(sum(np.linalg.norm(part) for part in parts))
 
     def __str__(self) -> str:
         rows = {f"boundary '{name}'": part for name, part in self.boundaries.items()} | {
+            f"resistance '{name}'": part for name, part in self.resistances.items()} | {
             "convected in": self.convected, "body force": self.body,
             "artificial force": self.artificial, "left over (closure)": self.closure}
         title = "forces on the whole fluid [N]"
@@ -179,7 +184,9 @@ def momentum_budget(run: Run) -> MomentumBudget:
     convected = -(run.mass_flux[n:, None] * carried).sum(axis=0)
     volume = mesh.cell_volume[:, None]
     body = density * (run.body_force * volume).sum(axis=0)
-    return MomentumBudget(boundaries, convected, body, net_artificial_force(run))
+    zones = run.problem.zones
+    return MomentumBudget(boundaries, convected, body, net_artificial_force(run),
+                          {} if zones is None else zones.force(run.velocity))
 
 
 def net_artificial_force(run: Run) -> np.ndarray:
