@@ -9,6 +9,7 @@ import numpy as np
 
 from ..operators import kernels, linear
 from ..operators.assembly import Pattern, inverse_blocks, symmetric_matrix
+from ..operators.deflation import deflated
 from .equations import (
     Momentum,
     PressureFields,
@@ -32,7 +33,7 @@ from .response import PressureResponse, pressure_response
 from .zones import without_zones
 
 REFRESH_AT = 1.6  # solver iterations above this multiple of a fresh hierarchy's: refresh it
-FEWEST_SWEEPS, MOST_SWEEPS = 4, 16
+FEWEST_SWEEPS = 4
 SWEPT_TO = 0.05  # share of the momentum residual that the sweeps may leave
 MEASURED_EARLY, MEASURED_EVERY = (0, 2, 5, 10, 20), 30  # iterations at which that is measured
 
@@ -209,7 +210,7 @@ def sweeps_needed(count: int, before: np.ndarray, after: np.ndarray) -> int:
         return count
     per_sweep = -0.5 * np.log(max(left, 1e-30)) / count
     wanted = np.log(1.0 / SWEPT_TO) / max(per_sweep, 1e-3)
-    return int(np.clip(2 * np.ceil(wanted / 2), FEWEST_SWEEPS, MOST_SWEEPS))
+    return max(2 * int(np.ceil(wanted / 2)), FEWEST_SWEEPS)
 
 
 def momentum_push(problem: Problem, fields: PressureFields, force: Force | None) -> np.ndarray:
@@ -287,7 +288,9 @@ def solve_pressure(problem: Problem, workspace: Workspace, matrix: Any, rhs: np.
     if workspace.prepared is None:
         workspace.prepared = linear.prepare(matrix, method=multigrid, singular=problem.closed)
         workspace.best_iterations, workspace.setups = 0, workspace.setups + 1
-    result = linear.solve(workspace.prepared, rhs, matrix=matrix, tolerance=tolerance)
+    helped = workspace.prepared if problem.zones is None \
+        else deflated(workspace.prepared, matrix, problem.zones.parts)
+    result = linear.solve(helped, rhs, matrix=matrix, tolerance=tolerance)
     per_decade = result.iterations / max(-np.log10(max(tolerance, 1e-300)), 0.1)
     if workspace.best_iterations == 0:
         workspace.best_iterations = max(int(np.ceil(per_decade)), 2)

@@ -23,6 +23,7 @@ from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+import scipy.sparse as sparse
 
 from ..errors import CaseError
 from ..mesh.mesh import Mesh
@@ -32,6 +33,8 @@ from .resistance import Resistance, resisting_cells
 if TYPE_CHECKING:
     from .equations import PressureFields
     from .problem import Problem
+
+MOST_PARTS = 100  # parts of the domain whose pressure levels are solved for apart
 
 
 @dataclass(frozen=True, eq=False)
@@ -106,6 +109,7 @@ class Zones:
     faces : (t,) internal faces beside cells of the zones
     bent : (t,) bool, those that are seams
     edges : (b,) boundary faces of such cells, counted from the first boundary face
+    parts : (n_cells,) part of the domain between seams each cell belongs to; -1 in small ones
     plain, bending : gradient of the pressure without and with seams
     """
 
@@ -117,6 +121,7 @@ class Zones:
     faces: np.ndarray
     bent: np.ndarray
     edges: np.ndarray
+    parts: np.ndarray
     plain: GradientOperator
     bending: SeamGradient
 
@@ -195,7 +200,20 @@ def zones_of(mesh: Mesh, density: float, resistances: Mapping[str, Resistance],
     bent = np.any(both[mesh.left[faces]] != both[mesh.right[faces]], axis=1)
     bending = _bending(mesh, faces[bent], linear + quadratic, method, known)
     return Zones(mesh, density, cells, linear, quadratic, faces, bent,
-                 np.flatnonzero(inside[mesh.left[n:]]), plain, bending)
+                 np.flatnonzero(inside[mesh.left[n:]]), _parts(mesh, faces[bent]), plain, bending)
+
+
+def _parts(mesh: Mesh, seams: np.ndarray) -> np.ndarray:
+    """Connected cells between seams, numbered from the largest group."""
+    from scipy.sparse.csgraph import connected_components
+    links = np.delete(np.arange(mesh.n_internal), seams)
+    graph = sparse.csr_matrix((np.ones(len(links)), (mesh.left[links], mesh.right[links])),
+                              shape=(mesh.n_cells, mesh.n_cells))
+    count, label = connected_components(graph, directed=False)
+    order = np.argsort(-np.bincount(label, minlength=count), kind="stable")
+    rank = np.empty(count, dtype=np.int64)
+    rank[order] = np.arange(count)
+    return np.where(rank[label] < MOST_PARTS, rank[label], -1)
 
 
 def _bending(mesh: Mesh, seams: np.ndarray, size: np.ndarray, method: GradientMethod,

@@ -15,7 +15,7 @@ import math
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field
-from typing import Any
+from typing import Any, Protocol
 
 import numpy as np
 import scipy.sparse as sparse
@@ -163,6 +163,19 @@ class Factorised:
         return f"Factorised({self.built_from[0].shape[0]} rows, {self.factors.nnz} entries)"
 
 
+class Preconditioner(Protocol):
+    """What :func:`solve` needs of a hierarchy or of what takes its place."""
+
+    @property
+    def singular(self) -> bool:
+        """Whether the constant vector is in the null space."""
+        ...
+
+    def precondition(self, rhs: np.ndarray) -> np.ndarray:
+        """Approximate solution (n,) of a right-hand side (n,), symmetric."""
+        ...
+
+
 @dataclass(frozen=True, eq=False)
 class LinearResult:
     """Solution of a linear system and how well it was reached.
@@ -293,14 +306,14 @@ def _spectral_bound(matrix: sparse.csr_matrix, inverse_diagonal: np.ndarray, *,
     return min(1.05 * value, float(rows.max()))
 
 
-def solve(prepared: Prepared | Factorised, rhs: np.ndarray, *, matrix: sparse.csr_matrix,
+def solve(prepared: Factorised | Preconditioner, rhs: np.ndarray, *, matrix: sparse.csr_matrix,
           tolerance: float, max_iterations: int = 200,
           start: np.ndarray | None = None) -> LinearResult:
     """Solve ``matrix x = rhs`` to a relative true residual.
 
     Parameters
     ----------
-    prepared : Prepared or Factorised
+    prepared : Prepared, Factorised or Deflated
         Hierarchy of this or of a similar matrix; factors of this very matrix.
     rhs : (n,)
     matrix : (n, n) csr_matrix, symmetric
@@ -333,7 +346,7 @@ def solve(prepared: Prepared | Factorised, rhs: np.ndarray, *, matrix: sparse.cs
     return _checked(prepared, matrix, rhs, x, done, tolerance)
 
 
-def _checked(prepared: Prepared | Factorised, matrix: sparse.csr_matrix, rhs: np.ndarray,
+def _checked(prepared: Factorised | Preconditioner, matrix: sparse.csr_matrix, rhs: np.ndarray,
              x: np.ndarray, done: int, tolerance: float) -> LinearResult:
     """Solution with its true residual; of a singular matrix the one with zero mean."""
     residual = _norm(rhs - _times(matrix, x)) / _norm(rhs)
