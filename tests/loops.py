@@ -47,6 +47,16 @@ def weighted_gradient(offsets, other, weights, cells, edges, out):
 
 
 @reference
+def blend_with_neighbours(offsets, other, share, values, out):
+    result = np.empty_like(out)
+    for cell, own in enumerate(values):
+        beside = [o for o in other[offsets[cell]:offsets[cell + 1]] if o < len(values)]
+        mean = np.mean(values[beside], axis=0) if beside else own
+        result[cell] = (1.0 - share[cell]) * own + share[cell] * mean
+    return {4: result}
+
+
+@reference
 def linear_face_values(left, right, weight, skew, values, gradient, out):
     result = np.empty_like(out)
     for face, (a, b) in enumerate(zip(left, right)):
@@ -267,6 +277,9 @@ def arguments(name: str, mesh: Mesh, *, dtype: type = np.float64, seed: int = 0,
         "weighted_gradient": [
             offsets, r.integers(0, n + mesh.n_boundary, len(cell_faces)).astype(np.int32),
             table(len(cell_faces)), table(), table(mesh.n_boundary), np.empty((n, 3, 3))],
+        "blend_with_neighbours": [
+            offsets, r.integers(0, n + mesh.n_boundary, len(cell_faces)).astype(np.int32),
+            r.choice([0.0, 0.5, 1.0], n), table(), np.empty((n, 3))],
         "linear_face_values": [*ends, r.normal(size=n), table(), np.empty(inside)],
         "surface_sum": [offsets, cell_faces, sign, r.normal(size=faces), mesh.face_area,
                         mesh.cell_volume, np.empty((n, 3))],

@@ -80,6 +80,9 @@ def test_gradient_of_a_linear_field_with_a_jump_over_the_pair(kind: str) -> None
     away = np.ones(mesh.n_cells, bool)
     for pair in mesh.joined.values():
         away[mesh.left[pair.faces]] = away[mesh.right[pair.faces]] = False
+    n = mesh.n_internal  # cells of few faces take half of their gradient from their neighbours
+    beside = ~(away[mesh.left[:n]] & away[mesh.right])
+    away[mesh.left[:n][beside]] = away[mesh.right[beside]] = False
     gradient = operator(mesh.cell_centre @ whole, edge_centres(mesh) @ whole)
     np.testing.assert_allclose(gradient[away], np.broadcast_to(whole, gradient.shape)[away],
                                atol=1e-11)

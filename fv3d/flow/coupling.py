@@ -136,7 +136,7 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     """
     problem = at_levels(problem, state)
     mesh, numerics = problem.mesh, problem.case.numerics
-    n = mesh.n_internal
+    n, coupling = mesh.n_internal, numerics.coupling
     edge_flux = state.mass_flux[n:]
     gradient = problem.velocity_gradient(state.velocity, state.boundary_velocity)
     edge = boundary_velocity(problem, state.velocity, gradient, edge_flux)
@@ -156,8 +156,9 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     change = sweeps(residual)
     if numerics.sweeps is None and sweeps_are_due(state.iteration):
         left = replace(equation.rows, block=relaxed, rhs=residual).residual(change)
-        workspace.sweeps = sweeps_needed(sweeps.count, *(counted(problem, equation, part)
-                                                         for part in (residual, left)))
+        needed = sweeps_needed(sweeps.count, *(counted(problem, equation, part)
+                                               for part in (residual, left)))
+        workspace.sweeps = min(needed, coupling.most_sweeps)
     sources, misfit, pressure = [], 0.0, state.pressure
     for source, own in zip(problem.sources, state.sources, strict=True):
         part = source.correct(own, problem, state, change, sweeps)

@@ -19,7 +19,7 @@ from .numerics import SIMPLE, SIMPLEC
 from .problem import Problem
 
 SKEWED_FROM = 1.4
-DAMPED = 0.17
+DAMPED = 0.3
 
 
 @dataclass(frozen=True)
@@ -53,13 +53,14 @@ class PressureResponse:
 
     @property
     def fine_steps(self) -> tuple[float, ...]:
-        """Steps of the fine-scale pressure supplement.
+        """Steps of the fine-scale pressure supplement, none on a skewed mesh.
 
-        None on a skewed mesh, nor where the velocity answers at cell scale too (tetrahedra).
-
-        The pair damps answers between a third of the largest and the largest to a fifth.
+        The pair damps answers between a third of the largest and the largest to a fifth; where
+        the velocity answers at cell scale too (tetrahedra) one step is enough.
         """
-        return () if self.skewed else (1.1 / self.fine, 2.0 / self.fine)
+        if self.whole > SKEWED_FROM:
+            return ()
+        return (1.1 / self.fine, 2.0 / self.fine) if self.decoupled else (1.0 / self.fine,)
 
 
 def mostly_hexahedra(mesh: Mesh) -> bool:

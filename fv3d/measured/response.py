@@ -20,7 +20,7 @@ from .layout import Layout
 
 POTENTIAL_TO = 1e-2  # residual reduction of the potentials
 KEPT_FROM = 0.01     # share of a column's largest force below which it is dropped
-SHARE_OF_ROUGH = 0.3  # share of the potentials of forces in single cells that are no hexahedra:
+SHARE_OF_ROUGH = 0.5  # share of the potentials of forces in single cells that are no hexahedra:
                      # more can diverge, less converges more slowly (found by trial)
 
 

@@ -52,6 +52,8 @@ class GradientOperator:
         Projector on these directions, filled from the neighbours' gradients.
     completion : (p, n_cells) csr_matrix
         Mean over those neighbours of each poor cell that are not poor themselves.
+    smoothed : (n_cells,) or None
+        Share of each gradient that is replaced by the mean of the neighbours' gradients.
     """
 
     offsets: np.ndarray
@@ -60,6 +62,7 @@ class GradientOperator:
     poor: np.ndarray
     missing: np.ndarray
     completion: sparse.csr_matrix
+    smoothed: np.ndarray | None = None
 
     def __call__(self, cell_values: np.ndarray, boundary_values: np.ndarray) -> np.ndarray:
         """Gradient (n_cells, 3) of a scalar (n_cells,), (n_cells, k, 3) of a vector (n_cells, k).
@@ -74,6 +77,11 @@ class GradientOperator:
                                   np.ascontiguousarray(cells), np.ascontiguousarray(edge), out)
         if self.completion.nnz:
             self._complete(out)
+        if self.smoothed is not None:
+            rough = out.reshape(len(out), -1)
+            out = np.empty_like(out)
+            kernels.blend_with_neighbours(self.offsets, self.other, self.smoothed, rough,
+                                          out.reshape(len(out), -1))
         return out[:, 0] if scalar else out
 
     def _complete(self, out: np.ndarray) -> None:
@@ -114,11 +122,17 @@ class LeastSquares:
     tetrahedra at walls) are taken from the neighbouring cells' gradients, or zero where these have
     none either (meshes one cell thick).
 
+    In cells of fewer than six faces the share ``smoothing`` of the gradient is the mean of the
+    neighbours' gradients.  Four or five neighbours alone make second-order convection unstable
+    on tetrahedra; gradients that see the neighbours' neighbours do not (Haider, F., Croisille,
+    J.-P. and Courbet, B. 2009, Numer. Math. 113, 555-600; cited from memory).
+
     Source: Barth, T. J. (1991), AIAA Paper 91-0721.
     """
 
     power: float = 2.0
     least_known: float = 0.05
+    smoothing: float = 0.5
     order: float = 1.0
     linear_exact: bool = True
     bounded: bool = False
@@ -149,9 +163,11 @@ class LeastSquares:
                 matrix[:, i, j] = matrix[:, j, i] = np.bincount(cell, share, mesh.n_cells)
         inverse, poor, missing = _known_inverse(matrix, whole, self.least_known)
         weights = np.einsum("kij,kj->ki", inverse[cell], arm) * (used * importance)[:, None]
+        few = np.diff(offsets) < 6
+        smoothed = self.smoothing * few if self.smoothing > 0 and few.any() else None
         return GradientOperator(offsets, other, np.ascontiguousarray(weights),
                                 poor.astype(np.int32), missing,
-                                _completion(offsets, other, poor, mesh.n_cells))
+                                _completion(offsets, other, poor, mesh.n_cells), smoothed)
 
 
 @dataclass(frozen=True)

@@ -80,6 +80,27 @@ def weighted_gradient(offsets, other, weights, cell_values, boundary_values, out
 
 
 @ThreadedKernel
+def blend_with_neighbours(offsets, other, share, values, out):
+    """out[c, :] = values of the cell, a share of them replaced by its neighbours' mean."""
+    n_cells = offsets.shape[0] - 1
+    width = values.shape[1]
+    for cell in numba.prange(n_cells):
+        count = 0
+        for k in range(offsets[cell], offsets[cell + 1]):
+            if other[k] < n_cells:
+                count += 1
+        s = share[cell] if count > 0 else 0.0
+        for i in range(width):
+            total = 0.0
+            if s > 0.0:
+                for k in range(offsets[cell], offsets[cell + 1]):
+                    if other[k] < n_cells:
+                        total += values[other[k], i]
+                total *= s / count
+            out[cell, i] = (1.0 - s) * values[cell, i] + total
+
+
+@ThreadedKernel
 def linear_face_values(left, right, weight, skew, values, gradient, out):
     """Linear interpolation of a scalar to internal faces, carried to the face centre."""
     for face in numba.prange(right.shape[0]):
