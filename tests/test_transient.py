@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import itertools
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -11,7 +12,7 @@ import pytest
 import fv3d
 from fv3d.errors import CaseError, DivergenceError, Fv3dWarning
 from fv3d.flow.coupling import Record
-from fv3d.flow.watch import WINDOW, repeating_period
+from fv3d.flow.watch import WINDOWS, repeating_period
 
 A, D, NU = np.pi / 4, np.pi / 2, 0.1
 
@@ -131,7 +132,6 @@ def test_a_checkerboard_pressure_dies_out(steady: fv3d.Run) -> None:
     workspace = make_workspace(problem)
     state = start_state(problem, (1.0, 0.0, 0.0), workspace)
     signs = (-1.0) ** np.round(mesh.cell_centre * 8 - 0.5).sum(axis=1)
-    from dataclasses import replace
     state = replace(state, pressure=signs)
     for _ in range(50):
         state, _ = TimeStep(FixedStep(0.01 / 8), first=1)(problem, state, workspace)
@@ -171,22 +171,63 @@ def test_a_local_step_is_a_relaxation_factor(steady: fv3d.Run) -> None:
     np.testing.assert_allclose(one.history["momentum"], two.history["momentum"], rtol=1e-6)
 
 
+@pytest.mark.parametrize("small", [fv3d.SIMPLEC(velocity_relaxation=0.2), fv3d.GlobalStep(0.03)])
+def test_small_pseudo_steps_end_in_the_same_flow(steady: fv3d.Run, small: Any) -> None:
+    """Steps far below the cells' own time neither grow nor move the solution."""
+    case, options = steady.case, {"tolerance": 1e-16, "max_iterations": 120, "progress": False}
+
+    def followed(start: Any) -> fv3d.Run:
+        with pytest.warns(Fv3dWarning, match="iteration limit"):
+            if isinstance(small, fv3d.GlobalStep):
+                return fv3d.solve_pseudo_transient(case, pseudo_step=small, start=start, **options)
+            return fv3d.solve_steady(replace(case, numerics=fv3d.Numerics(coupling=small)),
+                                     start=start, **options)
+
+    drag = fv3d.force(steady, "cylinder").total[0]
+    kept = followed(steady)
+    assert kept.history["momentum"].max() <= 1e-7
+    assert fv3d.force(kept, "cylinder").total[0] == pytest.approx(drag, rel=1e-6)
+    found = followed((0.2, 0.0, 0.0))
+    assert found.history["momentum"][-1] <= 0.1 * found.history["momentum"][9]
+    assert fv3d.force(found, "cylinder").total[0] == pytest.approx(drag, rel=0.1)
+
+
 def record(k: int, residual: float, tracer: float) -> Record:
     return Record(k, residual, 0.0, 0.0, 1, tracer=tracer)
 
 
-def test_the_watch_sees_a_circle_and_lets_convergence_pass() -> None:
-    k = np.arange(2 * WINDOW)
-    swing = np.sin(2 * np.pi * k / 37.3)
-    circling = [record(i, 1e-3 * (1 + 0.2 * swing[i]), swing[i]) for i in k[:WINDOW + 10]]
+@pytest.mark.parametrize("period, seen_in", [(17.54, 250), (37.3, 250), (131.0, 500),
+                                             (290.0, 1000)])
+def test_the_watch_sees_a_circle(period: float, seen_in: int) -> None:
+    k = np.arange(seen_in)
+    swing = np.sin(2 * np.pi * k / period)
+    circling = [record(i, 1e-3 * (1 + 0.2 * swing[i]), swing[i]) for i in k]
     found = [repeating_period(circling[:i]) for i in range(1, len(circling) + 1)]
-    assert [f for f in found if f] == pytest.approx([37.3], abs=0.2)
+    assert [f for f in found if f] == pytest.approx([period], rel=0.01)
+
+
+def test_the_watch_lets_convergence_pass() -> None:
+    k = np.arange(2 * WINDOWS[0])
+    swing = np.sin(2 * np.pi * k / 37.3)
     falling = [record(i, 10 ** (-i / 100), swing[i] * 10 ** (-i / 100)) for i in k]
     noise = np.random.default_rng(1).standard_normal(len(k))
     noisy = [record(i, 1e-3, noise[i]) for i in k]
     still = [record(i, 1e-3, 1.0) for i in k]
     for records in (falling, noisy, still):
         assert all(repeating_period(records[:i]) is None for i in range(1, len(records)))
+
+
+def test_the_watch_changes_nothing(steady: fv3d.Run, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A run that converges is the same to the last bit with and without the watch."""
+    case = replace(steady.case, numerics=fv3d.Numerics(
+        coupling=fv3d.SIMPLEC(velocity_relaxation=0.4)))
+    options = {"tolerance": 1e-7, "max_iterations": 1000, "progress": False}
+    seen = fv3d.solve_steady(case, **options)
+    assert seen.outcome.good and len(seen.history["mass"]) > 250  # long enough to be looked at
+    monkeypatch.setattr("fv3d.flow.steady.repeating_period", lambda records: None)
+    blind = fv3d.solve_steady(case, **options)
+    for name in ("velocity", "pressure", "mass_flux"):
+        np.testing.assert_array_equal(getattr(blind, name), getattr(seen, name))
 
 
 @pytest.mark.parametrize("changes", [

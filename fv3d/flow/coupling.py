@@ -20,6 +20,7 @@ from .equations import (
     momentum,
     pressure_fields,
 )
+from .memory import flux_defect, memory_share
 from .numerics import GlobalStep, LocalStep
 from .outlets import (
     at_levels,
@@ -35,7 +36,10 @@ from .zones import without_zones
 REFRESH_AT = 1.6  # solver iterations above this multiple of a fresh hierarchy's: refresh it
 FEWEST_SWEEPS = 4
 SWEPT_TO = 0.05  # share of the momentum residual that the sweeps may leave
+SMALL_STEP = 1.6  # inertia over diagonal above which the face fluxes carry the time term too
 MEASURED_EARLY, MEASURED_EVERY = (0, 2, 5, 10, 20), 30  # iterations at which that is measured
+
+FaceAnswer = tuple[np.ndarray, np.ndarray]
 
 
 @dataclass(frozen=True)
@@ -134,7 +138,7 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
 
     Returns the new state and the record of the state it started from.
     """
-    problem = at_levels(problem, state)
+    problem, start = at_levels(problem, state), state
     mesh, numerics = problem.mesh, problem.case.numerics
     n, coupling = mesh.n_internal, numerics.coupling
     edge_flux = state.mass_flux[n:]
@@ -172,11 +176,13 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     state = replace(state, velocity=velocity, pressure=pressure, sources=tuple(sources))
     force = total_force(problem, state)
     edge = boundary_velocity(problem, velocity, gradient, edge_flux)
-    flux = interpolated_flux(problem, velocity, gradient, edge, fields, force,
-                             equation.diagonal, np.zeros(mesh.n_faces), equation.drag)
+    answer = _face_answer(problem, start, gradient, equation, inertia)
+    flux = interpolated_flux(problem, velocity, gradient, edge, fields, force, *answer,
+                             equation.drag)
     record_mass = mass_residual(problem, flux, velocity, fields.cell)
     misfit = max(misfit, flow_misfit(problem, flux))
-    state, effort = _correct_pressure(problem, state, flux, equation, gradient, inertia, workspace)
+    state, effort = _correct_pressure(problem, state, flux, equation, gradient, inertia, answer,
+                                      workspace)
     tracer = float(np.einsum("ij,ij->", workspace.tracer, state.velocity))
     residual = counted(problem, equation, residual)
     record = Record(state.iteration, float(np.abs(residual).sum() / scale), record_mass, misfit,
@@ -184,6 +190,22 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     workspace.first_residual = workspace.first_residual or record.residual
     workspace.residual = record.residual
     return replace(state, iteration=state.iteration + 1), record
+
+
+def _face_answer(problem: Problem, start: State, gradient: np.ndarray, equation: Momentum,
+                 inertia: np.ndarray) -> FaceAnswer:
+    """Diagonal and memory of the face fluxes' interpolation, see :mod:`fv3d.flow.memory`.
+
+    A step of more than half the cells' own time is too large for the time term to matter.  With
+    smaller ones a flux without it answers a pressure that alternates from cell to cell more than
+    twice as strongly as the correction assumes, and the iteration grows.
+    """
+    if equation.drag is not None or not (inertia > SMALL_STEP * equation.diagonal).any():
+        return equation.diagonal, np.zeros(problem.mesh.n_faces)
+    defect = flux_defect(problem, start.velocity, gradient, start.boundary_velocity,
+                         start.mass_flux)
+    return (equation.diagonal + inertia,
+            defect * memory_share(problem, equation.diagonal, inertia))
 
 
 def counted(problem: Problem, equation: Momentum, force: np.ndarray) -> np.ndarray:
@@ -223,7 +245,7 @@ def momentum_push(problem: Problem, fields: PressureFields, force: Force | None)
 
 
 def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, equation: Momentum,
-                      gradient: np.ndarray, inertia: np.ndarray,
+                      gradient: np.ndarray, inertia: np.ndarray, answer: FaceAnswer,
                       workspace: Workspace) -> tuple[State, int]:
     mesh, numerics = problem.mesh, problem.case.numerics
     n, coupling = mesh.n_internal, numerics.coupling
@@ -254,12 +276,12 @@ def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, equation
     state = replace(state, velocity=velocity, pressure=pressure, mass_flux=flux,
                     boundary_velocity=edge)
     if workspace.response.fine_steps:
-        state = _fine_supplement(problem, state, gradient, equation, workspace)
+        state = _fine_supplement(problem, state, gradient, equation, answer, workspace)
     return state, result.iterations
 
 
 def _fine_supplement(problem: Problem, state: State, gradient: np.ndarray, equation: Momentum,
-                     workspace: Workspace) -> State:
+                     answer: FaceAnswer, workspace: Workspace) -> State:
     """Pressure with its cell-scale part brought nearer to the end of the iteration.
 
     At the scale of the cells the fluxes answer the pressure with the unrelaxed coefficient only, a
@@ -267,14 +289,13 @@ def _fine_supplement(problem: Problem, state: State, gradient: np.ndarray, equat
     the imbalance make up for that.  They change the path, not the solution.
     """
     mesh, force, zones = problem.mesh, total_force(problem, state), problem.zones
-    diagonal, edge_flux = equation.diagonal, state.mass_flux[problem.mesh.n_internal:]
+    diagonal, edge_flux = answer[0], state.mass_flux[problem.mesh.n_internal:]
     ease = None if zones is None or equation.drag is None else zones.ease(diagonal, equation.drag)
     unrelaxed = correction_matrix(problem, mesh.cell_volume / diagonal, ease)[0].diagonal()
-    memory = np.zeros(mesh.n_faces)
     for size in workspace.response.fine_steps:
         fields = pressure_fields(problem, state.pressure, edge_flux)
         flux = interpolated_flux(problem, state.velocity, gradient, state.boundary_velocity,
-                                 fields, force, diagonal, memory, equation.drag)
+                                 fields, force, *answer, equation.drag)
         state = replace(state, pressure=state.pressure - size * (mesh.outflow @ flux) / unrelaxed)
     if problem.closed:
         level = np.average(state.pressure, weights=mesh.cell_volume)

@@ -47,6 +47,7 @@ from .equations import (
     momentum,
     pressure_fields,
 )
+from .memory import flux_defect, memory_share
 from .problem import Force, Problem, State
 from .projected import Push, make_projection
 from .step_size import FixedStep, StepSize, within
@@ -200,7 +201,7 @@ class TimeStep:
         edge = boundary_velocity(problem, velocity, gradient, trial.mass_flux[n:])
         memory = difference.mixed(now.defect, None if before is None else before.defect)
         flux = interpolated_flux(problem, velocity, gradient, edge, fields, force,
-                                 equation.diagonal + inertia, memory * _memory_share(
+                                 equation.diagonal + inertia, memory * memory_share(
                                      problem, equation.diagonal, inertia) / difference.lead)
         scale = float(np.einsum("i,ij->", equation.diagonal + inertia, np.abs(velocity)))
         new, effort = self._project(problem, replace(trial, velocity=velocity), flux, fields,
@@ -271,18 +272,6 @@ def _push(problem: Problem, state: State, gradient: np.ndarray,
     return replace(state, sources=tuple(sources)), misfit
 
 
-def _memory_share(problem: Problem, diagonal: np.ndarray, inertia: np.ndarray) -> np.ndarray:
-    """(n_faces,) factor on the older levels' flux defect [kg/(m^3 s)].
-
-    With ``D`` the interpolated volume over diagonal, without and ``D^`` with the time term, it is
-    ``(1 / D^) - (1 / D)``: a steady defect is then that of the steady flux, whatever the step.
-    Between cells of one diagonal it is the leading coefficient times density over step.
-    """
-    mesh = problem.mesh
-    with_time = mesh.to_faces(mesh.cell_volume / (diagonal + inertia))
-    return 1.0 / with_time - 1.0 / mesh.to_faces(mesh.cell_volume / diagonal)
-
-
 def _viscous_share(problem: Problem, d: float) -> np.ndarray:
     """(n_cells,) share of the viscous pressure term kept.
 
@@ -298,16 +287,9 @@ def _viscous_share(problem: Problem, d: float) -> np.ndarray:
 
 def current_level(problem: Problem, state: State) -> Level:
     """The present state as a level: velocity gradient and flux defect added."""
-    mesh, n = problem.mesh, problem.mesh.n_internal
     gradient = problem.velocity_gradient(state.velocity, state.boundary_velocity)
-    through = np.einsum("ij,ij->i", mesh.to_faces(state.velocity), mesh.face_area)
-    slope = mesh.to_faces(gradient)[:n]
-    through[:n] += np.einsum("fij,fj,fi->f", slope, mesh.skew_offset, mesh.face_area[:n])
-    if mesh.warped:
-        through[:n] += np.einsum("fij,fji->f", slope, mesh.warp[:n])
-    through[n:] = np.einsum("ij,ij->i", state.boundary_velocity, mesh.face_area[n:])
-    defect = state.mass_flux / problem.case.fluid.density - through
-    defect[n:] = np.where(problem.table.pressure_given, defect[n:], 0.0)
+    defect = flux_defect(problem, state.velocity, gradient, state.boundary_velocity,
+                         state.mass_flux)
     return Level(state.velocity, state.boundary_velocity, state.mass_flux, gradient, defect)
 
 
