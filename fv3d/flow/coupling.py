@@ -31,7 +31,7 @@ from .outlets import (
 )
 from .problem import Force, Problem, State
 from .response import PressureResponse, pressure_response
-from .zones import without_zones
+from .zones import bent, without_zones
 
 REFRESH_AT = 1.6  # solver iterations above this multiple of a fresh hierarchy's: refresh it
 FEWEST_SWEEPS = 4
@@ -138,7 +138,7 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
 
     Returns the new state and the record of the state it started from.
     """
-    problem, start = at_levels(problem, state), state
+    problem, start = bent(at_levels(problem, state), state), state
     mesh, numerics = problem.mesh, problem.case.numerics
     n, coupling = mesh.n_internal, numerics.coupling
     edge_flux = state.mass_flux[n:]

@@ -93,7 +93,8 @@ def pressure_fields(problem: Problem, pressure: np.ndarray,
     """Face pressures and the conservative cell gradient."""
     mesh, n = problem.mesh, problem.mesh.n_internal
     known = boundary_pressure(problem, pressure, np.zeros((mesh.n_cells, 3)), boundary_flux)
-    gradient = problem.pressure_gradient(pressure, known)
+    method = problem.pressure_gradient if problem.zones is None else problem.zones.bending
+    gradient = method(pressure, known)
     face = np.empty(mesh.n_faces)
     kernels.linear_face_values(mesh.left[:n], mesh.right, mesh.weight, mesh.skew_offset, pressure,
                                gradient, face[:n])
@@ -270,6 +271,7 @@ def interpolated_flux(problem: Problem, velocity: np.ndarray, gradient: np.ndarr
         flux[problem.zones.faces] = problem.zones.flux(velocity, gradient, fields, net, drop, ease,
                                                        problem.orthogonal)
         edge_d[problem.zones.edges] = ease.edge
+        gradient = ease.fluid[:, None, None] * gradient
     smooth = np.einsum("ij,ij->i", net[owner], mesh.delta[n:])
     jump = fields.face[n:] - fields.cell[owner] - drop[n:]
     through = np.einsum("ij,ij->i", edge, mesh.face_area[n:])

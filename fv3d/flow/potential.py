@@ -10,6 +10,7 @@ from ..operators import linear
 from ..operators.assembly import symmetric_matrix
 from .equations import PressureFields, pressure_fields
 from .problem import Force, Problem, State
+from .zones import bent
 
 
 def prepare_potential(problem: Problem) -> linear.Prepared | linear.Factorised:
@@ -69,7 +70,8 @@ class TruePressure:
     def __call__(self, problem: Problem, state: State) -> tuple[PressureFields, np.ndarray,
                                                                np.ndarray]:
         """The solver's pressure fields, and true pressures of cells and faces [Pa]."""
-        fields = pressure_fields(problem, state.pressure, state.mass_flux[problem.mesh.n_internal:])
+        fields = pressure_fields(bent(problem, state), state.pressure,
+                                 state.mass_flux[problem.mesh.n_internal:])
         force = artificial_force(problem, state)
         if force is None:
             return fields, fields.cell, fields.face

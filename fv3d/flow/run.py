@@ -14,6 +14,7 @@ from ..operators.interpolation import PointInterpolation, point_interpolation
 from .equations import PressureFields, pressure_fields
 from .monitors import Series
 from .problem import Case, Force, Problem, State
+from .zones import bent
 
 
 @dataclass(frozen=True, eq=False)
@@ -108,7 +109,7 @@ class Run:
     @cached_property
     def pressure_fields(self) -> PressureFields:
         """Solver's pressure with face values and conservative gradient (force balance included)."""
-        return pressure_fields(self.problem, self.state.pressure,
+        return pressure_fields(bent(self.problem, self.state), self.state.pressure,
                                self.state.mass_flux[self.mesh.n_internal:])
 
     @cached_property

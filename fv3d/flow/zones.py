@@ -6,7 +6,9 @@ begins or ends: a straight line between the cells beside it would drive the flui
 zone wildly.  So
 
 * the pressure on a seam is extended from the side of less resistance alone, as on a wall; for the
-  other side it is a given value, as on an outlet;
+  other side it is a given value, as on an outlet.  Where the resistance is weak against the
+  inertia of a cell it is interpolated, and raised by ``weight (1 - weight) (delta . n) jump``,
+  where ``jump`` is what the resistance on the right takes more than that on the left [Pa/m];
 * gradients of the pressure, and of its correction, never mix both sides of a seam;
 * the flux through a seam follows both slopes along the path from cell centre to face to cell
   centre, and yields as the mean resistance of that path.
@@ -32,8 +34,10 @@ from .resistance import Resistance, resisting_cells
 
 if TYPE_CHECKING:
     from .equations import PressureFields
-    from .problem import Problem
+    from .problem import Problem, State
 
+WEAK, DENSE = 0.1, 0.5  # resistance over inertia of a cell between which seams change treatment
+ALIKE = 10.0  # ratio of both sides above which the yielding one counts still less in a flux
 MOST_PARTS = 100  # parts of the domain whose pressure levels are solved for apart
 
 
@@ -54,7 +58,8 @@ class Ease:
     """Velocity per pressure slope, volume over diagonal and resistance [m^3 s/kg].
 
     ``cell`` (n_cells, 3); along the normal of each face of the zones: ``left``, ``right`` and
-    their mean along the path ``face`` (t,), on boundary faces ``edge`` (b,).
+    their mean along the path ``face`` (t,), on boundary faces ``edge`` (b,).  ``fluid`` (n_cells,)
+    is the share of the fluid in the diagonal.
     """
 
     cell: np.ndarray
@@ -62,6 +67,7 @@ class Ease:
     right: np.ndarray
     face: np.ndarray
     edge: np.ndarray
+    fluid: np.ndarray
 
 
 @dataclass(frozen=True, eq=False)
@@ -75,12 +81,21 @@ class SeamGradient:
     reach : (s, 3) from its centre to the seam's [m]
     passes : int
         Resistances that stand one behind the other, from the least to the largest.
+    resisting, offset, weight : (s,), (s, 3) [m], (s,)
+        The other cell; seam's centre from the line between both; linear weight of the yielding one.
+    dense : (s,) share of the value extended from one side, None for 1
+    lift : (s,) [Pa] what the bend adds to the interpolated value
     """
 
     operator: GradientOperator
     yielding: np.ndarray
     reach: np.ndarray
     passes: int
+    resisting: np.ndarray
+    offset: np.ndarray
+    weight: np.ndarray
+    dense: np.ndarray | None = None
+    lift: np.ndarray | float = 0.0
 
     def __call__(self, cell_values: np.ndarray, boundary_values: np.ndarray) -> np.ndarray:
         """Gradient (n_cells, 3) of a scalar (n_cells,)."""
@@ -94,8 +109,13 @@ class SeamGradient:
 
     def values(self, cell_values: np.ndarray, gradient: np.ndarray) -> np.ndarray:
         """(s,) values on the seams."""
-        cell = self.yielding
-        return np.asarray(cell_values[cell] + np.einsum("fi,fi->f", gradient[cell], self.reach))
+        cell, w = self.yielding, self.weight
+        extended = cell_values[cell] + np.einsum("fi,fi->f", gradient[cell], self.reach)
+        if self.dense is None:
+            return np.asarray(extended)
+        between = w * cell_values[cell] + (1.0 - w) * cell_values[self.resisting] + self.lift
+        between += np.einsum("fi,fi->f", gradient[cell], self.offset)
+        return np.asarray(self.dense * extended + (1.0 - self.dense) * between)
 
 
 @dataclass(frozen=True, eq=False)
@@ -147,30 +167,53 @@ class Zones:
         right = np.einsum("fi,fi->f", square, cell[mesh.right[f]])
         face = 1.0 / ((1.0 - mesh.weight[f]) / left + mesh.weight[f] / right)
         edge = np.einsum("fi,fi->f", mesh.face_normal[b] ** 2, cell[mesh.left[b]])
-        return Ease(cell, left, right, face, edge)
+        return Ease(cell, left, right, face, edge, cell.min(axis=1) * diagonal / mesh.cell_volume)
 
     def flux(self, velocity: np.ndarray, gradient: np.ndarray, fields: PressureFields,
              net: np.ndarray, drop: np.ndarray, ease: Ease, orthogonal: np.ndarray) -> np.ndarray:
         """(t,) mass flux through ``faces`` by momentum interpolation [kg/s].
 
         At seams the velocity is that of the less yielding side, the more so the more they differ,
-        and slopes are followed along the path.  ``net`` (n_cells, 3) is the pressure slope without
-        force, ``drop`` (n_faces,) the force along ``delta`` [Pa].
+        and slopes are followed along the path.  The slope of the velocity in dense cells, which
+        the fluid beside them would spoil, counts by the share of the fluid.  ``net`` (n_cells, 3)
+        is the pressure slope without force, ``drop`` (n_faces,) the force along ``delta`` [Pa].
         """
         mesh, f = self.mesh, self.faces
         left, right, w, delta = mesh.left[f], mesh.right[f], mesh.weight[f], mesh.delta[f]
-        stiff = w * ease.right
-        share = np.where(self.bent, stiff / (stiff + (1.0 - w) * ease.left), w)
+        ratio = ease.right / ease.left
+        one = w * np.clip(ALIKE * ratio, 0.0, 1.0) * ratio  # small where the left side yields more
+        other = (1.0 - w) * np.clip(ALIKE / ratio, 0.0, 1.0)
+        share = np.where(self.bent, one / (one + other), w)
         path = np.where(self.bent, 1.0 - w, w)
         offset = mesh.skew_offset[f]
         through = np.zeros(len(f))
         smooth = np.zeros(len(f))
         for part, way, cell in ((share, path, left), (1.0 - share, 1.0 - path, right)):
-            carried = velocity[cell] + np.einsum("fij,fj->fi", gradient[cell], offset)
+            carried = velocity[cell] + ease.fluid[cell, None] * np.einsum(
+                "fij,fj->fi", gradient[cell], offset)
             through += part * np.einsum("fi,fi->f", carried, mesh.face_area[f])
             smooth += way * np.einsum("fi,fi->f", net[cell], delta)
         jump = fields.cell[right] - fields.cell[left] - drop[f]
         return self.density * (through + ease.face * orthogonal[f] * (smooth - jump))
+
+    def bend(self, velocity: np.ndarray, mass_flux: np.ndarray, viscosity: float) -> SeamGradient:
+        """Gradient of the pressure at a velocity (n_cells, 3) and mass flux (n_faces,)."""
+        mesh, f = self.mesh, self.faces[self.bent]
+        normal, w = mesh.face_normal[f], mesh.weight[f]
+        through = mass_flux[f] / (self.density * mesh.face_area_magnitude[f])
+        apart = np.einsum("fi,fi->f", mesh.delta[f], normal)
+        jump, ratio = np.zeros(len(f)), np.zeros(len(f))
+        for sign, side in ((-1.0, mesh.left), (1.0, mesh.right)):
+            cell = side[f]
+            u = velocity[cell]
+            u = u + (through - np.einsum("fi,fi->f", u, normal))[:, None] * normal
+            speed = np.sqrt(np.einsum("fi,fi->f", u, u))
+            loss = self.linear[cell] + self.quadratic[cell] * speed[:, None]
+            jump += sign * np.einsum("fi,fi,fi->f", normal, loss, u)
+            ratio = np.maximum(ratio, np.einsum("fi,fi->f", normal ** 2, loss) * apart
+                               / (self.density * speed + 2.0 * viscosity / apart))
+        dense = np.clip((ratio - WEAK) / (DENSE - WEAK), 0.0, 1.0)
+        return replace(self.bending, dense=dense, lift=w * (1.0 - w) * apart * jump)
 
     def force(self, velocity: np.ndarray) -> dict[str, np.ndarray]:
         """(3,) force of each zone on the fluid [N]."""
@@ -232,7 +275,8 @@ def _bending(mesh: Mesh, seams: np.ndarray, size: np.ndarray, method: GradientMe
     levels = len(np.unique(size[np.concatenate([yielding, resisting])], axis=0))
     return SeamGradient(method.weights(_cut_open(mesh, seams, yielding, resisting, outward), whole),
                         yielding, mesh.face_centre[seams] - mesh.cell_centre[yielding],
-                        max(levels - 1, 0))
+                        max(levels - 1, 0), resisting, mesh.skew_offset[seams],
+                        np.where(leftward, mesh.weight[seams], 1.0 - mesh.weight[seams]))
 
 
 def _cut_open(mesh: Mesh, seams: np.ndarray, yielding: np.ndarray, resisting: np.ndarray,
@@ -257,6 +301,16 @@ def _cut_open(mesh: Mesh, seams: np.ndarray, yielding: np.ndarray, resisting: np
                               - mesh.cell_centre[owners]]),
         weight=np.delete(mesh.weight, seams), warp=warp,
         boundaries={"all": slice(n - len(seams), len(kept) + len(twice))}, joined={})
+
+
+def bent(problem: Problem, state: State) -> Problem:
+    """The problem with the bends of the pressure as the state has them."""
+    zones = problem.zones
+    if zones is None:
+        return problem
+    bending = zones.bend(state.velocity, state.mass_flux, problem.case.fluid.viscosity)
+    return replace(problem, zones=replace(zones, bending=bending),
+                   pressure_gradient=replace(bending, lift=0.0))
 
 
 def without_zones(problem: Problem) -> Problem:
