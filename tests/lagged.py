@@ -35,7 +35,7 @@ class Lagged:
                 relax: Callable[..., Any]) -> Correction:
         before = own.layout.sample(problem, state.velocity, state.boundary_velocity)
         off = own.misfit(before) - own.strength / own.gain
-        misfit = own.misfit(before + own.layout.sample_change(problem, change))
+        misfit = own.misfit(before + own.layout.sample_change(change))
         scale = max(float(np.abs(own.readings.component_value).max()), 1e-300)
         return Correction(replace(own, strength=own.gain * misfit), change,
                           float(np.abs(off).max()) / scale)

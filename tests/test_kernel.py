@@ -45,7 +45,7 @@ def test_the_reading_of_its_own_kernel_is_one(kernel: Any, tetra: bool) -> None:
     for column in range(3 * len(PLACES)):
         place, axis = divmod(column, 3)
         field = layout.cell[:, [column]].toarray().reshape(-1, 3)
-        assert layout.sample_change(problem, field)[place, axis] == pytest.approx(1.0, abs=1e-12)
+        assert layout.sample_change(field)[place, axis] == pytest.approx(1.0, abs=1e-12)
 
 
 @pytest.mark.parametrize("kernel", [Gaussian(5.0), Gaussian(0.5)], ids=repr)

@@ -163,7 +163,7 @@ class Feedback:
         slack = np.divide(own.strength, own.gain, out=np.zeros_like(own.gain), where=active)
         before = own.layout.sample(problem, state.velocity, state.boundary_velocity)
         misfit = np.where(active, own.misfit(before) - slack, 0.0)
-        after = before + own.layout.sample_change(problem, change)
+        after = before + own.layout.sample_change(change)
         step = _strength_step(own, np.where(active, own.misfit(after) - slack, 0.0))
         change = change + own.response.apply(own.place_strength(step))
         scale = max(float(np.abs(own.readings.component_value).max()),

@@ -218,5 +218,5 @@ def _columns(problem: Problem, projection: Projection, layout: Layout,
         force = layout.force(unit.reshape(-1, 3))
         potential[:, k], rest[:, k] = full_potential(problem, projection, force)
         push = projected(problem, force, potential[:, k], rest[:, k])
-        answer[:, column] = layout.sample_change(problem, push.velocity).ravel()
+        answer[:, column] = layout.sample_change(push.velocity).ravel()
     return potential, rest, answer.reshape(n_places, 3, n_places, 3)

@@ -21,14 +21,14 @@ class Layout:
     """Kernels of all readings on one mesh, three directions each.
 
     ``cell`` (3 n_cells, 3 n_places) and ``drop`` (n_faces, 3 n_places) sparse, scaled so that the
-    interpolation of each kernel's own component at its reading is one.
+    interpolation of each kernel's own component at its reading is one.  ``sampling`` (3 n_places,
+    3 n_cells) is the interpolation of a velocity change, boundary values following the cells.
     """
 
     to_points: PointInterpolation
-    edges: np.ndarray
+    sampling: sparse.csr_matrix
     cell: sparse.csr_matrix
     drop: sparse.csr_matrix
-    regions: tuple[np.ndarray, ...]
 
     def force(self, strength: np.ndarray) -> Force:
         """Force of strengths (n_places, 3) [m/s^2]."""
@@ -41,25 +41,29 @@ class Layout:
         """(n_places, 3) velocity at the readings [m/s]."""
         return self.to_points(velocity, edge)
 
-    def sample_change(self, problem: Problem, change: np.ndarray) -> np.ndarray:
+    def sample_change(self, change: np.ndarray) -> np.ndarray:
         """(n_places, 3) velocity change at the readings, boundary values following the cells."""
-        edge = np.zeros((problem.mesh.n_boundary, 3))
-        edge[self.edges] = edge_change(problem, self.edges, change)
-        return self.to_points(change, edge)
+        return np.asarray(self.sampling @ change.ravel()).reshape(-1, 3)
 
 
-def edge_change(problem: Problem, rows: np.ndarray, change: np.ndarray) -> np.ndarray:
-    """(k, 3) change of the boundary velocity on some boundary faces."""
-    mesh, n = problem.mesh, problem.mesh.n_internal
-    normal, inner = mesh.face_normal[n + rows], change[mesh.left[n + rows]]
-    across = np.einsum("ij,ij->i", inner, normal)[:, None] * normal
-    table = problem.table
-    return (table.keep_tangential[rows, None] * (inner - across)
-            + table.keep_normal[rows, None] * across)
+def _sampling(problem: Problem, to_points: PointInterpolation) -> sparse.csr_matrix:
+    """See ``Layout.sampling``: cells, and the boundary faces that follow their cells."""
+    mesh, n, table = problem.mesh, problem.mesh.n_internal, problem.table
+    rows = np.unique(to_points.edges.indices)
+    normal = mesh.face_normal[n + rows]
+    block = np.eye(3) * table.keep_tangential[rows, None, None]
+    block = block + np.einsum("f,fi,fj->fij", table.keep_normal[rows] - table.keep_tangential[rows],
+                              normal, normal)
+    at = 3 * rows[:, None, None] + np.arange(3)[:, None] + np.zeros((1, 1, 3), int)
+    by = 3 * mesh.left[n + rows][:, None, None] + np.arange(3) + np.zeros((1, 3, 1), int)
+    follow = sparse.csr_matrix((block.ravel(), (at.ravel(), by.ravel())),
+                               shape=(3 * mesh.n_boundary, 3 * mesh.n_cells))
+    each = sparse.eye_array(3)
+    return sparse.csr_matrix(sparse.kron(to_points.cells, each)
+                             + sparse.kron(to_points.edges, each).tocsr() @ follow)
 
 
-def make_layout(problem: Problem, readings: Readings, kernel: Kernel, *,
-                layers: int = 4) -> Layout:
+def make_layout(problem: Problem, readings: Readings, kernel: Kernel) -> Layout:
     """Kernels of readings, balanced like the pressure gradient and scaled.
 
     Raises
@@ -76,21 +80,18 @@ def make_layout(problem: Problem, readings: Readings, kernel: Kernel, *,
                            got=error.got, remedy=error.remedy) from None
     _check_off_walls(problem, readings, to_points.home)
     near = Neighbourhood.of(mesh)
-    edges = np.unique(to_points.edges.indices)
-    cells, drops, regions = [], [], []
+    sampling = _sampling(problem, to_points)
+    cells, drops = [], []
     for place in range(len(readings)):
         where, value = kernel.shape(mesh, near, readings.point[place], int(to_points.home[place]))
-        at_cell, at_face = _columns(problem, to_points, edges, place, where, value, readings)
+        at_cell, at_face = _columns(problem, sampling, place, where, value, readings)
         cells.append(at_cell)
         drops.append(at_face)
-        regions.append(near.within(np.unique(at_cell.nonzero()[0] // 3), layers))
-    return Layout(to_points, edges, sparse.hstack(cells).tocsr(), sparse.hstack(drops).tocsr(),
-                  tuple(regions))
+    return Layout(to_points, sampling, sparse.hstack(cells).tocsr(), sparse.hstack(drops).tocsr())
 
 
-def _columns(problem: Problem, to_points: PointInterpolation, edges: np.ndarray, place: int,
-             where: np.ndarray, value: np.ndarray,
-             readings: Readings) -> tuple[sparse.csc_matrix, sparse.csc_matrix]:
+def _columns(problem: Problem, sampling: sparse.csr_matrix, place: int, where: np.ndarray,
+             value: np.ndarray, readings: Readings) -> tuple[sparse.csc_matrix, sparse.csc_matrix]:
     """Force and drop columns of one reading, scaled so that its own interpolation of them is one.
 
     The balanced force of one axis has small parts along the others; where the three answers allow,
@@ -104,10 +105,7 @@ def _columns(problem: Problem, to_points: PointInterpolation, edges: np.ndarray,
         touched, push, faces, drop = balanced_force_near(mesh, where, force)
         whole = np.zeros((mesh.n_cells, 3))
         whole[touched] = push
-        edge = np.zeros((mesh.n_boundary, 3))
-        edge[edges] = edge_change(problem, edges, whole)
-        answers[:, axis] = (to_points.cells[[place]] @ whole + to_points.edges[[place]] @ edge)[0]
-        answers[:, axis] /= np.abs(push).max()
+        answers[:, axis] = sampling[3 * place:3 * place + 3] @ whole.ravel() / np.abs(push).max()
         rows = (3 * touched[:, None] + np.arange(3)).ravel()
         columns.append(sparse.csc_matrix(
             (push.ravel() / np.abs(push).max(), (rows, np.zeros(len(rows), int))),

@@ -132,8 +132,8 @@ def sweep_response(problem: Problem, layout: Layout, pushes: Pushes, relax: Any)
     regions = tuple(np.union1d(region, force.indices[a:b] // 3).astype(np.int32) for region, a, b
                     in zip(pushes.regions, force.indptr[:-1], force.indptr[1:], strict=True))
     whole = _swept(problem, force, regions, relax)
-    return Response(velocity, _at_places(problem, layout, velocity),
-                    _at_places(problem, layout, whole), relax.count)
+    return Response(velocity, (layout.sampling @ velocity).toarray(),
+                    (layout.sampling @ whole).toarray(), relax.count)
 
 
 def _swept(problem: Problem, force: sparse.csc_matrix, regions: tuple[np.ndarray, ...],
@@ -155,11 +155,3 @@ def _swept(problem: Problem, force: sparse.csc_matrix, regions: tuple[np.ndarray
     return sparse.csr_matrix(
         (np.concatenate(values), (np.concatenate(rows), np.concatenate(columns))),
         shape=(3 * mesh.n_cells, force.shape[1]))
-
-
-def _at_places(problem: Problem, layout: Layout, velocity: sparse.csr_matrix) -> np.ndarray:
-    out = np.empty((velocity.shape[1], velocity.shape[1]))
-    for column in range(velocity.shape[1]):
-        change = velocity[:, [column]].toarray().reshape(-1, 3)
-        out[:, column] = layout.sample_change(problem, change).ravel()
-    return out
