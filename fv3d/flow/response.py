@@ -20,6 +20,7 @@ from .problem import Problem
 
 SKEWED_FROM = 1.4
 DAMPED = 0.3
+EVEN = 3.0
 
 
 @dataclass(frozen=True)
@@ -28,12 +29,14 @@ class PressureResponse:
 
     ``whole`` includes the velocity's answer; ``fine`` is that of the flux smoothing alone.
     ``decoupled``: nearly all cells are hexahedra, whose pressure gradient does not see a pressure
-    that alternates from cell to cell.
+    that alternates from cell to cell.  ``even``: the viscosity, and with it the answer of a flux,
+    varies by no more than ``EVEN`` over the domain.
     """
 
     whole: float
     fine: float
     decoupled: bool
+    even: bool = True
 
     @property
     def skewed(self) -> bool:
@@ -55,10 +58,12 @@ class PressureResponse:
     def fine_steps(self) -> tuple[float, ...]:
         """Steps of the fine-scale pressure supplement, none on a skewed mesh.
 
+        Nor on tetrahedra with layers of unlike viscosity, whose fluxes the estimate does not know.
+
         The pair damps answers between a third of the largest and the largest to a fifth; where
         the velocity answers at cell scale too (tetrahedra) one step is enough.
         """
-        if self.whole > SKEWED_FROM:
+        if self.whole > SKEWED_FROM or not (self.decoupled or self.even):
             return ()
         return (1.1 / self.fine, 2.0 / self.fine) if self.decoupled else (1.0 / self.fine,)
 
@@ -79,10 +84,11 @@ def pressure_response(problem: Problem, *, steps: int = 12) -> PressureResponse:
     """
     mesh, n = problem.mesh, problem.mesh.n_internal
     decoupled = mostly_hexahedra(mesh)
+    even = bool(problem.viscosity.max() <= EVEN * problem.viscosity.min())
     cosine = np.einsum("ij,ij->i", mesh.face_normal, mesh.delta)
     cosine /= np.linalg.norm(mesh.delta, axis=1)
     if cosine.min() > 0.996:
-        return PressureResponse(1.0, 2.0, decoupled)
+        return PressureResponse(1.0, 2.0, decoupled, even)
     g = problem.orthogonal
     outer = np.where(problem.table.pressure_given, g[n:], 0.0)
     matrix = symmetric_matrix(mesh, problem.pattern, g[:n], outer)
@@ -100,7 +106,7 @@ def pressure_response(problem: Problem, *, steps: int = 12) -> PressureResponse:
 
     whole = _largest(whole_answer, mesh.n_cells, steps)
     fine = _largest(fine_answer, mesh.n_cells, steps)
-    return PressureResponse(max(1.1 * whole, 1.0), max(1.1 * fine, 1.0), decoupled)
+    return PressureResponse(max(1.1 * whole, 1.0), max(1.1 * fine, 1.0), decoupled, even)
 
 
 def _answer(problem: Problem, pressure: np.ndarray, outer: np.ndarray,
