@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+import warnings
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 
-from ..errors import CaseError, as_number, did_you_mean
+from ..errors import CaseError, Fv3dWarning, as_number, did_you_mean
 from ..mesh.mesh import Mesh
 
 
@@ -25,6 +26,8 @@ class Resistance:
     where : function of points (n, 3) -> (n,) booleans, optional
         Cells whose centres are in the zone. None: the mesh has a zone of the name that the
         resistance is given under.
+    thickness : float, optional
+        That the coefficients were made for [m]; a zone of another thickness is warned of.
 
     Raises
     ------
@@ -41,6 +44,7 @@ class Resistance:
     linear: Any = field(default=0.0, kw_only=True)
     quadratic: Any = field(default=0.0, kw_only=True)
     where: Callable[[np.ndarray], np.ndarray] | None = field(default=None, kw_only=True)
+    thickness: float | None = field(default=None, kw_only=True, repr=False)
 
     def __post_init__(self) -> None:
         for name in ("linear", "quadratic"):
@@ -63,7 +67,7 @@ class Resistance:
         loss : float
             Loss coefficient of the whole screen.
         thickness : float
-            Thickness of its zone in the mesh [m].
+            Thickness of its zone in the mesh [m], not that of the wires.
         where : as in :class:`Resistance`
 
         Raises
@@ -72,7 +76,8 @@ class Resistance:
             A number that is not positive.
         """
         _positive("Resistance.screen", loss=loss, thickness=thickness)
-        return Resistance(quadratic=float(loss) / float(thickness), where=where)
+        return Resistance(quadratic=float(loss) / float(thickness), where=where,
+                          thickness=float(thickness))
 
     @staticmethod
     def honeycomb(*, along: Any, linear: float = 0.0, quadratic: float = 0.0,
@@ -131,6 +136,18 @@ def _positive(call: str, **numbers: Any) -> None:
                             remedy="Give a number above zero.")
 
 
+def zone_thickness(mesh: Mesh, cells: np.ndarray) -> float:
+    """Volume of a slab of cells over half of the surface it shares with other cells [m].
+
+    Infinite where a zone touches no other cell.
+    """
+    n, inside = mesh.n_internal, np.zeros(mesh.n_cells, bool)
+    inside[cells] = True
+    rim = np.flatnonzero(inside[mesh.left[:n]] != inside[mesh.right])
+    area = 0.5 * float(mesh.face_area_magnitude[rim].sum())
+    return float(mesh.cell_volume[cells].sum()) / area if area > 0 else np.inf
+
+
 def resisting_cells(mesh: Mesh, resistances: Any) -> dict[str, np.ndarray]:
     """Cells of each resistance, in the order given.
 
@@ -159,7 +176,21 @@ def resisting_cells(mesh: Mesh, resistances: Any) -> dict[str, np.ndarray]:
                             remedy="Give each cell one resistance; coefficients add up.")
         owner[cells] = k
         found[name] = cells
+        _check_thickness(mesh, name, law, cells)
     return found
+
+
+def _check_thickness(mesh: Mesh, name: str, law: Resistance, cells: np.ndarray) -> None:
+    """A screen must be as thick in the mesh as its coefficient supposes."""
+    if law.thickness is None:
+        return
+    found = zone_thickness(mesh, cells)
+    if found > 1.15 * law.thickness or 2.3 * found < law.thickness:
+        # a zone at the end of a domain has one side only: half of the area that is reckoned with
+        warnings.warn(f"The zone of the screen '{name}' is about {found:.3g} m thick in the mesh, "
+                      f"its loss was given for {law.thickness:.3g} m: the pressure lost is about "
+                      f"{found / law.thickness:.3g} times what was asked for. Give the thickness "
+                      "of the zone, not of the wires.", Fv3dWarning, stacklevel=2)
 
 
 def _cells(mesh: Mesh, name: str, law: Resistance, place: str) -> np.ndarray:

@@ -273,10 +273,17 @@ def _bending(mesh: Mesh, seams: np.ndarray, size: np.ndarray, method: GradientMe
     whole = BoundaryKnowledge(np.concatenate([known.valued, still, ~still]),
                               np.concatenate([known.flat, still, still]))
     levels = len(np.unique(size[np.concatenate([yielding, resisting])], axis=0))
-    return SeamGradient(method.weights(_cut_open(mesh, seams, yielding, resisting, outward), whole),
-                        yielding, mesh.face_centre[seams] - mesh.cell_centre[yielding],
+    opened = _cut_open(mesh, seams, yielding, resisting, outward)
+    return SeamGradient(method.weights(opened, whole),
+                        yielding, _reach(mesh, seams, yielding),
                         max(levels - 1, 0), resisting, mesh.skew_offset[seams],
                         np.where(leftward, mesh.weight[seams], 1.0 - mesh.weight[seams]))
+
+
+def _reach(mesh: Mesh, faces: np.ndarray, cells: np.ndarray) -> np.ndarray:
+    """(f, 3) from one cell of each face to its centre; a joined face lies where its left cell is."""
+    arm = mesh.face_centre[faces] - mesh.cell_centre[mesh.left[faces]]
+    return np.where((cells == mesh.left[faces])[:, None], arm, arm - mesh.delta[faces])
 
 
 def _cut_open(mesh: Mesh, seams: np.ndarray, yielding: np.ndarray, resisting: np.ndarray,
@@ -289,16 +296,15 @@ def _cut_open(mesh: Mesh, seams: np.ndarray, yielding: np.ndarray, resisting: np
     kept = np.delete(np.arange(mesh.n_faces), seams)
     twice = np.concatenate([seams, seams])
     owners = np.concatenate([yielding, resisting])
-    warp = mesh.warp
+    reach, warp = _reach(mesh, twice, owners), mesh.warp
     if mesh.warped:
         warp = np.concatenate([warp[kept], warp[twice]])
     return replace(
         mesh, face_points=np.concatenate([mesh.face_points[kept], mesh.face_points[twice]]),
         left=np.concatenate([mesh.left[kept], owners]), right=np.delete(mesh.right, seams),
         face_area=np.concatenate([mesh.face_area[kept], outward, -outward]),
-        face_centre=np.concatenate([mesh.face_centre[kept], mesh.face_centre[twice]]),
-        delta=np.concatenate([mesh.delta[kept], mesh.face_centre[twice]
-                              - mesh.cell_centre[owners]]),
+        face_centre=np.concatenate([mesh.face_centre[kept], mesh.cell_centre[owners] + reach]),
+        delta=np.concatenate([mesh.delta[kept], reach]),
         weight=np.delete(mesh.weight, seams), warp=warp,
         boundaries={"all": slice(n - len(seams), len(kept) + len(twice))}, joined={})
 
