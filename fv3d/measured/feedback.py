@@ -31,12 +31,12 @@ from .feedback_time import FeedbackInTime
 from .kernel import Gaussian, Kernel, SingleCell
 from .layout import Layout, make_layout
 from .readings import Readings, linearised_direction, predict
-from .response import SHARE_OF_ROUGH, make_pushes, sweep_response
+from .response import SHARE_OF_SINGLE, SHARE_OF_WIDE, make_pushes, sweep_response
 
 REFRESH_EARLY = (0, 2, 5, 10, 20)  # responses are renewed at these iterations,
 REFRESH_EVERY = 30                 # then at every multiple of this
 TURNED_AT = (0, 1, 2, 10, 30, 60)  # iterations at which a speed reading's direction follows
-CAUTION = 0.1                      # see Response.between; doubled while the misfit does not fall
+CAUTION = 0.1                      # see Response.between; tripled while the misfit does not fall
 BITES_FROM = 3.0                   # gain * radius / speed above which passing fluid is corrected
 
 
@@ -157,9 +157,9 @@ class Feedback:
         active = own.gain > 0
         if not active.any():
             return Correction(own, change)
-        rough = self.radius is None and not mostly_hexahedra(problem.mesh)
+        rough = SHARE_OF_SINGLE if self.radius is None else SHARE_OF_WIDE
         own = _renewed(_turned(own, problem, state), problem, relax,
-                       share=SHARE_OF_ROUGH if rough else 1.0)
+                       share=1.0 if mostly_hexahedra(problem.mesh) else rough)
         slack = np.divide(own.strength, own.gain, out=np.zeros_like(own.gain), where=active)
         before = own.layout.sample(problem, state.velocity, state.boundary_velocity)
         misfit = np.where(active, own.misfit(before) - slack, 0.0)
@@ -217,11 +217,11 @@ def _renewed(own: FeedbackState, problem: Problem, relax: Any, *,
 
 
 def _caution(own: FeedbackState) -> float:
-    """Doubled where the misfit of the last iterations is no smaller than that before them."""
+    """Tripled where the misfit of the last iterations is no smaller than that before them."""
     half = len(own.seen) // 2
     if half < 5 or sum(own.seen[half:]) < 0.8 * sum(own.seen[:half]):
         return own.caution
-    return min(2.0 * own.caution, 1.0)
+    return min(3.0 * own.caution, 1.0)
 
 
 def _strength_step(own: FeedbackState, error: np.ndarray) -> np.ndarray:

@@ -20,8 +20,9 @@ from .layout import Layout
 
 POTENTIAL_TO = 1e-2  # residual reduction of the potentials
 KEPT_FROM = 0.01     # share of a column's largest force below which it is dropped
-SHARE_OF_ROUGH = 0.5  # share of the potentials of forces in single cells that are no hexahedra:
-                     # more can diverge, less converges more slowly (found by trial)
+# Share of the potentials that is put into the pressure on meshes of other cells than hexahedra, for
+# forces of single cells and for wide ones: more can diverge, less is slower (found by trial).
+SHARE_OF_SINGLE, SHARE_OF_WIDE = 0.5, 0.7
 
 
 @dataclass(frozen=True, eq=False)
