@@ -123,3 +123,13 @@ def test_a_flow_that_is_not_met_yet_counts_as_misfit() -> None:
 def test_flows_that_cannot_be(sides: dict[str, Any]) -> None:
     with pytest.raises(BoundaryError):
         make_problem(crossing(**sides))
+
+
+def test_an_outlet_that_draws_fluid_in_is_told() -> None:
+    mesh = box((0, 0, 0), (1, 1, 1), cells=(6, 4, 4))
+    sides: dict[str, Any] = {name: fv3d.Wall() for name in mesh.boundaries}
+    sides |= {"x_min": fv3d.Inlet((1.0, 0, 0)), "x_max": fv3d.Outlet(0.0),
+              "y_max": fv3d.Outlet(-9.0)}
+    case = fv3d.Case(mesh, fv3d.Fluid(density=1.2, viscosity=0.012), boundaries=sides)
+    with pytest.warns(fv3d.Fv3dWarning, match="'x_max' draws"):
+        fv3d.solve_steady(case, tolerance=1e-4, max_iterations=300, progress=False)

@@ -22,7 +22,7 @@ from .monitors import Monitor, Series
 from .outlets import at_levels
 from .problem import Problem, State
 from .progress import Progress, TimeProgress
-from .run import Run, reverse_flow_share
+from .run import Run, drawing_outlets, reverse_flow_share
 
 Advance = Callable[[Problem, State, Workspace], tuple[State, Record]]
 Stop = Callable[[list[Record]], Outcome | None]
@@ -147,6 +147,10 @@ def report(run: Run) -> None:
                               got=run.outcome.sentence, remedy=run.outcome.next_step)
     if not run.outcome.good:
         warnings.warn(f"Run '{run.name}' ended with {run.outcome}", Fv3dWarning, stacklevel=4)
+    for name, flow in drawing_outlets(run).items():
+        warnings.warn(f"Run '{run.name}': the outlet '{name}' draws {flow:.4g} kg/s in, beside an "
+                      "inlet. Check its pressure, or the flows given to the others.",
+                      Fv3dWarning, stacklevel=4)
     share = reverse_flow_share(run)
     if share > 1e-3:
         warnings.warn(f"Run '{run.name}': {share:.1%} of the outlet flux flows inwards. Move the "

@@ -161,6 +161,18 @@ def reverse_flow_share(run: Run) -> float:
     return back / total if total > 0 else 0.0
 
 
+def drawing_outlets(run: Run) -> dict[str, float]:
+    """Net inflow through outlets [kg/s] where an inlet is there to supply the flow."""
+    mesh, n, given = run.mesh, run.mesh.n_internal, run.problem.table.pressure_given
+    supplied = -float(np.minimum(np.where(given, 0.0, run.mass_flux[n:]), 0.0).sum())
+    found = {}
+    for name, faces in mesh.boundaries.items():
+        net = float(run.mass_flux[faces].sum())
+        if given[faces.start - n:faces.stop - n].any() and -net > 0.01 * supplied > 0.0:
+            found[name] = -net
+    return found
+
+
 def renamed(run: Run, name: str) -> Run:
     """The same run under another name."""
     return replace(run, name=name)

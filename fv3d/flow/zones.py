@@ -281,7 +281,7 @@ def _bending(mesh: Mesh, seams: np.ndarray, size: np.ndarray, method: GradientMe
 
 
 def _reach(mesh: Mesh, faces: np.ndarray, cells: np.ndarray) -> np.ndarray:
-    """(f, 3) from one cell of each face to its centre; joined faces lie where their left cell is."""
+    """(f, 3) from one cell of each face to its centre; joined faces lie at their left cells."""
     arm = mesh.face_centre[faces] - mesh.cell_centre[mesh.left[faces]]
     return np.where((cells == mesh.left[faces])[:, None], arm, arm - mesh.delta[faces])
 
