@@ -121,7 +121,7 @@ def strouhal_number(frequency: Estimate, *, length: float, speed: float, length_
     Raises
     ------
     CaseError
-        A length or speed that is not positive.
+        A frequency that is no :class:`Estimate`, a length or speed that is not positive.
 
     Notes
     -----
@@ -133,6 +133,11 @@ def strouhal_number(frequency: Estimate, *, length: float, speed: float, length_
     >>> print(f"{st.value:.2f} {st.std:.3f}")
     0.30 0.003
     """
+    if not isinstance(frequency, Estimate):
+        raise CaseError("The frequency must be an estimate.", where="strouhal_number(frequency)",
+                        got=repr(frequency)[:60],
+                        remedy="Give what dominant_frequency(...) returned, or "
+                               "Estimate(3.0, 0.03, 'given', 'Hz').")
     if not (length > 0 and speed > 0):
         raise CaseError("Length and speed must be positive.", where="strouhal_number(...)",
                         got=f"length {length}, speed {speed}", remedy="Give them in m and m/s.")
@@ -281,7 +286,11 @@ def _pair(values: np.ndarray, reference: np.ndarray, where: str) -> tuple[np.nda
 
 
 def _record(time: np.ndarray, values: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    time, values = np.asarray(time, dtype=float), np.asarray(values, dtype=float)
+    try:
+        time, values = np.asarray(time, dtype=float), np.asarray(values, dtype=float)
+    except (TypeError, ValueError):
+        raise CaseError("A record is made of numbers.", where="signals", got=repr(values)[:60],
+                        remedy="Pass one component at one point.") from None
     if time.ndim != 1 or time.shape != values.shape or len(time) < 16:
         raise CaseError("A record is two columns of one length, 16 samples at least.",
                         where="signals", got=f"shapes {time.shape} and {values.shape}",

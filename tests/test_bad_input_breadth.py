@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -52,6 +53,13 @@ def scalar(**changed: Any) -> fv3d.ScalarField:
 def inlet(points: np.ndarray) -> fv3d.Case:
     """A case fed by a table of these points."""
     return case(boundaries=boundaries(x_min=fv3d.Inlet(fv3d.InletTable(points, points + 1.0))))
+
+
+def damaged(folder: Path) -> Path:
+    """The index of a series, cut off."""
+    path = folder / "damaged.pvd"
+    path.write_text('<?xml version="1.0"?><VTKFile type="Collection"><Coll')
+    return path
 
 
 TABLE: dict[str, tuple[type[Fv3dError], Bad]] = {
@@ -198,6 +206,25 @@ TABLE: dict[str, tuple[type[Fv3dError], Bad]] = {
         (CaseError, lambda d: fv3d.profile(run(), **LINE | {"end": (5.0, 0.5, 0.5)})),
     "profile: misses the mesh": (CaseError, lambda d: fv3d.profile(
         run(), **LINE | {"start": (5.0, 5.0, 5.0), "end": (6.0, 5.0, 5.0), "gaps": True})),
+    # verbs
+    "steady: tolerance a text": (CaseError, lambda d: steady(tolerance="1e-5", progress=True)),
+    "steady: limit a text": (CaseError, lambda d: steady(max_iterations="3")),
+    "transient: class of step": (CaseError, lambda d: fv3d.solve_transient(
+        case(), time_step=fv3d.CourantStep, end_time=1.0)),  # type: ignore[arg-type]
+    "transient: no case": (CaseError, lambda d: fv3d.solve_transient(
+        None, time_step=0.1, end_time=1.0)),  # type: ignore[arg-type]
+    "transient: end a text": (CaseError, lambda d: fv3d.solve_transient(
+        case(), time_step=0.1, end_time="1")),  # type: ignore[arg-type]
+    "monitors: one name twice": (CaseError, lambda d: steady(monitors=[
+        fv3d.ForceMonitor("x_min", name="a"), fv3d.FlowRateMonitor("x_min", name="a")])),
+    "history: a mean": (CaseError, lambda d: fv3d.plot_history(
+        replace(run(), history={"iteration": np.arange(0)}), d / "h.png")),
+    "strip: damaged index": (FileError, lambda d: fv3d.frame_strip(damaged(d), d / "x.png")),
+    "checkpoint: a number":
+        (FileError, lambda d: fv3d.read_checkpoint(3)),  # type: ignore[arg-type]
+    "strouhal: bare number": (CaseError, lambda d: fv3d.strouhal_number(
+        1.0, length=1.0, speed=1.0)),  # type: ignore[arg-type]
+    "mean: a text": (CaseError, lambda d: fv3d.mean_value("abc" * 9)),  # type: ignore[arg-type]
 }
 
 

@@ -94,6 +94,9 @@ def read_checkpoint(path: str | os.PathLike[str]) -> Stored:
     FileError
         No such file; a file that is cut off, changed, of another kind or another version.
     """
+    if not isinstance(path, str | os.PathLike):
+        raise FileError("A checkpoint is read from its file.", where="read_checkpoint(path)",
+                        got=repr(path)[:60], remedy="Give the path that Checkpoint(path) had.")
     target = Path(path)
     try:
         with np.load(io.BytesIO(target.read_bytes()), allow_pickle=False) as archive:
@@ -238,12 +241,19 @@ def begin(problem: Problem, workspace: Workspace, *, start: Any, fresh: Callable
     Raises
     ------
     CaseError
-        ``checkpoint`` is none, or ``start`` one that belongs to another case.
+        ``checkpoint`` is none, ``start`` one that belongs to another case, or two monitors have
+        one name.
     """
     if not (checkpoint is None or isinstance(checkpoint, Checkpoint)):
         raise CaseError("This is no checkpoint.", where="solve_...(checkpoint=)",
                         got=type(checkpoint).__name__,
                         remedy="Give Checkpoint(path, every=100).")
+    names = [monitor.name for monitor in monitors]
+    twice = [one for one in names if names.count(one) > 1]
+    if twice:
+        raise CaseError("Two monitors have one name; the series of one would be lost.",
+                        where="solve_...(monitors=)", got=repr(twice[0]),
+                        remedy="Give each monitor a name of its own.")
     stored = start if isinstance(start, Stored) else None
     marks = fingerprint(problem, workspace.pseudo_step) if checkpoint or stored else {}
     if stored is None:

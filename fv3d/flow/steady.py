@@ -158,11 +158,13 @@ def _iterate_to_end(case: Case, tolerance: float, max_iterations: int,
 
 
 def _check_limits(tolerance: float, max_iterations: int) -> None:
-    if not 0.0 < as_number(tolerance) < np.inf:
+    if isinstance(tolerance, str) or not 0.0 < as_number(tolerance) < np.inf:
         raise CaseError("The tolerance must be positive.", where="solve_steady(tolerance=)",
-                        got=tolerance, remedy="Give 1e-6, say.")
-    if not (as_number(max_iterations) >= 1 and as_number(max_iterations) % 1 == 0):
-        raise CaseError("The limit of iterations is a whole number from 1.", got=max_iterations,
-                        where="solve_steady(max_iterations=)", remedy="Give 2000, say.")
+                        got=repr(tolerance), remedy="Give the number 1e-6, say.")
+    whole = as_number(max_iterations) >= 1 and as_number(max_iterations) % 1 == 0
+    if isinstance(max_iterations, str) or not whole:
+        raise CaseError("The limit of iterations is a whole number from 1.",
+                        got=repr(max_iterations), where="solve_steady(max_iterations=)",
+                        remedy="Give 2000, say.")
 
 

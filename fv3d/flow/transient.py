@@ -69,6 +69,9 @@ def solve_transient(case: Case, *, time_step: float | StepSize, end_time: float,
     DivergenceError
         The fields stopped being finite; carries the last finite run.
     """
+    if not isinstance(case, Case):
+        raise CaseError("A run in time needs a case.", where="solve_transient(case)",
+                        got=repr(case)[:60], remedy="Give Case(mesh, fluid, boundaries=...).")
     sizes = _checked(time_step, end_time, outer_iterations)
     check_kind(monitors, ("see",), "monitors")
     check_kind(sources, (), "sources")
@@ -109,6 +112,15 @@ def solve_transient(case: Case, *, time_step: float | StepSize, end_time: float,
 
 
 def _checked(time_step: Any, end_time: Any, outer_iterations: Any) -> StepSize:
+    if isinstance(time_step, type):
+        raise CaseError("The time step is a class, not an object of it.", got=time_step.__name__,
+                        where="solve_transient(time_step=)",
+                        remedy="Give CourantStep(0.8), with brackets, or seconds.")
+    for label, value in (("time_step", time_step), ("end_time", end_time),
+                         ("outer_iterations", outer_iterations)):
+        if isinstance(value, str):
+            raise CaseError("This is a text, not a number.", got=repr(value),
+                            where=f"solve_transient({label}=)", remedy="Leave the quotes out.")
     sizes: StepSize = time_step if callable(getattr(time_step, "size", None)) \
         else FixedStep(as_number(time_step))
     for label, value in (("time_step", sizes.seconds if isinstance(sizes, FixedStep) else 1.0),

@@ -66,12 +66,16 @@ def plot_history(run: Any, path: PathLike) -> Path:
     Raises
     ------
     CaseError
-        No run.
+        No run, or one without residuals, such as a mean.
     FileError
         The picture cannot be written.
     """
     expect_run(run, "plot_history(run, path)")
     target, history = target_path(path, (".png",)), run.history
+    if "momentum" not in history:
+        raise CaseError("This run has no residuals: it was not iterated.", got=run.name,
+                        where="plot_history(run, path)",
+                        remedy="Give the run that the mean was taken of.")
     iteration = history["iteration"]
     across, label = _axis(history.get("time", np.full(len(iteration), np.nan)), iteration)
     figure, panels = _panels(1, f"{run.name}: {run.outcome.name}", label)

@@ -131,6 +131,8 @@ def frame_strip(source: PathLike, path: PathLike, *, frames: int = 6,
     CaseError
         Fewer than one frame, a plane that does not cut the mesh.
     """
+    from xml.etree import ElementTree
+
     import pyvista as pv
     target = target_path(path, (".png",))
     if not os.path.isfile(source):
@@ -139,8 +141,13 @@ def frame_strip(source: PathLike, path: PathLike, *, frames: int = 6,
     if not as_number(frames) >= 1:
         raise CaseError("A strip has one frame at least.", where="frame_strip(frames=)",
                         got=frames, remedy="Give 6, say.")
-    reader = pv.get_reader(os.fspath(source))
-    times = np.array(reader.time_values)
+    try:
+        reader = pv.get_reader(os.fspath(source))
+        times = np.array(reader.time_values)
+    except (ElementTree.ParseError, ValueError, KeyError, TypeError, AttributeError) as error:
+        raise FileError("The index of the series cannot be read.", where=str(source),
+                        got=f"{type(error).__name__}: {error}",
+                        remedy="Give the .pvd file that VtkSeries wrote, undamaged.") from error
     chosen = np.unique(np.linspace(0, len(times) - 1, int(frames)).round().astype(int))
     cuts = []
     for k in chosen:
