@@ -40,6 +40,7 @@ PROFILE: dict[str, Any] = {"fluid": AIR, "mean_speed": 1.0}
 PLANE = np.array([[0.0, 0.0, 0.0], [0.0, 1.0, 0.0], [0.0, 0.0, 1.0], [0.0, 1.0, 1.0]])
 
 
+NONE: Any = None
 VALUES = {b: fv3d.ScalarValue(0.0) for b in MESH.boundaries}
 SCALAR: dict[str, Any] = {"diffusivity": 1.0, "tolerance": 1e-8, "max_iterations": 50,
                           "boundaries": VALUES}
@@ -225,6 +226,20 @@ TABLE: dict[str, tuple[type[Fv3dError], Bad]] = {
     "strouhal: bare number": (CaseError, lambda d: fv3d.strouhal_number(
         1.0, length=1.0, speed=1.0)),  # type: ignore[arg-type]
     "mean: a text": (CaseError, lambda d: fv3d.mean_value("abc" * 9)),  # type: ignore[arg-type]
+    "join: no mesh": (MeshError, lambda d: fv3d.join_periodic(NONE, {"x_min": "x_max"})),
+    "join: no pairs": (MeshError, lambda d: fv3d.join_periodic(MESH, NONE)),
+    "pressure drop: no run": (CaseError, lambda d: fv3d.pressure_drop(None, "x")),
+    "mean run: no run": (CaseError, lambda d: fv3d.mean_run(NONE, name="m")),
+    "check: no mesh": (MeshError, lambda d: fv3d.check_mesh(NONE)),
+    "map: no mesh": (MeshError, lambda d: fv3d.boundary_map(NONE)),
+    "skew: no mesh": (MeshError, lambda d: fv3d.skewed(NONE, 0.1)),
+    "surface: list in a list": (CaseError, lambda d: fv3d.write_surface(
+        run(), [["y_min"]], path=d / "a.vtp")),  # type: ignore[list-item]
+    "resistance: place that raises": (CaseError, lambda d: steady(of=case(resistances={
+        "q": fv3d.Resistance(linear=1.0, where=lambda x: x.q)}))),  # type: ignore[attr-defined]
+    "inlet: factor that raises": (CaseError, lambda d: fv3d.solve_transient(
+        case(boundaries=boundaries(x_min=fv3d.Inlet((1.0, 0, 0), factor=lambda t: 1 / 0))),
+        time_step=0.1, end_time=1.0, progress=False)),
 }
 
 
@@ -240,6 +255,12 @@ def test_bad_input_ends_in_our_own_words(kind: str, tmp_path: Path,
     error = caught.value
     assert error.what.strip() and error.where.strip() and error.remedy.strip()
     assert error.what in str(error) and error.remedy in str(error)
+
+
+def test_the_failure_of_a_factor_is_kept_as_cause() -> None:
+    with pytest.raises(CaseError, match="x_min") as caught:
+        TABLE["inlet: factor that raises"][1](Path())
+    assert isinstance(caught.value.__cause__, ZeroDivisionError)
 
 
 def test_good_input_passes(tmp_path: Path) -> None:

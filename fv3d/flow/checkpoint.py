@@ -147,7 +147,14 @@ def fingerprint(problem: Problem, pseudo_step: Any) -> dict[str, str]:
 
 
 def _factors(function: Any) -> list[float] | None:
-    return None if function is None else [float(function(moment)) for moment in MOMENTS]
+    if function is None:
+        return None
+    try:
+        return [float(function(moment)) for moment in MOMENTS]
+    except Exception as error:
+        raise CaseError("A factor in time failed.", where=f"at one of the times {MOMENTS} s",
+                        got=f"{type(error).__name__}: {error}",
+                        remedy="Return one finite number for every time.") from error
 
 
 @dataclass(eq=False)

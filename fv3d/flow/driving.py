@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from ..errors import CaseError
+from ..errors import CaseError, expect_run
 from ..mesh.mesh import Mesh
 from .periodic import Periodic
 from .problem import Correction, Force, Problem, State
@@ -153,6 +153,7 @@ def pressure_drop(run: Any, name: str) -> float:
     CaseError
         No driven periodic pair of this name.
     """
+    expect_run(run, "pressure_drop(run, name)")
     drives = {source.name: own for source, own in
               zip(run.problem.sources, run.state.sources, strict=True) if isinstance(source, Drive)}
     if name not in drives:

@@ -201,7 +201,13 @@ def _cells(mesh: Mesh, name: str, law: Resistance, place: str) -> np.ndarray:
                             remedy="Name a zone of the mesh, or give Resistance(where=function "
                                    f"of points).{did_you_mean(name, mesh.zones)}")
         return np.asarray(mesh.zones[name])
-    inside = np.asarray(law.where(mesh.cell_centre.copy()))
+    try:
+        inside = np.asarray(law.where(mesh.cell_centre.copy()))
+    except Exception as error:
+        raise CaseError("The place of a resistance failed.", where=f"{place}, where=",
+                        got=f"{type(error).__name__}: {error}",
+                        remedy="Mend the function; it is called with points (n, 3) [m], "
+                               "x[:, 0] is x.") from error
     if inside.shape != (mesh.n_cells,) or inside.dtype != bool or not inside.any():
         raise CaseError("The place of a resistance is one boolean per point, some of them true.",
                         where=f"{place}, where=", remedy="Check units and place.",

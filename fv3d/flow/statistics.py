@@ -12,7 +12,7 @@ from typing import Any
 
 import numpy as np
 
-from ..errors import CaseError, Outcome, as_number
+from ..errors import CaseError, Outcome, as_number, expect_run
 from .coupling import Record
 from .problem import Problem, State
 from .run import Run
@@ -137,6 +137,7 @@ def mean_run(run: Run, *, name: str) -> Run:
     CaseError
         No such monitor, or one that saw no step.
     """
+    expect_run(run, "mean_run(run, name=)")
     found = run.series.get(name)
     if not isinstance(found, FieldStatistics) or found.steps == 0:
         raise CaseError("There is no mean of this name.", where="mean_run(run, name=)",

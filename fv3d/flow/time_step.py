@@ -328,7 +328,12 @@ def problem_at(problem: Problem, time: float) -> Problem:
 
 
 def _factor(function: Any, what: str, time: float) -> float:
-    factor = as_number(function(time))
+    try:
+        factor = as_number(function(time))
+    except Exception as error:
+        raise CaseError("A factor in time failed.", where=f"{what} at {time:g} s",
+                        got=f"{type(error).__name__}: {error}",
+                        remedy="Mend the function; it is called with the time [s].") from error
     if not np.isfinite(factor):
         raise CaseError("A factor in time is not a finite number.", where=f"{what} at {time:g} s",
                         got=factor, remedy="Return one finite number for every time of the run.")

@@ -181,18 +181,21 @@ class Feedback:
         how = "given" if self.gain is not None else "5 local speed / radius"
         lines = [f"feedback   {own.readings.n_components} values at {len(own.readings)} places, "
                  f"{width}, gain {span} 1/s ({how})"]
+        if not gain.any():
+            return [*lines, "           gain zero: nothing is fed",
+                    *(f"           {sentence}" for sentence in own.advice)]
         misfit = np.divide(own.strength, gain, out=np.zeros_like(gain), where=gain > 0)
         share = np.sqrt(np.mean((misfit / own.readings.component_std) ** 2))
         lines.append(f"           misfit at fed readings {np.sqrt(np.mean(misfit ** 2)):.3g} m/s "
                      f"rms, {share:.2g} standard deviations (no evidence: these were fed)")
-        if share < 0.3 and gain.any():
+        if share < 0.3:
             lines.append("           the fed readings are met far closer than their uncertainty: "
                          "a lower gain would not fit their noise")
         if share > 3.0:
             lines.append("           the fed readings are NOT met: they contradict each other, "
                          "lie on a wall or in other units, or the gain is low")
         lines += [f"           {sentence}" for sentence in own.advice]
-        if self.radius is not None and gain.any():
+        if self.radius is not None:
             bite = gain * self.radius / own.speed[own.readings.component_place]
             if bite.min() < BITES_FROM:
                 lines.append(f"           gain * radius / speed is {bite.min():.2g} at one "

@@ -6,7 +6,7 @@ from collections.abc import Mapping, Sequence
 
 import numpy as np
 
-from ..errors import MeshError
+from ..errors import MeshError, as_number, expect_mesh
 from .blocks import Block, hexes_of_blocks, mesh_of_hexes
 from .cut import cut_hexes
 from .grading import Grading, line
@@ -134,7 +134,8 @@ def skewed(mesh: Mesh, share: float, *, seed: int = 0) -> Mesh:
     MeshError
         The share is out of range, or a cell turns inside out.
     """
-    if not 0.0 <= share < 0.5:
+    expect_mesh(mesh, "skewed(mesh, share)")
+    if isinstance(share, str) or not 0.0 <= as_number(share) < 0.5:
         raise MeshError("The skew is out of range.", where="skewed", got=share,
                         remedy="Give a share from 0 to below 0.5.")
     shortest = np.full(len(mesh.points), np.inf)

@@ -8,7 +8,7 @@ from types import MappingProxyType
 
 import numpy as np
 
-from ..errors import MeshError
+from ..errors import MeshError, expect_mesh
 from .mesh import Mesh, Pair, read_only, with_geometry
 
 TOLERANCE = 1e-4  # of the size of a face: how far matching points may lie apart
@@ -50,6 +50,11 @@ def join_periodic(mesh: Mesh, pairs: Mapping[str, str]) -> Mesh:
         A name that is no boundary, faces that do not fall upon those of the partner, fewer than
         three cells from one boundary to the other.
     """
+    expect_mesh(mesh, "join_periodic(mesh, pairs)")
+    if not isinstance(pairs, Mapping):
+        raise MeshError("Pairs are given as a mapping of one boundary to its partner.",
+                        where="join_periodic(pairs)", got=repr(pairs)[:60],
+                        remedy="Give {'left': 'right'}, with curly brackets.")
     matches = [_match(mesh, name, partner) for name, partner in pairs.items()]
     points = np.array(mesh.points)
     for match in matches:

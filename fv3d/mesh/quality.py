@@ -93,6 +93,7 @@ def check_mesh(mesh: Mesh, *, source: str = "mesh") -> None:
     MeshError
         Names the worst cell and its place.
     """
+    expect_mesh(mesh, "check_mesh(mesh)")
     bad = np.flatnonzero(~(mesh.cell_volume > 0))
     if bad.size:
         _refuse(mesh, int(bad[0]), f"{bad.size} cell(s) have no positive volume.", source,

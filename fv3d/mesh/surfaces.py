@@ -9,7 +9,7 @@ import numpy as np
 import scipy.sparse as sparse
 from scipy.sparse.csgraph import connected_components
 
-from ..errors import Fv3dWarning, MeshError, as_number
+from ..errors import Fv3dWarning, MeshError, as_number, expect_mesh
 from .mesh import Mesh
 from .topology import face_keys, local_faces, match_faces, pair_faces
 
@@ -96,6 +96,7 @@ def boundary_map(mesh: Mesh) -> str:
         For each boundary its faces, area [m^2], mean normal (shorter than one where the
         boundary is curved, zero where it is closed) and centre [m].
     """
+    expect_mesh(mesh, "boundary_map(mesh)")
     width = max([8, *(len(name) for name in mesh.boundaries)])
     lines = [f"{'boundary':<{width}}  {'faces':>8}  {'area [m^2]':>12}  {'mean normal':<21}  "
              "centre [m]"]

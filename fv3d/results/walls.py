@@ -78,10 +78,11 @@ def write_surface(run: Run, names: Sequence[str], *, path: PathLike) -> Path:
 
 
 def _listed(names: Any, where: str) -> Sequence[str]:
-    if not isinstance(names, Sequence) or not len(names) or len(set(names)) < len(names):
+    whole = isinstance(names, Sequence) and all(isinstance(name, str) for name in names)
+    if not whole or not len(names) or len(set(names)) < len(names):
         raise CaseError("The boundaries must be a list of different names.", where=where,
                         got=repr(names), remedy="Give ['strut', 'floor'], say.")
-    return names
+    return list(names)
 
 
 def _polygons(points: np.ndarray, corners: np.ndarray) -> Any:
