@@ -263,6 +263,19 @@ def test_the_failure_of_a_factor_is_kept_as_cause() -> None:
     assert isinstance(caught.value.__cause__, ZeroDivisionError)
 
 
+def test_a_gain_of_zero_claims_no_misfit() -> None:
+    law = fv3d.Feedback(readings(), radius=0.6, gain=0.0)
+    sheet = str(steady(tolerance=1e-3, sources=[law]))
+    assert "gain zero: nothing is fed" in sheet and "misfit at fed readings" not in sheet
+
+
+def test_a_monitor_used_again_starts_afresh() -> None:
+    kept = fv3d.FlowRateMonitor("x_min", name="in")
+    first, second = (steady(tolerance=1e-2, monitors=[kept]) for _ in range(2))
+    for one in (first, second):
+        assert np.array_equal(one.series["in"].iteration, one.history["iteration"] + 1)
+
+
 def test_good_input_passes(tmp_path: Path) -> None:
     """The same calls with nothing wrong: what is refused above is the one wrong thing."""
     reference = fv3d.Reference(**REFERENCE)

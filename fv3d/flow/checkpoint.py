@@ -266,6 +266,9 @@ def begin(problem: Problem, workspace: Workspace, *, start: Any, fresh: Callable
     if stored is None:
         state, records, seconds = fresh(), list[Record](), 0.0
         began = state.time
+        for monitor in monitors:
+            if state.older is None and hasattr(monitor, "restart"):
+                monitor.restart()  # a run that goes on in time goes on with its series
     else:
         state, records = restored(stored, problem, workspace, clock=clock, monitors=monitors,
                                   fingerprint=marks)

@@ -68,6 +68,10 @@ class Keeper:
         return Series(np.array([count for count, _, _ in self._rows], dtype=int),
                       np.array([time for _, time, _ in self._rows], dtype=float), columns)
 
+    def restart(self) -> None:
+        """Forget what was kept: another run begins."""
+        self._rows = []
+
     def stored(self) -> dict[str, Any]:
         """What was kept, for a checkpoint."""
         series = self.series()

@@ -111,6 +111,10 @@ class MeanMonitor:
                                kept["mass_flux"].copy(), kept["boundary_velocity"].copy(),
                                kept["weight"], kept["steps"])
 
+    def restart(self) -> None:
+        """Forget the sums: another run begins."""
+        self._kept = {"weight": 0.0, "steps": 0}
+
     def stored(self) -> dict[str, Any]:
         """The sums, for a checkpoint."""
         return self._kept
@@ -220,6 +224,10 @@ class PhaseMonitor:
         return PhaseAverage(phase, np.where(full[:, None, None], kept["velocity"], np.nan),
                             np.where(full[:, None], kept["pressure"], np.nan),
                             kept["weight"].copy())
+
+    def restart(self) -> None:
+        """Forget the averages: another run begins."""
+        self._kept = {}
 
     def stored(self) -> dict[str, Any]:
         """The averages, for a checkpoint."""

@@ -98,6 +98,10 @@ class VtkSeries:
         folder = self.path.parent
         return FieldFiles(np.array(self._time), tuple(str(folder / file) for file in self._files))
 
+    def restart(self) -> None:
+        """Begin a new index: another run begins."""
+        self._time, self._files, self._next = [], [], 0.0
+
     def stored(self) -> dict[str, Any]:
         """What was written, for a checkpoint."""
         return {"time": list(self._time), "files": list(self._files), "next": float(self._next)}
