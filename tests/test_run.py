@@ -85,7 +85,9 @@ def test_a_signal_from_the_keyboard_keeps_the_run(tmp_path: Any) -> None:
 
 
 def test_a_monitor_may_stop_the_run(case: fv3d.Case) -> None:
-    stopped = steady(case, monitors=[Watch(10**9, None), Watch(5, lambda: "Seen enough.")])
+    idle, stopper = Watch(10**9, None), Watch(5, lambda: "Seen enough.")
+    idle.name = "idle"
+    stopped = steady(case, monitors=[idle, stopper])
     assert stopped.outcome.name == "stopped by monitor" and stopped.outcome.good
     assert "Seen enough." in str(stopped.outcome)
     assert len(stopped.history["iteration"]) == 5
