@@ -7,6 +7,11 @@ period of N iterations that images the shedding keeps ``N a / (1 - a)``; one mad
 keeps N.  At the usual relaxation of 0.9 a coarse mesh of the family converges, and repeats to the
 last bit without the watch for oscillation, while the fine one oscillates.
 
+The image is a distorted one.  The pseudo-steps' periods are 14 to 30 % longer than that in time and
+tend to it only slowly.  Larger relaxation factors leave the rule: 0.85 (25 iterations a period)
+gave a product of 143, 0.9 one of 158, against 112 to 121 here.  And the mesh must be coarse to
+converge: one of 3011 cells oscillates at 0.9 too, the coarse one of 896 at 0.7 and 0.8.
+
 Writes ``oscillation.png`` and ``records.csv``.  Takes about five minutes on one core.
 """
 
