@@ -33,6 +33,12 @@ def estimate(problem: Problem, max_iterations: int) -> tuple[float, float]:
     return memory, one * GRADIENTS_PER_ITERATION * max_iterations / 60.0
 
 
+def _bar(name: str) -> Any:
+    from tqdm import tqdm
+    return tqdm(total=100.0, desc=name, unit="%", file=sys.stderr, leave=False,
+                bar_format="{desc}: {percentage:3.0f}%|{bar:24}| {postfix}", mininterval=0.5)
+
+
 class Progress:
     """Progress bar of an iteration; counts decades of the residual towards the tolerance."""
 
@@ -47,13 +53,10 @@ class Progress:
 
     def __enter__(self) -> Progress:
         if self._shown:
-            from tqdm import tqdm
             memory, minutes = estimate(self._problem, self._limit)
             print(f"{self._name}: {self._problem.mesh.n_cells} cells, about {memory:.2g} GiB, at "
                   f"most {minutes:.2g} min for {self._limit} iterations", file=sys.stderr)
-            self._bar = tqdm(total=100.0, desc=self._name, unit="%", file=sys.stderr, leave=False,
-                             bar_format="{desc}: {percentage:3.0f}%|{bar:24}| {postfix}",
-                             mininterval=0.5)
+            self._bar = _bar(self._name)
         self._began = time.perf_counter()
         return self
 
@@ -91,12 +94,9 @@ class TimeProgress:
 
     def __enter__(self) -> TimeProgress:
         if self._shown:
-            from tqdm import tqdm
             print(f"{self._name}: {self._problem.mesh.n_cells} cells, about {self._steps} steps to "
                   f"{self._end:g} s", file=sys.stderr)
-            self._bar = tqdm(total=100.0, desc=self._name, unit="%", file=sys.stderr, leave=False,
-                             bar_format="{desc}: {percentage:3.0f}%|{bar:24}| {postfix}",
-                             mininterval=0.5)
+            self._bar = _bar(self._name)
         self._began = time.perf_counter()
         return self
 
