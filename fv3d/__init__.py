@@ -16,6 +16,7 @@ from .errors import (
 )
 from .flow.boundary import Inlet, Outlet, Slip, Symmetry, Wall
 from .flow.checkpoint import Checkpoint, read_checkpoint
+from .flow.coarser import CoarserMeshes
 from .flow.developed import DevelopedProfile, developed_profile
 from .flow.driving import pressure_drop
 from .flow.fluid import Fluid, moist_air, water
@@ -79,25 +80,25 @@ from .signals import (
 
 __all__ = [
     "SIMPLE", "SIMPLEC", "WALE", "BarthJespersen", "Blended", "BoundaryError", "BoundaryForce",
-    "ByAnisotropy", "Case", "CaseError", "Central", "Checkpoint", "Classical", "Comparison",
-    "CourantStep", "DevelopedProfile", "DivergenceError", "Estimate", "Feedback", "FieldStatistics",
-    "FileError", "FlowOutlet", "FlowRateMonitor", "FlowSplit", "Fluid", "ForceBudget",
-    "ForceCoefficients", "ForceMonitor", "Fv3dError", "Fv3dWarning", "GlobalStep", "GreenGauss",
-    "Inlet", "InletTable", "LeastSquares", "LimitedUpwind", "LocalStep", "MeanMonitor", "Mesh",
-    "MeshError", "MichalakOllivierGooch", "MomentumBudget", "Numerics", "OneSided", "Outcome",
-    "Outlet", "Periodic", "PhaseAverage", "PhaseMonitor", "PointMonitor", "Profile", "ReadingError",
-    "ReadingMonitor", "Readings", "Reference", "Resistance", "Reversals", "Run", "ScalarField",
-    "ScalarFlux", "ScalarValue", "SecondOrderUpwind", "Slip", "SmoothedAggregation", "Spacing",
-    "Symmetry", "TimedComparison", "TwoSided", "Uniform", "Upwind", "VtkSeries", "Wall",
-    "backward_step", "boundary_map", "box", "build_mesh", "channel_with_block",
-    "channel_with_cylinder", "check_mesh", "compare", "compare_in_time", "developed_profile",
-    "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget", "force_coefficients",
-    "frame_strip", "get_threads", "inlet_table", "iterate", "join_periodic", "lag", "mean_run",
-    "mean_value", "mixed_box", "moist_air", "momentum_budget", "nozzle", "observe", "phase",
-    "picture", "picture_readings", "pipe", "plot_history", "plot_series", "pressure_drop",
-    "profile", "pyramid_box", "quality", "read_checkpoint", "read_mesh", "read_readings",
-    "set_threads", "settling_time", "shear_reversals", "skewed", "solve_pseudo_transient",
-    "solve_scalar", "solve_steady", "solve_transient", "strouhal_number", "wall_distance",
-    "wall_shear", "water", "wedge_box", "write_history", "write_mesh", "write_readings",
-    "write_surface", "write_vtk",
+    "ByAnisotropy", "Case", "CaseError", "Central", "Checkpoint", "Classical", "CoarserMeshes",
+    "Comparison", "CourantStep", "DevelopedProfile", "DivergenceError", "Estimate", "Feedback",
+    "FieldStatistics", "FileError", "FlowOutlet", "FlowRateMonitor", "FlowSplit", "Fluid",
+    "ForceBudget", "ForceCoefficients", "ForceMonitor", "Fv3dError", "Fv3dWarning", "GlobalStep",
+    "GreenGauss", "Inlet", "InletTable", "LeastSquares", "LimitedUpwind", "LocalStep",
+    "MeanMonitor", "Mesh", "MeshError", "MichalakOllivierGooch", "MomentumBudget", "Numerics",
+    "OneSided", "Outcome", "Outlet", "Periodic", "PhaseAverage", "PhaseMonitor", "PointMonitor",
+    "Profile", "ReadingError", "ReadingMonitor", "Readings", "Reference", "Resistance", "Reversals",
+    "Run", "ScalarField", "ScalarFlux", "ScalarValue", "SecondOrderUpwind", "Slip",
+    "SmoothedAggregation", "Spacing", "Symmetry", "TimedComparison", "TwoSided", "Uniform",
+    "Upwind", "VtkSeries", "Wall", "backward_step", "boundary_map", "box", "build_mesh",
+    "channel_with_block", "channel_with_cylinder", "check_mesh", "compare", "compare_in_time",
+    "developed_profile", "dominant_frequency", "flow_rate", "flow_split", "force", "force_budget",
+    "force_coefficients", "frame_strip", "get_threads", "inlet_table", "iterate", "join_periodic",
+    "lag", "mean_run", "mean_value", "mixed_box", "moist_air", "momentum_budget", "nozzle",
+    "observe", "phase", "picture", "picture_readings", "pipe", "plot_history", "plot_series",
+    "pressure_drop", "profile", "pyramid_box", "quality", "read_checkpoint", "read_mesh",
+    "read_readings", "set_threads", "settling_time", "shear_reversals", "skewed",
+    "solve_pseudo_transient", "solve_scalar", "solve_steady", "solve_transient", "strouhal_number",
+    "wall_distance", "wall_shear", "water", "wedge_box", "write_history", "write_mesh",
+    "write_readings", "write_surface", "write_vtk",
 ]

@@ -238,12 +238,15 @@ class Beginning:
     seconds: float
     began: float
     storing: Storing | None
+    before: tuple[str, ...] = ()
 
 
 def begin(problem: Problem, workspace: Workspace, *, start: Any, fresh: Callable[[], State],
-          checkpoint: Checkpoint | None, clock: str, name: str,
-          monitors: Sequence[Monitor]) -> Beginning:
+          checkpoint: Checkpoint | None, clock: str, name: str, monitors: Sequence[Monitor],
+          before: tuple[str, ...] = (), seconds: float = 0.0) -> Beginning:
     """Begin a run anew with ``fresh()``, or where a checkpoint given as ``start`` ended.
+
+    ``before`` and ``seconds`` tell of runs on coarser meshes.
 
     Raises
     ------
@@ -264,7 +267,7 @@ def begin(problem: Problem, workspace: Workspace, *, start: Any, fresh: Callable
     stored = start if isinstance(start, Stored) else None
     marks = fingerprint(problem, workspace.pseudo_step) if checkpoint or stored else {}
     if stored is None:
-        state, records, seconds = fresh(), list[Record](), 0.0
+        state, records = fresh(), list[Record]()
         began = state.time
         for monitor in monitors:
             if state.older is None and hasattr(monitor, "restart"):
@@ -273,12 +276,13 @@ def begin(problem: Problem, workspace: Workspace, *, start: Any, fresh: Callable
         state, records = restored(stored, problem, workspace, clock=clock, monitors=monitors,
                                   fingerprint=marks)
         seconds, began = stored.about["seconds"], stored.about["began"]
+        before = tuple(stored.about.get("before", ()))
     if checkpoint is not None:
         Packer().pack(state)  # refused before the first step, not at the first storing
     about = {"name": name, "clock": clock, "fingerprint": marks, "seconds": seconds,
-             "began": began}
+             "began": began, "before": list(before)}
     return Beginning(state, records, seconds, began,
-                     None if checkpoint is None else Storing(checkpoint, problem, about))
+                     None if checkpoint is None else Storing(checkpoint, problem, about), before)
 
 
 def restored(stored: Stored, problem: Problem, workspace: Workspace, *, clock: str,

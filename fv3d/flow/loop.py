@@ -76,7 +76,8 @@ def drive(problem: Problem, beginning: Beginning, workspace: Workspace, *, advan
     if outcome.name != "diverged":
         state = coupling.conserve(problem, state, workspace)
     run = Run(moment(problem, state), state, history(records, clock), outcome, name,
-              beginning.seconds + time.perf_counter() - began, _collected(monitors))
+              beginning.seconds + time.perf_counter() - began, _collected(monitors),
+              beginning.before)
     report(run)
     return run
 

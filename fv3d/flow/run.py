@@ -29,7 +29,8 @@ class Sample:
 class Run:
     """A finished run: fields, history, outcome.
 
-    ``print(run)`` is a short sheet of what was run, how it ended and what it cost.
+    ``print(run)`` is a short sheet of what was run, how it ended and what it cost; ``before`` are
+    its lines on coarser meshes, whose time ``seconds`` includes.
     """
 
     problem: Problem = field(repr=False)
@@ -39,6 +40,7 @@ class Run:
     name: str
     seconds: float = 0.0
     series: Mapping[str, Series] = field(default_factory=dict, repr=False)
+    before: tuple[str, ...] = ()
 
     @property
     def case(self) -> Case:

@@ -29,6 +29,7 @@ def run_sheet(run: Any) -> str:
         f"{type(numerics.gradient).__name__}",
         f"  outcome    {run.outcome}",
     ]
+    lines += [f"  {'start' if k == 0 else '':<11}{line}" for k, line in enumerate(run.before)]
     guided = any(getattr(source, "artificial", True) for source in run.problem.sources)
     if last:
         lines.append(f"  residuals  momentum {last['momentum']:.1e}, mass {last['mass']:.1e}"

@@ -12,6 +12,7 @@ from .. import errors
 from ..errors import CaseError, Outcome, as_number
 from . import coupling
 from .checkpoint import Checkpoint, begin
+from .coarser import Before, CoarserMeshes, run_coarser
 from .coupling import Record, make_workspace
 from .loop import check_kind, drive
 from .monitors import Monitor
@@ -41,7 +42,8 @@ def iterate(case: Case, *, sources: Sequence[Source] = (),
     problem = make_problem(case, tuple(sources))
     refuse_eddies(problem)
     workspace = make_workspace(problem)
-    state = start_state(problem, start, workspace)
+    before = _on_coarser(case, tuple(sources), start, "iterate", False, None)
+    state = start_state(problem, before.start, workspace)
     while True:
         with np.errstate(all="ignore"):
             state, record = coupling.step(problem, state, workspace)
@@ -61,9 +63,10 @@ def solve_steady(case: Case, *, tolerance: float, max_iterations: int,
         On the largest of momentum, mass and misfit residual (see :class:`Record`).
     max_iterations : int
     sources : sequence of sources such as :class:`Feedback`
-    start : Run (of any mesh), velocity vector, function of points, checkpoint, or None
+    start : Run (of any mesh), velocity vector, function of points, checkpoint, coarser meshes, None
         None: irrotational flow through the given fluxes.  After :func:`read_checkpoint` the
-        iteration goes on where it was, to the last bit, and counts on.
+        iteration goes on where it was, to the last bit, and counts on.  :class:`CoarserMeshes`:
+        from runs on these.
     name : str, optional
         Default: ``"plain"`` without sources, else ``"guided"``.
     monitors : sequence of Monitor
@@ -136,9 +139,11 @@ def _iterate_to_end(case: Case, tolerance: float, max_iterations: int,
     refuse_eddies(problem)
     workspace = make_workspace(problem, pseudo_step)
     name = name or ("guided" if sources else "plain")
+    before = _on_coarser(case, sources, start, name, progress, pseudo_step)
 
     def fresh() -> State:
-        return replace(start_state(problem, start, workspace), time=float("nan"), older=None)
+        return replace(start_state(problem, before.start, workspace), time=float("nan"),
+                       older=None)
 
     def stop(records: list[Record]) -> Outcome | None:
         if records[-1].residual <= tolerance:
@@ -151,10 +156,23 @@ def _iterate_to_end(case: Case, tolerance: float, max_iterations: int,
         return None
 
     beginning = begin(problem, workspace, start=start, fresh=fresh, checkpoint=checkpoint,
-                      clock="iteration", name=name, monitors=monitors)
+                      clock="iteration", name=name, monitors=monitors, before=before.lines,
+                      seconds=before.seconds)
     return drive(problem, beginning, workspace, advance=coupling.step, stop=stop, name=name,
                  monitors=monitors, clock="iteration",
                  progress=Progress(problem, name, tolerance, max_iterations, progress))
+
+
+def _on_coarser(case: Case, sources: tuple[Source, ...], start: Any, name: str, progress: bool,
+                pseudo_step: LocalStep | GlobalStep | None) -> Before:
+    """The start as it is, or the last of the runs on its coarser meshes."""
+    if not isinstance(start, CoarserMeshes):
+        return Before(start)
+
+    def solve(coarse: Case, fed: tuple[Source, ...], first: Any, label: str) -> Run:
+        return _iterate_to_end(coarse, start.tolerance, start.max_iterations, fed, first, label,
+                               (), progress, None, pseudo_step)
+    return run_coarser(start, case, sources, name=name, solve=solve)
 
 
 def _check_limits(tolerance: float, max_iterations: int) -> None:
