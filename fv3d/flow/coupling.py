@@ -7,18 +7,22 @@ from typing import Any
 
 import numpy as np
 
-from ..operators import kernels, linear
-from ..operators.assembly import Pattern, inverse_blocks, symmetric_matrix
+from ..operators import kernels, kernels_solving, linear
+from ..operators.assembly import NOTHING, Pattern, inverse_blocks, symmetric_matrix
 from ..operators.deflation import deflated
 from .equations import (
     Momentum,
     PressureFields,
     boundary_velocity,
     corrected_flux,
+    correction_coefficients,
+    correction_diagonal,
     correction_matrix,
     interpolated_flux,
     momentum,
+    net_outflow,
     pressure_fields,
+    pressure_outflow,
 )
 from .memory import flux_defect, memory_share
 from .numerics import GlobalStep, LocalStep
@@ -84,7 +88,11 @@ class Workspace:
 
 @dataclass(frozen=True, eq=False)
 class Sweeps:
-    """The inexact momentum solve: a fixed linear operator from right-hand side to change."""
+    """The inexact momentum solve: a fixed linear operator from right-hand side to change.
+
+    It runs in single precision, which is enough for a change whose residual is computed anew, and
+    moves half of the memory.  ``data`` (nnz,), ``inverse`` (n_cells, 6).
+    """
 
     pattern: Pattern
     data: np.ndarray
@@ -94,12 +102,18 @@ class Sweeps:
     def __call__(self, rhs: np.ndarray, rows: np.ndarray | None = None,
                  out: np.ndarray | None = None) -> np.ndarray:
         """Change (n_cells, 3) from zero; over some rows only, in a given zeroed array, if asked."""
-        x = np.zeros_like(rhs) if out is None else out
-        rows = np.arange(len(rhs), dtype=np.int32) if rows is None else rows
+        x = np.zeros(rhs.shape, dtype=np.float32) if out is None else out
+        layout = self.pattern
+        equations = (layout.indptr, layout.indices, self.data, self.inverse,
+                     rhs.astype(np.float32, copy=False))
         for k in range(self.count):
-            kernels.sweep(self.pattern.indptr, self.pattern.indices, self.data,
-                          self.inverse, rhs, rows, k % 2 == 1, x)
-        return x
+            backward = k % 2 == 1
+            if rows is not None:
+                kernels_solving.sweep(*equations, rows, backward, x)
+                continue
+            for odd in (1, 0) if backward else (0, 1):
+                kernels_solving.sweep_pieces(*equations, layout.pieces, odd, backward, x)
+        return x if out is not None else x.astype(np.float64)
 
 
 def make_workspace(problem: Problem,
@@ -147,19 +161,22 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     fields = pressure_fields(problem, state.pressure, edge_flux)
     force = total_force(problem, state)
     equation = momentum(problem, state.velocity, gradient, edge, state.mass_flux)
-    push = momentum_push(problem, fields, force)
-    residual = equation.rows.residual(state.velocity) + push
-    scale = _momentum_scale(problem, equation, state.velocity, push, fields)
+    net = net_gradient(problem, fields, force)
+    residual = equation.rows.residual(state.velocity, mesh.cell_volume, net)
+    scale = _momentum_scale(problem, equation, state.velocity, net, fields)
     inertia = pseudo_inertia(problem, equation, workspace)
-    relaxed = equation.rows.block.copy()
-    relaxed[:, :3] += inertia[:, None]
+    relaxed = equation.rows.block
     if equation.drag is not None:
+        relaxed = relaxed.copy()
         relaxed[:, :3] += (equation.drag.tangent - equation.drag.secant) * mesh.cell_volume[:, None]
-    sweeps = Sweeps(problem.pattern, equation.rows.data, inverse_blocks(relaxed),
+    sweeps = Sweeps(problem.pattern, equation.rows.data.astype(np.float32),
+                    inverse_blocks(relaxed, inertia),
                     numerics.sweeps or workspace.sweeps)
     change = sweeps(residual)
     if numerics.sweeps is None and sweeps_are_due(state.iteration):
-        left = replace(equation.rows, block=relaxed, rhs=residual).residual(change)
+        whole = relaxed.copy()
+        whole[:, :3] += inertia[:, None]
+        left = replace(equation.rows, block=whole, rhs=residual).residual(change)
         needed = sweeps_needed(sweeps.count, *(counted(problem, equation, part)
                                                for part in (residual, left)))
         workspace.sweeps = min(needed, coupling.most_sweeps)
@@ -179,14 +196,14 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
     answer = _face_answer(problem, start, gradient, equation, inertia)
     flux = interpolated_flux(problem, velocity, gradient, edge, fields, force, *answer,
                              equation.drag)
-    record_mass = mass_residual(problem, flux, velocity, fields.cell)
+    imbalance = net_outflow(problem, flux)
+    record_mass = mass_residual(problem, flux, velocity, fields.cell, imbalance)
     misfit = max(misfit, flow_misfit(problem, flux))
-    state, effort = _correct_pressure(problem, state, flux, equation, gradient, inertia, answer,
-                                      workspace)
+    state, effort = _correct_pressure(problem, state, flux, imbalance, equation, gradient, inertia,
+                                      answer, workspace)
     tracer = float(np.einsum("ij,ij->", workspace.tracer, state.velocity))
-    residual = counted(problem, equation, residual)
-    record = Record(state.iteration, float(np.abs(residual).sum() / scale), record_mass, misfit,
-                    effort, tracer=tracer)
+    record = Record(state.iteration, absolute_sum(counted(problem, equation, residual)) / scale,
+                    record_mass, misfit, effort, tracer=tracer)
     workspace.first_residual = workspace.first_residual or record.residual
     workspace.residual = record.residual
     return replace(state, iteration=state.iteration + 1), record
@@ -201,7 +218,7 @@ def _face_answer(problem: Problem, start: State, gradient: np.ndarray, equation:
     twice as strongly as the correction assumes, and the iteration grows.
     """
     if equation.drag is not None or not (inertia > SMALL_STEP * equation.diagonal).any():
-        return equation.diagonal, np.zeros(problem.mesh.n_faces)
+        return equation.diagonal, NOTHING
     defect = flux_defect(problem, start.velocity, gradient, start.boundary_velocity,
                          start.mass_flux)
     return (equation.diagonal + inertia,
@@ -221,6 +238,13 @@ def counted(problem: Problem, equation: Momentum, force: np.ndarray) -> np.ndarr
     return np.asarray(force * diagonal / (diagonal + resisting))
 
 
+def absolute_sum(values: np.ndarray, factor: np.ndarray | None = None) -> float:
+    """Sum of the absolute values of three columns, times a factor for each row."""
+    sums = np.empty(kernels_solving.CHUNKS)
+    kernels_solving.absolute_sums(values, NOTHING if factor is None else factor, sums)
+    return float(sums.sum())
+
+
 def sweeps_are_due(iteration: int) -> bool:
     """Whether the sweeps are measured in this iteration."""
     return iteration in MEASURED_EARLY or iteration % MEASURED_EVERY == 0
@@ -236,17 +260,16 @@ def sweeps_needed(count: int, before: np.ndarray, after: np.ndarray) -> int:
     return max(2 * int(np.ceil(wanted / 2)), FEWEST_SWEEPS)
 
 
-def momentum_push(problem: Problem, fields: PressureFields, force: Force | None) -> np.ndarray:
-    """(n_cells, 3) pressure and body force on each cell [N]."""
-    push = -fields.gradient
-    if force is not None:
-        push = push + problem.case.fluid.density * force.cell
-    return push * problem.mesh.cell_volume[:, None]
+def net_gradient(problem: Problem, fields: PressureFields, force: Force | None) -> np.ndarray:
+    """(n_cells, 3) pressure gradient less the body force [N/m^3]."""
+    if force is None:
+        return fields.gradient
+    return fields.gradient - problem.case.fluid.density * force.cell
 
 
-def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, equation: Momentum,
-                      gradient: np.ndarray, inertia: np.ndarray, answer: FaceAnswer,
-                      workspace: Workspace) -> tuple[State, int]:
+def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, imbalance: np.ndarray,
+                      equation: Momentum, gradient: np.ndarray, inertia: np.ndarray,
+                      answer: FaceAnswer, workspace: Workspace) -> tuple[State, int]:
     mesh, numerics = problem.mesh, problem.case.numerics
     n, coupling = mesh.n_internal, numerics.coupling
     d = mesh.cell_volume / coupling.correction_diagonal(equation.diagonal, equation.neighbours,
@@ -255,8 +278,7 @@ def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, equation
     ease = None if zones is None or equation.drag is None \
         else zones.ease(mesh.cell_volume / d, equation.drag)
     matrix, inner, outer = correction_matrix(problem, d, ease)
-    result = solve_pressure(problem, workspace, matrix, -(mesh.outflow @ flux),
-                            numerics.pressure_tolerance)
+    result = solve_pressure(problem, workspace, matrix, -imbalance, numerics.pressure_tolerance)
     correction, shift = result.solution, np.zeros(mesh.n_boundary)
     share = workspace.response.share(coupling)
     if problem.outlets:
@@ -268,39 +290,49 @@ def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, equation
         problem = at_levels(problem, state)
     flux = corrected_flux(problem, flux, correction, inner, outer)
     slope = problem.pressure_gradient(correction, shift)
-    velocity = state.velocity - (d[:, None] if ease is None else ease.cell) * slope
+    velocity = lessened(state.velocity, d, slope) if ease is None \
+        else state.velocity - ease.cell * slope
     pressure = state.pressure + share * correction
-    if problem.closed:
-        pressure -= np.average(pressure, weights=mesh.cell_volume)
-    edge = boundary_velocity(problem, velocity, gradient, flux[n:])
-    state = replace(state, velocity=velocity, pressure=pressure, mass_flux=flux,
-                    boundary_velocity=edge)
     if workspace.response.fine_steps:
-        state = _fine_supplement(problem, state, gradient, equation, answer, workspace)
-    return state, result.iterations
+        relaxed = (d if ease is None else ease.cell.mean(axis=1)) / share
+        pressure += _fine_supplement(problem, imbalance, equation, answer[0], workspace, (
+            share * slope, share * correction, share * shift, relaxed))
+    if problem.closed:
+        pressure -= np.einsum("i,i->", pressure, mesh.cell_volume) / mesh.cell_volume.sum()
+    edge = boundary_velocity(problem, velocity, gradient, flux[n:])
+    return replace(state, velocity=velocity, pressure=pressure, mass_flux=flux,
+                   boundary_velocity=edge), result.iterations
 
 
-def _fine_supplement(problem: Problem, state: State, gradient: np.ndarray, equation: Momentum,
-                     answer: FaceAnswer, workspace: Workspace) -> State:
-    """Pressure with its cell-scale part brought nearer to the end of the iteration.
+def _fine_supplement(problem: Problem, imbalance: np.ndarray, equation: Momentum,
+                     diagonal: np.ndarray, workspace: Workspace,
+                     correction: tuple[np.ndarray, ...]) -> np.ndarray:
+    """(n_cells,) change that brings the cell-scale part of the pressure nearer to its end [Pa].
 
     At the scale of the cells the fluxes answer the pressure with the unrelaxed coefficient only, a
     tenth of the one the correction was computed with; two damped Jacobi steps on what remains of
     the imbalance make up for that.  They change the path, not the solution.
+
+    Parameters
+    ----------
+    imbalance : (n_cells,) net outflow before the correction [kg/s]
+    correction : its slope, cell and boundary values, and velocity per slope
     """
-    mesh, force, zones = problem.mesh, total_force(problem, state), problem.zones
-    diagonal, edge_flux = answer[0], state.mass_flux[problem.mesh.n_internal:]
+    mesh, zones = problem.mesh, problem.zones
     ease = None if zones is None or equation.drag is None else zones.ease(diagonal, equation.drag)
-    unrelaxed = correction_matrix(problem, mesh.cell_volume / diagonal, ease)[0].diagonal()
-    for size in workspace.response.fine_steps:
-        fields = pressure_fields(problem, state.pressure, edge_flux)
-        flux = interpolated_flux(problem, state.velocity, gradient, state.boundary_velocity,
-                                 fields, force, *answer, equation.drag)
-        state = replace(state, pressure=state.pressure - size * (mesh.outflow @ flux) / unrelaxed)
-    if problem.closed:
-        level = np.average(state.pressure, weights=mesh.cell_volume)
-        state = replace(state, pressure=state.pressure - level)
-    return state
+    coefficients = correction_coefficients(problem, mesh.cell_volume / diagonal, ease)
+    unrelaxed = correction_diagonal(problem, *coefficients)
+    slope, pressure, edge, relaxed = correction
+    left = imbalance + pressure_outflow(problem, *coefficients, slope, pressure, edge, relaxed)
+    still, steps = np.zeros(mesh.n_boundary), workspace.response.fine_steps
+    change = -steps[0] * left / unrelaxed
+    total = change
+    for size in steps[1:]:
+        left += pressure_outflow(problem, *coefficients, problem.pressure_gradient(change, still),
+                                 change, still)
+        change = -size * left / unrelaxed
+        total = total + change
+    return np.asarray(total)
 
 
 def solve_pressure(problem: Problem, workspace: Workspace, matrix: Any, rhs: np.ndarray,
@@ -322,11 +354,19 @@ def solve_pressure(problem: Problem, workspace: Workspace, matrix: Any, rhs: np.
     return result
 
 
-def mass_residual(problem: Problem, flux: np.ndarray, velocity: np.ndarray,
-                  pressure: np.ndarray) -> float:
+def lessened(velocity: np.ndarray, factor: np.ndarray, slope: np.ndarray) -> np.ndarray:
+    """(n_cells, 3) velocity less a factor of each cell times a slope."""
+    out = np.empty_like(velocity)
+    kernels.subtract_scaled(velocity, factor, slope, out)
+    return out
+
+
+def mass_residual(problem: Problem, flux: np.ndarray, velocity: np.ndarray, pressure: np.ndarray,
+                  imbalance: np.ndarray | None = None) -> float:
     """Sum of the cells' mass imbalance over the reference flux."""
-    imbalance = np.abs(problem.mesh.outflow @ flux).sum()
-    return float(imbalance / reference_flux(problem, flux, velocity, pressure))
+    if imbalance is None:
+        imbalance = net_outflow(problem, flux)
+    return float(np.abs(imbalance).sum() / reference_flux(problem, flux, velocity, pressure))
 
 
 def reference_flux(problem: Problem, flux: np.ndarray, velocity: np.ndarray,
@@ -344,14 +384,13 @@ def reference_flux(problem: Problem, flux: np.ndarray, velocity: np.ndarray,
     return float(max(inflow if inflow > 1e-3 * circulating else circulating, 1e-300))
 
 
-def _momentum_scale(problem: Problem, equation: Momentum, velocity: np.ndarray, push: np.ndarray,
+def _momentum_scale(problem: Problem, equation: Momentum, velocity: np.ndarray, net: np.ndarray,
                     fields: PressureFields) -> float:
     """Sum of |a u|; a fluid at rest is measured against a millionth of its pressure forces."""
-    moving = float(np.einsum("i,ij->", equation.diagonal, np.abs(velocity)))
-    gradient, push = (counted(problem, equation, part) for part in (fields.gradient, push))
-    resting = float(np.einsum("i,ij->", problem.mesh.cell_volume, np.abs(gradient)))
-    resting += float(np.einsum("ij->", np.abs(push)))
-    return max(moving + 1e-6 * resting, 1e-300)
+    sizes = [absolute_sum(counted(problem, equation, part), problem.mesh.cell_volume)
+             for part in ([net] if net is fields.gradient else [net, fields.gradient])]
+    resting = sizes[0] + sizes[-1]
+    return max(absolute_sum(velocity, equation.diagonal) + 1e-6 * resting, 1e-300)
 
 
 def conserve(problem: Problem, state: State, workspace: Workspace, *,
@@ -361,7 +400,7 @@ def conserve(problem: Problem, state: State, workspace: Workspace, *,
     outer = np.where(free_outlets(problem), problem.orthogonal[n:], 0.0)
     inner = problem.orthogonal[:n]
     matrix = symmetric_matrix(mesh, problem.pattern, inner, outer)
-    imbalance = -(mesh.outflow @ state.mass_flux)
+    imbalance = -net_outflow(problem, state.mass_flux)
     prepared = linear.prepare(matrix, singular=problem.closed)
     result = linear.solve(prepared, imbalance, matrix=matrix, tolerance=tolerance)
     flux = corrected_flux(problem, state.mass_flux, result.solution, inner, outer)

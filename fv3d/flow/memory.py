@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from ..operators import kernels
 from .problem import Problem
 
 
@@ -21,15 +22,14 @@ def flux_defect(problem: Problem, velocity: np.ndarray, gradient: np.ndarray,
     zero on boundaries of given flow.
     """
     mesh, n = problem.mesh, problem.mesh.n_internal
-    through = np.einsum("ij,ij->i", mesh.to_faces(velocity), mesh.face_area)
-    slope = mesh.to_faces(gradient)[:n]
-    through[:n] += np.einsum("fij,fj,fi->f", slope, mesh.skew_offset, mesh.face_area[:n])
+    defect, density = np.empty(mesh.n_faces), problem.case.fluid.density
+    kernels.flux_defects(mesh.left[:n], mesh.right, mesh.weight, mesh.skew, mesh.face_area,
+                         velocity, gradient, density, mass_flux, defect)
     if mesh.warped:
-        through[:n] += np.einsum("fij,fji->f", slope, mesh.warp[:n])
-    through[n:] = np.einsum("ij,ij->i", edge, mesh.face_area[n:])
-    defect = mass_flux / problem.case.fluid.density - through
-    defect[n:] = np.where(problem.table.pressure_given, defect[n:], 0.0)
-    return np.asarray(defect)
+        defect[:n] -= np.einsum("fij,fji->f", mesh.to_faces(gradient)[:n], mesh.warp[:n])
+    through = np.einsum("ij,ij->i", edge, mesh.face_area[n:])
+    defect[n:] = np.where(problem.table.pressure_given, mass_flux[n:] / density - through, 0.0)
+    return defect
 
 
 def memory_share(problem: Problem, diagonal: np.ndarray, inertia: np.ndarray) -> np.ndarray:
@@ -38,6 +38,10 @@ def memory_share(problem: Problem, diagonal: np.ndarray, inertia: np.ndarray) ->
     ``diagonal`` and ``inertia`` (n_cells,) [kg/s]: momentum diagonal and time term.  Between cells
     of one diagonal the factor is inertia over volume.
     """
-    mesh = problem.mesh
-    with_time = mesh.to_faces(mesh.cell_volume / (diagonal + inertia))
-    return np.asarray(1.0 / with_time - 1.0 / mesh.to_faces(mesh.cell_volume / diagonal))
+    mesh, n = problem.mesh, problem.mesh.n_internal
+    with_time, without = (mesh.cell_volume / d for d in (diagonal + inertia, diagonal))
+    factor = np.empty(mesh.n_faces)
+    kernels.memory_factors(mesh.left[:n], mesh.right, mesh.weight, with_time, without, factor[:n])
+    owner = mesh.left[n:]
+    factor[n:] = 1.0 / with_time[owner] - 1.0 / without[owner]
+    return factor

@@ -131,9 +131,9 @@ class _Transport:
         edge = self.edge(values, slope)
         coefficient, explicit = np.empty((n, 2)), np.empty((n, 1))
         kernels.transport_faces(
-            mesh.left[:n], mesh.right, mesh.weight, mesh.skew_offset, mesh.face_area, mesh.delta,
-            problem.orthogonal, mesh.face_centre, mesh.cell_centre, self.flux, self.diffusivity,
-            values[:, None], slope[:, None, :], float(self.scheme.upwind_share),
+            mesh.left[:n], mesh.right, mesh.weight, mesh.skew, mesh.face_area, mesh.delta,
+            problem.orthogonal, mesh.straight, self.flux, self.diffusivity, values[:, None],
+            slope[:, None, :], float(self.scheme.upwind_share),
             float(self.scheme.central_share), False, coefficient, explicit)
         if self.scheme.limited_share:
             around = np.where(self.table.valued, edge, values[mesh.left[n:]])
@@ -176,10 +176,9 @@ class _Transport:
         """The implicit part: upwind convection and compact diffusion."""
         mesh, n, layout = self.mesh, self.mesh.n_internal, self.problem.pattern
         coefficient = self.fluxes(np.zeros(mesh.n_cells))[0]
-        data, diagonal = np.zeros(len(layout.indices)), np.zeros(mesh.n_cells)
-        offsets, faces, sign = mesh.cell_faces
-        kernels.fill_rows(offsets, faces, sign, layout.entry, n, coefficient, np.zeros((n, 1)),
-                          data, diagonal, np.zeros((mesh.n_cells, 1)))
+        data, diagonal = np.empty(len(layout.indices)), np.empty(mesh.n_cells)
+        kernels.fill_rows(*mesh.cell_faces, layout.entry, layout.diagonal, n, coefficient,
+                          np.zeros((n, 1)), data, diagonal, np.empty((mesh.n_cells, 1)))
         conductance = self.diffusivity[n:] * self.problem.orthogonal[n:]
         outer = np.where(self.table.valued, conductance + np.maximum(-self.flux[n:], 0.0), 0.0)
         data[layout.diagonal] = diagonal + np.bincount(mesh.left[n:], outer, mesh.n_cells)

@@ -35,16 +35,20 @@ from .coupling import (
     Record,
     Sweeps,
     Workspace,
+    absolute_sum,
+    lessened,
     mass_residual,
-    momentum_push,
+    net_gradient,
     reference_flux,
     total_force,
 )
 from .equations import (
     PressureFields,
     boundary_velocity,
+    correction_diagonal,
     interpolated_flux,
     momentum,
+    net_outflow,
     pressure_fields,
 )
 from .memory import flux_defect, memory_share
@@ -96,7 +100,6 @@ class Level:
     velocity: np.ndarray
     boundary_velocity: np.ndarray
     mass_flux: np.ndarray
-    gradient: np.ndarray
     defect: np.ndarray
     step: float = float("nan")
 
@@ -164,10 +167,7 @@ class TimeStep:
         trial = replace(state, time=time, older=now)
         if before is not None:
             trial = _extrapolated(trial, now, before, difference)
-        gradient = now.gradient if before is None else difference.ahead(now.gradient,
-                                                                        before.gradient)
-        trial, record = self._solve(ahead, trial, gradient, now, before, difference, workspace)
-        for _ in range((self.first if before is None else self.outer) - 1):
+        for _ in range(self.first if before is None else self.outer):
             gradient = problem.velocity_gradient(trial.velocity, trial.boundary_velocity)
             trial, record = self._solve(ahead, trial, gradient, now, before, difference, workspace)
         new = replace(trial, iteration=state.iteration + 1,
@@ -194,21 +194,21 @@ class TimeStep:
         force = total_force(problem, trial)
         equation = momentum(problem, trial.velocity, gradient, edge, trial.mass_flux)
         older = difference.mixed(now.velocity, None if before is None else before.velocity)
-        residual = (equation.rows.residual(trial.velocity) + momentum_push(problem, fields, force)
-                    - inertia[:, None] * trial.velocity
-                    + (rate * mesh.cell_volume)[:, None] * older)
+        residual = lessened(equation.rows.residual(trial.velocity, mesh.cell_volume,
+                                                   net_gradient(problem, fields, force)),
+                            inertia, trial.velocity - older / difference.lead)
         velocity = trial.velocity + self._swept(problem, equation, inertia, residual)
         edge = boundary_velocity(problem, velocity, gradient, trial.mass_flux[n:])
         memory = difference.mixed(now.defect, None if before is None else before.defect)
         flux = interpolated_flux(problem, velocity, gradient, edge, fields, force,
                                  equation.diagonal + inertia, memory * memory_share(
                                      problem, equation.diagonal, inertia) / difference.lead)
-        scale = float(np.einsum("i,ij->", equation.diagonal + inertia, np.abs(velocity)))
+        scale = absolute_sum(velocity, equation.diagonal + inertia)
         new, effort = self._project(problem, replace(trial, velocity=velocity), flux, fields,
                                     difference, workspace)
         edge = boundary_velocity(problem, new.velocity, gradient, new.mass_flux[n:])
         new, misfit = _push(problem, replace(new, boundary_velocity=edge), gradient, difference)
-        record = Record(0, float(np.abs(residual).sum()) / max(scale, 1e-300),
+        record = Record(0, absolute_sum(residual) / max(scale, 1e-300),
                         mass_residual(problem, new.mass_flux, new.velocity, new.pressure), misfit,
                         effort)
         return new, record
@@ -218,7 +218,7 @@ class TimeStep:
         """Velocity, flux (n_faces,) and pressure made to conserve mass."""
         mesh, density, projection = problem.mesh, problem.case.fluid.density, workspace.projection
         per_pascal = difference.step / (difference.lead * density)
-        imbalance = mesh.outflow @ flux
+        imbalance = net_outflow(problem, flux)
         reference = reference_flux(problem, flux, trial.velocity, trial.pressure)
         size = float(np.abs(imbalance).sum())
         tolerance = float(np.clip(self.mass_tolerance * reference / max(size, 1e-300), 1e-9, 1e-2))
@@ -238,16 +238,15 @@ class TimeStep:
     def _swept(self, problem: Problem, equation: Any, inertia: np.ndarray,
                residual: np.ndarray) -> np.ndarray:
         """Change of velocity by sweeps, repeated until the residual has fallen enough."""
-        block = equation.rows.block.copy()
-        block[:, :3] += inertia[:, None]
-        sweeps = Sweeps(problem.pattern, equation.rows.data, inverse_blocks(block),
+        sweeps = Sweeps(problem.pattern, equation.rows.data.astype(np.float32),
+                        inverse_blocks(equation.rows.block, inertia),
                         problem.case.numerics.sweeps or FEWEST_SWEEPS)
-        rows = replace(equation.rows, block=block, rhs=residual)
+        rows = replace(equation.rows, rhs=residual)
         change = sweeps(residual)
-        wanted = self.momentum_tolerance * float(np.abs(residual).sum())
+        wanted = self.momentum_tolerance * absolute_sum(residual)
         for _ in range(20):
-            left = rows.residual(change)
-            if not float(np.abs(left).sum()) > wanted:
+            left = lessened(rows.residual(change), inertia, change)
+            if not absolute_sum(left) > wanted:
                 break
             change = change + sweeps(left)
         return change
@@ -280,17 +279,16 @@ def _viscous_share(problem: Problem, d: float) -> np.ndarray:
     """
     mesh, n = problem.mesh, problem.mesh.n_internal
     conductance = problem.face_viscosity * problem.orthogonal
-    total = (np.bincount(mesh.left, conductance, mesh.n_cells)
-             + np.bincount(mesh.right, conductance[:n], mesh.n_cells))
+    total = correction_diagonal(problem, conductance[:n], conductance[n:])
     return 1.0 / (1.0 + d * total / mesh.cell_volume)
 
 
 def current_level(problem: Problem, state: State) -> Level:
-    """The present state as a level: velocity gradient and flux defect added."""
+    """The present state as a level: the flux defect added."""
     gradient = problem.velocity_gradient(state.velocity, state.boundary_velocity)
     defect = flux_defect(problem, state.velocity, gradient, state.boundary_velocity,
                          state.mass_flux)
-    return Level(state.velocity, state.boundary_velocity, state.mass_flux, gradient, defect)
+    return Level(state.velocity, state.boundary_velocity, state.mass_flux, defect)
 
 
 def _extrapolated(state: State, now: Level, before: Level, difference: Differencing) -> State:

@@ -139,7 +139,7 @@ class Mesh:
         """Faces of each cell: offsets (n_cells + 1,), faces, sign (+1 outward, -1 inward)."""
         cells = np.concatenate([self.left, self.right])
         faces = np.concatenate([np.arange(self.n_faces), np.arange(self.n_internal)])
-        sign = np.concatenate([np.ones(self.n_faces), -np.ones(self.n_internal)])
+        sign = np.repeat(np.array([1, -1], dtype=np.int8), [self.n_faces, self.n_internal])
         order = np.lexsort((faces, cells))
         counts = np.bincount(cells, minlength=self.n_cells)
         offsets = np.concatenate([[0], np.cumsum(counts)])
@@ -169,6 +169,25 @@ class Mesh:
         inside = slice(0, self.n_internal)
         foot = self.cell_centre[self.left[inside]] + (1 - self.weight)[:, None] * self.delta[inside]
         return read_only(self.face_centre[inside] - foot)
+
+    @cached_property
+    def skew(self) -> np.ndarray:
+        """``skew_offset``, or (0, 3) where no face centre lies off its line."""
+        size = np.abs(self.skew_offset).max(initial=0.0)
+        least = np.sqrt(np.einsum("ij,ij->i", self.delta, self.delta).min(initial=np.inf))
+        if size > 1e-12 * least:
+            return self.skew_offset
+        del self.__dict__["skew_offset"]  # large, and no longer wanted
+        return read_only(np.empty((0, 3)))
+
+    @cached_property
+    def straight(self) -> bool:
+        """Whether all internal faces stand across the lines between their cells."""
+        n = self.n_internal
+        area, delta = self.face_area[:n], self.delta[:n]
+        across = np.cross(area, delta)
+        size = np.einsum("ij,ij->i", area, area) * np.einsum("ij,ij->i", delta, delta)
+        return bool((np.einsum("ij,ij->i", across, across) <= 1e-24 * size).all())
 
     @property
     def warped(self) -> bool:

@@ -8,7 +8,10 @@ import numpy as np
 import scipy.sparse as sparse
 
 from ..mesh.mesh import Mesh
-from . import kernels
+from . import kernels, kernels_solving
+
+NOTHING, NO_VECTORS = np.empty(0), np.empty((0, 3))
+LEAST_PIECE, MOST_PIECES = 2048, 8  # rows; half of the pieces are swept at once
 
 
 @dataclass(frozen=True, eq=False)
@@ -26,6 +29,8 @@ class Pattern:
         boundary faces.
     left_entry, right_entry : (n_internal,) int32
         Place of the right cell's coefficient in the left row, and the other way round.
+    pieces : (k + 1,) int64
+        Rows where the matrix may be cut so that no piece touches the next but one.
     """
 
     indptr: np.ndarray
@@ -34,6 +39,7 @@ class Pattern:
     entry: np.ndarray
     left_entry: np.ndarray
     right_entry: np.ndarray
+    pieces: np.ndarray
 
     def matrix(self, data: np.ndarray) -> sparse.csr_matrix:
         """The matrix with these entries (no copy)."""
@@ -64,7 +70,11 @@ def pattern(mesh: Mesh) -> Pattern:
     entry[ahead] = left_entry[faces[ahead]]
     entry[behind] = right_entry[faces[behind]]
     arrays = (indptr, columns[order], diagonal, entry, left_entry, right_entry)
-    return Pattern(*(np.ascontiguousarray(a, dtype=np.int32) for a in arrays))
+    reach = int((right - left).max(initial=0))  # the matrix' bandwidth
+    count = min(max(n // max(reach, LEAST_PIECE), 1), MOST_PIECES)
+    pieces = np.linspace(0, n, count + 1).astype(np.int64)
+    narrow = [np.ascontiguousarray(a, dtype=np.int32) for a in arrays]
+    return Pattern(*narrow, pieces=pieces)
 
 
 @dataclass(frozen=True, eq=False)
@@ -77,7 +87,7 @@ class Rows:
     Attributes
     ----------
     data : (nnz,)
-        Off-diagonal entries in the places of the pattern (diagonal places unused).
+        Off-diagonal entries in the places of the pattern, zero in the diagonal places.
     block : (n_cells, 6)
         Diagonal blocks as (xx, yy, zz, xy, xz, yz).
     rhs : (n_cells, 3)
@@ -88,24 +98,25 @@ class Rows:
     block: np.ndarray
     rhs: np.ndarray
 
-    def residual(self, x: np.ndarray) -> np.ndarray:
-        """(n_cells, 3) right-hand side minus matrix times ``x``."""
+    def residual(self, x: np.ndarray, volume: np.ndarray = NOTHING,
+                 net_gradient: np.ndarray = NO_VECTORS) -> np.ndarray:
+        """(n_cells, 3) right-hand side minus matrix times ``x``.
+
+        Less ``volume`` (n_cells,) times ``net_gradient`` (n_cells, 3) where these are given.
+        """
         out = np.empty_like(self.rhs)
-        kernels.row_residual(self.pattern.indptr, self.pattern.indices, self.data, self.block,
-                             self.rhs, x, out)
+        kernels_solving.momentum_residual(self.pattern.indptr, self.pattern.indices, self.data,
+                                          self.block, self.rhs, x, volume, net_gradient, out)
         return out
 
 
-def inverse_blocks(block: np.ndarray) -> np.ndarray:
-    """(n, 6) inverse of symmetric 3 x 3 blocks stored as (xx, yy, zz, xy, xz, yz)."""
-    inverse = np.zeros_like(block)
-    inverse[:, :3] = 1.0 / block[:, :3]
-    full = np.flatnonzero(block[:, 3:].any(axis=1))
-    a, b, c, d, e, f = block[full].T
-    cofactor = np.stack([b * c - f * f, a * c - e * e, a * b - d * d, e * f - c * d,
-                         d * f - b * e, d * e - a * f], axis=1)
-    determinant = a * cofactor[:, 0] + d * cofactor[:, 3] + e * cofactor[:, 4]
-    inverse[full] = cofactor / determinant[:, None]
+def inverse_blocks(block: np.ndarray, extra: np.ndarray) -> np.ndarray:
+    """(n, 6) inverse of symmetric 3 x 3 blocks stored as (xx, yy, zz, xy, xz, yz).
+
+    ``extra`` (n,) is added to the diagonals first.  Single precision, see :class:`Sweeps`.
+    """
+    inverse = np.empty(block.shape, dtype=np.float32)
+    kernels_solving.invert_blocks(block, extra, inverse)
     return inverse
 
 

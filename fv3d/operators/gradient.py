@@ -73,8 +73,9 @@ class GradientOperator:
         cells = cell_values[:, None] if scalar else cell_values
         edge = boundary_values[:, None] if scalar else boundary_values
         out = np.empty((len(cells), cells.shape[1], 3))
-        kernels.weighted_gradient(self.offsets, self.other, self.weights,
-                                  np.ascontiguousarray(cells), np.ascontiguousarray(edge), out)
+        kernel = kernels.vector_gradient if cells.shape[1] == 3 else kernels.weighted_gradient
+        kernel(self.offsets, self.other, self.weights, np.ascontiguousarray(cells),
+               np.ascontiguousarray(edge), out)
         if self.completion.nnz:
             self._complete(out)
         if self.smoothed is not None:

@@ -13,6 +13,7 @@ from numbers import Integral
 from typing import Any
 
 import numba
+import numpy as np
 
 from ..errors import CaseError, Fv3dWarning
 
@@ -21,13 +22,14 @@ SMALL = 20_000  # below this many rows a second thread costs more than it brings
 
 
 def _jit(function: Callable, **options: Any) -> Callable:
+    options.update(error_model="numpy", fastmath={"contract"})
     try:
         return numba.njit(cache=True, **options)(function)
     except RuntimeError:
         warnings.warn("No folder for compiled code can be written: loops are compiled again at "
                       "every start (some seconds). Set NUMBA_CACHE_DIR to a writable folder.",
                       Fv3dWarning, stacklevel=3)
-        return numba.njit(**options)(function)
+        return numba.njit(error_model="numpy", fastmath={"contract"}, **options)(function)
 
 
 def compiled(function: Callable) -> Callable:
@@ -48,6 +50,8 @@ class ThreadedKernel:
 
     def __call__(self, *arguments: Any) -> None:
         """Run over the rows of the first argument."""
+        arguments = tuple(a.view(np.uint32) if isinstance(a, np.ndarray) and a.dtype == np.int32
+                          else a for a in arguments)
         if len(arguments[0]) < SMALL or numba.get_num_threads() == 1:
             self._single(*arguments)
         else:
@@ -80,6 +84,44 @@ def weighted_gradient(offsets, other, weights, cell_values, boundary_values, out
 
 
 @ThreadedKernel
+def vector_gradient(offsets, other, weights, cell_values, boundary_values, out):
+    """As :func:`weighted_gradient` for three columns, the weights read once."""
+    n_cells = offsets.shape[0] - 1
+    for cell in numba.prange(n_cells):
+        u = cell_values[cell, 0]
+        v = cell_values[cell, 1]
+        w = cell_values[cell, 2]
+        ux, uy, uz = 0.0, 0.0, 0.0
+        vx, vy, vz = 0.0, 0.0, 0.0
+        wx, wy, wz = 0.0, 0.0, 0.0
+        for k in range(offsets[cell], offsets[cell + 1]):
+            o = other[k]
+            if o < n_cells:
+                du = cell_values[o, 0] - u
+                dv = cell_values[o, 1] - v
+                dw = cell_values[o, 2] - w
+            else:
+                du = boundary_values[o - n_cells, 0] - u
+                dv = boundary_values[o - n_cells, 1] - v
+                dw = boundary_values[o - n_cells, 2] - w
+            x = weights[k, 0]
+            y = weights[k, 1]
+            z = weights[k, 2]
+            ux += x * du
+            uy += y * du
+            uz += z * du
+            vx += x * dv
+            vy += y * dv
+            vz += z * dv
+            wx += x * dw
+            wy += y * dw
+            wz += z * dw
+        out[cell, 0, 0], out[cell, 0, 1], out[cell, 0, 2] = ux, uy, uz
+        out[cell, 1, 0], out[cell, 1, 1], out[cell, 1, 2] = vx, vy, vz
+        out[cell, 2, 0], out[cell, 2, 1], out[cell, 2, 2] = wx, wy, wz
+
+
+@ThreadedKernel
 def blend_with_neighbours(offsets, other, share, values, out):
     """out[c, :] = values of the cell, a share of them replaced by its neighbours' mean."""
     n_cells = offsets.shape[0] - 1
@@ -102,14 +144,19 @@ def blend_with_neighbours(offsets, other, share, values, out):
 
 @ThreadedKernel
 def linear_face_values(left, right, weight, skew, values, gradient, out):
-    """Linear interpolation of a scalar to internal faces, carried to the face centre."""
+    """Linear interpolation of a scalar to internal faces, carried to the face centre.
+
+    ``skew`` (0, 3): the centres lie between the cells, nothing is to be carried.
+    """
+    skewed = skew.shape[0] > 0
     for face in numba.prange(right.shape[0]):
         a = left[face]
         b = right[face]
         w = weight[face]
         v = w * values[a] + (1.0 - w) * values[b]
-        for j in range(3):
-            v += skew[face, j] * (w * gradient[a, j] + (1.0 - w) * gradient[b, j])
+        if skewed:
+            for j in range(3):
+                v += skew[face, j] * (w * gradient[a, j] + (1.0 - w) * gradient[b, j])
         out[face] = v
 
 
@@ -132,49 +179,70 @@ def surface_sum(offsets, faces, sign, face_values, face_area, volume, out):
 
 
 @ThreadedKernel
-def transport_faces(left, right, weight, skew, area, delta, orthogonal, face_centre, cell_centre,
-                    mass_flux, viscosity, values, gradient, upwind_share, central_share,
-                    full_stress, coefficient, explicit):
+def transport_faces(left, right, weight, skew, area, delta, orthogonal, straight, mass_flux,
+                    viscosity, values, gradient, upwind_share, central_share, full_stress,
+                    coefficient, explicit):
     """Internal faces of a transport equation by deferred correction.
 
     coefficient[f, 0] acts on the right cell in the left cell's row, coefficient[f, 1] the other
     way round; explicit[f, :] is the flux left to right that the coefficients do not carry.
+    ``skew`` (0, 3): no face centre lies off its line; ``straight``: all faces stand across theirs.
     """
     width = values.shape[1]
+    skewed = skew.shape[0] > 0
+    carried = skewed and central_share != 0.0
     for face in numba.prange(right.shape[0]):
         a = left[face]
         b = right[face]
         w = weight[face]
         flux = mass_flux[face]
         diffusion = viscosity[face] * orthogonal[face]
-        up = a if flux >= 0.0 else b
         coefficient[face, 0] = min(flux, 0.0) - diffusion
         coefficient[face, 1] = -max(flux, 0.0) - diffusion
+        up = a
+        along = 1.0 - w
+        if flux < 0.0:
+            up = b
+            along = -w
+        arm0 = along * delta[face, 0]
+        arm1 = along * delta[face, 1]
+        arm2 = along * delta[face, 2]
+        if skewed:
+            arm0 += skew[face, 0]
+            arm1 += skew[face, 1]
+            arm2 += skew[face, 2]
+        g = orthogonal[face]
         for i in range(width):
-            reach = 0.0
+            reach = (gradient[up, i, 0] * arm0 + gradient[up, i, 1] * arm1
+                     + gradient[up, i, 2] * arm2)
             centred = w * values[a, i] + (1.0 - w) * values[b, i] - values[up, i]
-            tangential = 0.0
-            turned = 0.0
-            for j in range(3):
-                mean = w * gradient[a, i, j] + (1.0 - w) * gradient[b, i, j]
-                arm = face_centre[face, j] - cell_centre[a, j]
-                reach += gradient[up, i, j] * (arm if up == a else arm - delta[face, j])
-                centred += skew[face, j] * mean
-                tangential += (area[face, j] - orthogonal[face] * delta[face, j]) * mean
-                if full_stress:
-                    turned += area[face, j] * (w * gradient[a, j, i]
+            stress = 0.0
+            if carried or not straight:
+                for j in range(3):
+                    mean = w * gradient[a, i, j] + (1.0 - w) * gradient[b, i, j]
+                    if carried:
+                        centred += skew[face, j] * mean
+                    stress += (area[face, j] - g * delta[face, j]) * mean
+            if full_stress:
+                for j in range(3):
+                    stress += area[face, j] * (w * gradient[a, j, i]
                                                + (1.0 - w) * gradient[b, j, i])
             explicit[face, i] = (flux * (upwind_share * reach + central_share * centred)
-                                 - viscosity[face] * (tangential + turned))
+                                 - viscosity[face] * stress)
 
 
 @ThreadedKernel
-def fill_rows(offsets, faces, sign, entry, n_internal, coefficient, explicit, data, diagonal,
-              rhs):
-    """Gather face coefficients into matrix rows; diagonal and right-hand side are added to."""
+def fill_rows(offsets, faces, sign, entry, place, n_internal, coefficient, explicit, data,
+              diagonal, rhs):
+    """Gather face coefficients into matrix rows, zero in their diagonal places.
+
+    diagonal = minus the sum of a row's coefficients; rhs = minus the net explicit outflow.
+    """
     width = rhs.shape[1]
     for cell in numba.prange(offsets.shape[0] - 1):
         total = 0.0
+        for i in range(width):
+            rhs[cell, i] = 0.0
         for k in range(offsets[cell], offsets[cell + 1]):
             f = faces[k]
             if f < n_internal:
@@ -183,7 +251,8 @@ def fill_rows(offsets, faces, sign, entry, n_internal, coefficient, explicit, da
                 total -= c
                 for i in range(width):
                     rhs[cell, i] -= sign[k] * explicit[f, i]
-        diagonal[cell] += total
+        data[place[cell]] = 0.0
+        diagonal[cell] = total
 
 
 @ThreadedKernel
@@ -211,122 +280,161 @@ def face_coefficients(left, right, weight, cell_values, factor, scale, out):
 
 
 @ThreadedKernel
-def row_residual(indptr, indices, data, block, rhs, x, out):
-    """out = rhs - A x for three right-hand sides; block = (xx, yy, zz, xy, xz, yz) diagonal."""
-    for row in numba.prange(indptr.shape[0] - 1):
-        x0 = x[row, 0]
-        x1 = x[row, 1]
-        x2 = x[row, 2]
-        s0 = rhs[row, 0] - block[row, 0] * x0 - block[row, 3] * x1 - block[row, 4] * x2
-        s1 = rhs[row, 1] - block[row, 3] * x0 - block[row, 1] * x1 - block[row, 5] * x2
-        s2 = rhs[row, 2] - block[row, 4] * x0 - block[row, 5] * x1 - block[row, 2] * x2
-        for k in range(indptr[row], indptr[row + 1]):
-            column = indices[k]
-            if column != row:
-                s0 -= data[k] * x[column, 0]
-                s1 -= data[k] * x[column, 1]
-                s2 -= data[k] * x[column, 2]
-        out[row, 0] = s0
-        out[row, 1] = s1
-        out[row, 2] = s2
+def momentum_face_flux(left, right, weight, skew, area, delta, orthogonal, straight, density,
+                       velocity, gradient, net_gradient, pressure, force_drop, interpolation_d,
+                       memory, out):
+    """Mass flux by momentum interpolation, see :mod:`fv3d.flow.equations`.
 
-
-@compiled
-def sweep(indptr, indices, data, inverse, rhs, rows, backward, x):
-    """One Gauss-Seidel sweep over the given rows (in their order, or backwards), three columns.
-
-    inverse = (xx, yy, zz, xy, xz, yz) of each row's inverted diagonal block.
+    ``skew`` (0, 3), ``force_drop`` and ``memory`` (0,): there is none.  ``straight``: the area
+    vectors are ``orthogonal`` times ``delta``.
     """
-    n = rows.shape[0]
-    for step in range(n):
-        row = rows[n - 1 - step] if backward else rows[step]
-        s0 = rhs[row, 0]
-        s1 = rhs[row, 1]
-        s2 = rhs[row, 2]
-        for k in range(indptr[row], indptr[row + 1]):
-            column = indices[k]
-            if column != row:
-                s0 -= data[k] * x[column, 0]
-                s1 -= data[k] * x[column, 1]
-                s2 -= data[k] * x[column, 2]
-        x[row, 0] = inverse[row, 0] * s0 + inverse[row, 3] * s1 + inverse[row, 4] * s2
-        x[row, 1] = inverse[row, 3] * s0 + inverse[row, 1] * s1 + inverse[row, 5] * s2
-        x[row, 2] = inverse[row, 4] * s0 + inverse[row, 5] * s1 + inverse[row, 2] * s2
-
-
-@ThreadedKernel
-def momentum_face_flux(left, right, weight, skew, area, delta, orthogonal, density, velocity,
-                       gradient, net_gradient, pressure, force_drop, interpolation_d, memory,
-                       out):
-    """Mass flux by momentum interpolation, see :mod:`fv3d.flow.equations`."""
+    skewed = skew.shape[0] > 0
+    forced = force_drop.shape[0] > 0
+    older = memory.shape[0] > 0
     for face in numba.prange(right.shape[0]):
         a = left[face]
         b = right[face]
         w = weight[face]
+        g = orthogonal[face]
         flux = 0.0
         smooth = 0.0
         for i in range(3):
             u = w * velocity[a, i] + (1.0 - w) * velocity[b, i]
-            for j in range(3):
-                u += skew[face, j] * (w * gradient[a, i, j] + (1.0 - w) * gradient[b, i, j])
+            if skewed:
+                for j in range(3):
+                    u += skew[face, j] * (w * gradient[a, i, j] + (1.0 - w) * gradient[b, i, j])
             flux += u * area[face, i]
-            smooth += (w * net_gradient[a, i] + (1.0 - w) * net_gradient[b, i]) * delta[face, i]
+            slope = w * net_gradient[a, i] + (1.0 - w) * net_gradient[b, i]
+            smooth += slope * (area[face, i] if straight else g * delta[face, i])
         d = w * interpolation_d[a] + (1.0 - w) * interpolation_d[b]
-        jump = pressure[b] - pressure[a] - force_drop[face]
-        out[face] = density * (flux + d * (orthogonal[face] * (smooth - jump) + memory[face]))
+        jump = pressure[b] - pressure[a]
+        if forced:
+            jump -= force_drop[face]
+        push = smooth - g * jump
+        if older:
+            push += memory[face]
+        out[face] = density * (flux + d * push)
 
 
 @ThreadedKernel
-def product(indptr, indices, data, x, out):
-    """out = A x for one vector."""
-    for row in numba.prange(indptr.shape[0] - 1):
-        s = data.dtype.type(0.0)
-        for k in range(indptr[row], indptr[row + 1]):
-            s += data[k] * x[indices[k]]
-        out[row] = s
+def pressure_fluxes(left, right, weight, area, delta, orthogonal, straight, density, inner, relaxed,
+                    slope, pressure, out):
+    """What a pressure change with this slope adds to the fluxes of momentum interpolation.
+
+    ``inner``: flux per difference of pressures; ``relaxed``: velocity per slope of the change that
+    has been made already, (0,) for none.
+    """
+    moved = relaxed.shape[0] > 0
+    for face in numba.prange(right.shape[0]):
+        a = left[face]
+        b = right[face]
+        w = weight[face]
+        g = orthogonal[face]
+        from_a = w * relaxed[a] if moved else 0.0
+        from_b = (1.0 - w) * relaxed[b] if moved else 0.0
+        through = 0.0
+        smooth = 0.0
+        for i in range(3):
+            mean = w * slope[a, i] + (1.0 - w) * slope[b, i]
+            smooth += mean * (area[face, i] if straight else g * delta[face, i])
+            if moved:
+                through += (from_a * slope[a, i] + from_b * slope[b, i]) * area[face, i]
+        jump = pressure[b] - pressure[a]
+        out[face] = inner[face] / g * smooth - inner[face] * jump - density * through
 
 
 @ThreadedKernel
-def residual_product(indptr, indices, data, x, rhs, out):
-    """out = rhs - A x for one vector."""
-    for row in numba.prange(indptr.shape[0] - 1):
-        s = rhs[row]
-        for k in range(indptr[row], indptr[row + 1]):
-            s -= data[k] * x[indices[k]]
-        out[row] = s
+def flux_defects(left, right, weight, skew, area, velocity, gradient, density, mass_flux, out):
+    """out = volume flux of internal faces less that of the interpolated velocity."""
+    skewed = skew.shape[0] > 0
+    for face in numba.prange(right.shape[0]):
+        a = left[face]
+        b = right[face]
+        w = weight[face]
+        through = 0.0
+        for i in range(3):
+            u = w * velocity[a, i] + (1.0 - w) * velocity[b, i]
+            if skewed:
+                for j in range(3):
+                    u += skew[face, j] * (w * gradient[a, i, j] + (1.0 - w) * gradient[b, i, j])
+            through += u * area[face, i]
+        out[face] = mass_flux[face] / density - through
 
 
 @ThreadedKernel
-def product_add(indptr, indices, data, x, out):
-    """out += A x for one vector."""
-    for row in numba.prange(indptr.shape[0] - 1):
-        s = out[row]
-        for k in range(indptr[row], indptr[row + 1]):
-            s += data[k] * x[indices[k]]
-        out[row] = s
+def memory_factors(left, right, weight, with_time, without, out):
+    """out = 1 / with_time - 1 / without, both interpolated to internal faces first."""
+    for face in numba.prange(right.shape[0]):
+        a = left[face]
+        b = right[face]
+        w = weight[face]
+        out[face] = (1.0 / (w * with_time[a] + (1.0 - w) * with_time[b])
+                     - 1.0 / (w * without[a] + (1.0 - w) * without[b]))
 
 
 @ThreadedKernel
-def chebyshev_start(inverse_diagonal, rhs, scale, direction, x):
-    """First Chebyshev step from x = 0."""
-    for row in numba.prange(rhs.shape[0]):
-        direction[row] = scale * inverse_diagonal[row] * rhs[row]
-        x[row] = direction[row]
+def net_outflow(offsets, faces, sign, face_flux, out):
+    """out[c] = sum over faces of sign * flux."""
+    for cell in numba.prange(offsets.shape[0] - 1):
+        total = 0.0
+        for k in range(offsets[cell], offsets[cell + 1]):
+            total += sign[k] * face_flux[faces[k]]
+        out[cell] = total
 
 
 @ThreadedKernel
-def chebyshev_step(indptr, indices, data, inverse_diagonal, rhs, keep, scale, direction, work,
-                   x):
-    """direction = keep * direction + scale * D^-1 (rhs - A x); x += direction."""
-    n = indptr.shape[0] - 1
-    for row in numba.prange(n):
-        s = rhs[row]
-        for k in range(indptr[row], indptr[row + 1]):
-            s -= data[k] * x[indices[k]]
-        work[row] = s
-    for row in numba.prange(n):
-        direction[row] = keep * direction[row] + scale * inverse_diagonal[row] * work[row]
-        x[row] += direction[row]
+def coefficient_sums(offsets, faces, n_internal, inner, outer, out):
+    """out[c] = sum of a cell's face coefficients, the diagonal of a diffusion matrix."""
+    for cell in numba.prange(offsets.shape[0] - 1):
+        total = 0.0
+        for k in range(offsets[cell], offsets[cell + 1]):
+            f = faces[k]
+            total += inner[f] if f < n_internal else outer[f - n_internal]
+        out[cell] = total
+
+
+@ThreadedKernel
+def correct_flux(left, right, inner, correction, flux):
+    """flux -= inner * difference of the correction across each internal face."""
+    for face in numba.prange(right.shape[0]):
+        flux[face] -= inner[face] * (correction[right[face]] - correction[left[face]])
+
+
+@ThreadedKernel
+def subtract_scaled(field, factor, change, out):
+    """out = field - factor * change for three columns, one factor for each row."""
+    for row in numba.prange(field.shape[0]):
+        f = factor[row]
+        out[row, 0] = field[row, 0] - f * change[row, 0]
+        out[row, 1] = field[row, 1] - f * change[row, 1]
+        out[row, 2] = field[row, 2] - f * change[row, 2]
+
+
+@ThreadedKernel
+def extend_vectors(cells, values, gradient, arm, out):
+    """out[f, :] = values[c, :] + gradient[c, :, :] . arm[f], c the f-th of the cells."""
+    for f in numba.prange(cells.shape[0]):
+        c = cells[f]
+        for i in range(3):
+            out[f, i] = (values[c, i] + gradient[c, i, 0] * arm[f, 0]
+                         + gradient[c, i, 1] * arm[f, 1] + gradient[c, i, 2] * arm[f, 2])
+
+
+@ThreadedKernel
+def extend_scalars(cells, values, gradient, arm, out):
+    """out[f] = values[c] + gradient[c, :] . arm[f], c the f-th of the cells."""
+    for f in numba.prange(cells.shape[0]):
+        c = cells[f]
+        out[f] = (values[c] + gradient[c, 0] * arm[f, 0] + gradient[c, 1] * arm[f, 1]
+                  + gradient[c, 2] * arm[f, 2])
+
+
+@compiled
+def add_to_rows(rows, values, out):
+    """out[rows[k], :] += values[k, :], one after the other."""
+    for k in range(rows.shape[0]):
+        for i in range(values.shape[1]):
+            out[rows[k], i] += values[k, i]
 
 
 def set_threads(count: int) -> None:
