@@ -56,8 +56,10 @@ def test_inverse_blocks_against_numpy() -> None:
     whole = root @ root.transpose(0, 2, 1) + 0.5 * np.eye(3)
     whole[20:] *= np.eye(3)
     rows, columns = [0, 1, 2, 0, 0, 1], [0, 1, 2, 1, 2, 2]
-    inverse = inverse_blocks(whole[:, rows, columns])
-    np.testing.assert_allclose(inverse, np.linalg.inv(whole)[:, rows, columns], atol=1e-9)
+    extra = r.uniform(0.0, 1.0, 40)
+    inverse = inverse_blocks(whole[:, rows, columns], extra)
+    wanted = np.linalg.inv(whole + extra[:, None, None] * np.eye(3))[:, rows, columns]
+    np.testing.assert_allclose(inverse, wanted, rtol=0, atol=1e-6 * np.abs(wanted).max())
 
 
 @pytest.mark.parametrize("full_stress", [False, True])

@@ -18,6 +18,7 @@ from ..errors import CaseError, DivergenceError, Fv3dWarning, Outcome
 from . import coupling
 from .checkpoint import Beginning
 from .coupling import Record, Workspace
+from .heap import kept_memory
 from .monitors import Monitor, Series
 from .outlets import at_levels
 from .problem import Problem, State
@@ -52,7 +53,7 @@ def drive(problem: Problem, beginning: Beginning, workspace: Workspace, *, advan
     """
     began, records, outcome = time.perf_counter(), beginning.records, None
     last, storing = beginning.state, beginning.storing
-    with progress as bar, np.errstate(all="ignore"), between_steps() as asked:
+    with progress as bar, np.errstate(all="ignore"), kept_memory(), between_steps() as asked:
         try:
             while outcome is None:
                 state, record = advance(problem, last, workspace)

@@ -14,6 +14,7 @@ from . import coupling
 from .checkpoint import Checkpoint, begin
 from .coarser import Before, CoarserMeshes, run_coarser
 from .coupling import Record, make_workspace
+from .heap import kept_memory
 from .loop import check_kind, drive
 from .monitors import Monitor
 from .numerics import GlobalStep, LocalStep
@@ -44,10 +45,11 @@ def iterate(case: Case, *, sources: Sequence[Source] = (),
     workspace = make_workspace(problem)
     before = _on_coarser(case, tuple(sources), start, "iterate", False, None)
     state = start_state(problem, before.start, workspace)
-    while True:
-        with np.errstate(all="ignore"):
-            state, record = coupling.step(problem, state, workspace)
-        yield state, record
+    with kept_memory():
+        while True:
+            with np.errstate(all="ignore"):
+                state, record = coupling.step(problem, state, workspace)
+            yield state, record
 
 
 def solve_steady(case: Case, *, tolerance: float, max_iterations: int,

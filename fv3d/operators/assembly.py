@@ -69,12 +69,13 @@ def pattern(mesh: Mesh) -> Pattern:
     behind = internal & (sign < 0)
     entry[ahead] = left_entry[faces[ahead]]
     entry[behind] = right_entry[faces[behind]]
-    arrays = (indptr, columns[order], diagonal, entry, left_entry, right_entry)
+    arrays = {"indptr": indptr, "indices": columns[order], "diagonal": diagonal, "entry": entry,
+              "left_entry": left_entry, "right_entry": right_entry}
     reach = int((right - left).max(initial=0))  # the matrix' bandwidth
     count = min(max(n // max(reach, LEAST_PIECE), 1), MOST_PIECES)
     pieces = np.linspace(0, n, count + 1).astype(np.int64)
-    narrow = [np.ascontiguousarray(a, dtype=np.int32) for a in arrays]
-    return Pattern(*narrow, pieces=pieces)
+    return Pattern(pieces=pieces, **{name: np.ascontiguousarray(a, dtype=np.int32)
+                                     for name, a in arrays.items()})
 
 
 @dataclass(frozen=True, eq=False)

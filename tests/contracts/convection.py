@@ -24,10 +24,10 @@ def face_values(scheme: Any, mesh: Mesh, flux: np.ndarray, values: np.ndarray,
     n = mesh.n_internal
     coefficient, explicit = np.empty((n, 2)), np.empty((n, values.shape[1]))
     kernels.transport_faces(
-        mesh.left[:n], mesh.right, mesh.weight, mesh.skew_offset, mesh.face_area, mesh.delta,
-        np.ones(mesh.n_faces), mesh.face_centre, mesh.cell_centre, flux, np.zeros(mesh.n_faces),
-        values, gradient, float(scheme.upwind_share), float(scheme.central_share), False,
-        coefficient, explicit)
+        mesh.left[:n], mesh.right, mesh.weight, mesh.skew, mesh.face_area, mesh.delta,
+        np.ones(mesh.n_faces), mesh.straight, flux, np.zeros(mesh.n_faces), values,
+        gradient, float(scheme.upwind_share), float(scheme.central_share), False, coefficient,
+        explicit)
     up = np.where(flux[:n] >= 0, mesh.left[:n], mesh.right)
     limited = limited_extension(mesh, values, edge, gradient, flux)
     return values[up] + explicit / flux[:n, None] + scheme.limited_share * limited
