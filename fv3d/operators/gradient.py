@@ -16,7 +16,9 @@ import numpy as np
 import scipy.sparse as sparse
 
 from ..mesh.mesh import Mesh
-from . import kernels
+from . import kernels, kernels_solving
+
+PAIRS = ((0, 0), (1, 1), (2, 2), (0, 1), (0, 2), (1, 2))  # columns of packed symmetric matrices
 
 
 @dataclass(frozen=True, eq=False)
@@ -142,33 +144,31 @@ class LeastSquares:
         """Weights on this mesh, see :class:`GradientOperator`."""
         offsets, faces, sign = mesh.cell_faces
         cell = np.repeat(np.arange(mesh.n_cells), np.diff(offsets))
-        inside = faces < mesh.n_internal
-        other = mesh.across
         arm = mesh.delta[faces] * sign[:, None]
-        importance = np.linalg.norm(arm, axis=1) ** -self.power
-        edge = np.flatnonzero(~inside)
+        importance = np.einsum("ij,ij->i", arm, arm) ** (-0.5 * self.power)
+        edge = np.flatnonzero(faces >= mesh.n_internal)
         b = faces[edge] - mesh.n_internal
-        used = np.ones(len(faces))
-        used[edge] = known.valued[b]
         flat = edge[known.flat[b]]
+        unknown = edge[~(known.valued[b] | known.flat[b])]
         normal = mesh.face_normal[faces[flat]]
-        across = normal * np.einsum("ij,ij->i", arm[flat], normal)[:, None]
-        matrix, whole = np.zeros((mesh.n_cells, 3, 3)), np.zeros((mesh.n_cells, 3, 3))
-        for i in range(3):
-            for j in range(i, 3):
-                term = importance * arm[:, i] * arm[:, j]
-                term[flat] = importance[flat] * across[:, i] * across[:, j]
-                share = used * term
-                share[flat] = term[flat]
-                whole[:, i, j] = whole[:, j, i] = np.bincount(cell, term, mesh.n_cells)
-                matrix[:, i, j] = matrix[:, j, i] = np.bincount(cell, share, mesh.n_cells)
-        inverse, poor, missing = _known_inverse(matrix, whole, self.least_known)
-        weights = np.einsum("kij,kj->ki", inverse[cell], arm) * (used * importance)[:, None]
+        across = arm.copy()
+        across[flat] = normal * np.einsum("ij,ij->i", arm[flat], normal)[:, None]
+        whole = np.empty((mesh.n_cells, 6))
+        lost = np.zeros((mesh.n_cells, 6))
+        for column, (i, j) in enumerate(PAIRS):
+            term = importance * across[:, i] * across[:, j]
+            whole[:, column] = np.add.reduceat(term, offsets[:-1])
+            kernels.add_to_rows(cell[unknown], term[unknown, None], lost[:, column:column + 1])
+        inverse, poor, missing = _known_inverse(whole, lost, np.unique(cell[unknown]),
+                                                self.least_known)
+        used = importance
+        used[edge[~known.valued[b]]] = 0.0
+        weights = np.einsum("kij,kj->ki", inverse[cell], arm)
+        weights *= used[:, None]
         few = np.diff(offsets) < 6
         smoothed = self.smoothing * few if self.smoothing > 0 and few.any() else None
-        return GradientOperator(offsets, other, np.ascontiguousarray(weights),
-                                poor.astype(np.int32), missing,
-                                _completion(offsets, other, poor, mesh.n_cells), smoothed)
+        return GradientOperator(offsets, mesh.across, weights, poor.astype(np.int32), missing,
+                                _completion(offsets, mesh.across, poor, mesh.n_cells), smoothed)
 
 
 @dataclass(frozen=True)
@@ -217,29 +217,33 @@ def _completion(offsets: np.ndarray, other: np.ndarray, poor: np.ndarray,
     return sparse.csr_matrix((share, (row, column)), shape=(len(poor), n_cells))
 
 
-def _known_inverse(matrix: np.ndarray, whole: np.ndarray,
+def _known_inverse(whole: np.ndarray, lost: np.ndarray, cells: np.ndarray,
                    least: float) -> tuple[np.ndarray, ...]:
-    """Inverse in the directions that are known well enough.
+    """Inverse of the cells' normal matrices, in some cells only where known well enough.
 
-    ``whole`` is the normal matrix with all faces, ``matrix`` that with the known ones; an
-    eigenvalue of ``matrix v = share whole v`` is the share of a direction that is known, whatever
-    the shape of the cell.
+    ``whole`` (n_cells, 6) is the normal matrix with all faces, ``lost`` what is unknown of it in
+    ``cells``; an eigenvalue of ``(whole - lost) v = share whole v`` is the share of a direction
+    that is known, whatever the shape of the cell.
 
     Returns
     -------
     inverse : (n_cells, 3, 3), poor : (p,), missing : (p, 3, 3)
         ``gradient @ missing`` is the part of a gradient the inverse leaves out.
     """
-    scale = np.trace(whole, axis1=1, axis2=2)[:, None, None]
-    lower = np.linalg.cholesky(whole / scale + 1e-12 * np.eye(3))
+    columns = np.array([[0, 3, 4], [3, 1, 5], [4, 5, 2]])
+    packed = np.empty_like(whole)
+    kernels_solving.invert_blocks(whole, np.zeros(len(whole)), packed)
+    inverse = packed[:, columns]
+    full, part = whole[cells][:, columns], (whole - lost)[cells][:, columns]
+    scale = np.trace(full, axis1=1, axis2=2)[:, None, None]
+    lower = np.linalg.cholesky(full / scale + 1e-12 * np.eye(3))
     turn = np.linalg.inv(lower)
-    share, vectors = np.linalg.eigh(turn @ (matrix / scale) @ turn.transpose(0, 2, 1))
+    share, vectors = np.linalg.eigh(turn @ (part / scale) @ turn.transpose(0, 2, 1))
     present = share > least
     back = turn.transpose(0, 2, 1) @ vectors
     factor = np.where(present, 1.0 / np.where(present, share, 1.0), 0.0)
-    inverse = np.einsum("cik,ck,cjk->cij", back, factor, back) / scale
+    inverse[cells] = np.einsum("cik,ck,cjk->cij", back, factor, back) / scale
     poor = np.flatnonzero(~present.all(axis=1))
     absent = (~present[poor]).astype(float)
     forth = lower[poor] @ vectors[poor]
-    missing = np.einsum("cik,ck,cjk->cij", forth, absent, back[poor])
-    return inverse, poor, missing
+    return inverse, cells[poor], np.einsum("cik,ck,cjk->cij", forth, absent, back[poor])
