@@ -137,14 +137,13 @@ class Mesh:
     @cached_property
     def cell_faces(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Faces of each cell: offsets (n_cells + 1,), faces, sign (+1 outward, -1 inward)."""
-        cells = np.concatenate([self.left, self.right])
         faces = np.concatenate([np.arange(self.n_faces), np.arange(self.n_internal)])
         sign = np.repeat(np.array([1, -1], dtype=np.int8), [self.n_faces, self.n_internal])
-        order = np.lexsort((faces, cells))
-        counts = np.bincount(cells, minlength=self.n_cells)
-        offsets = np.concatenate([[0], np.cumsum(counts)])
-        return (read_only(offsets.astype(np.int32)), read_only(faces[order].astype(np.int32)),
-                read_only(sign[order]))
+        table = sparse.csr_matrix((sign, (np.concatenate([self.left, self.right]), faces)),
+                                  (self.n_cells, self.n_faces))
+        table.sort_indices()
+        return (read_only(table.indptr.astype(np.int32)), read_only(table.indices.astype(np.int32)),
+                read_only(table.data))
 
     @cached_property
     def across(self) -> np.ndarray:

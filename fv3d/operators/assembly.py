@@ -57,10 +57,10 @@ def pattern(mesh: Mesh) -> Pattern:
     right = mesh.right.astype(np.int64)
     rows = np.concatenate([left, right, np.arange(n)])
     columns = np.concatenate([right, left, np.arange(n)])
-    order = np.lexsort((columns, rows))
-    place = np.empty(len(order), dtype=np.int64)
-    place[order] = np.arange(len(order))
-    indptr = np.concatenate([[0], np.cumsum(np.bincount(rows, minlength=n))])
+    sorted_rows = sparse.csr_matrix((np.arange(len(rows)), (rows, columns)), (n, n))
+    sorted_rows.sort_indices()
+    place = np.empty(len(rows), dtype=np.int64)
+    place[sorted_rows.data] = np.arange(len(rows))
     left_entry, right_entry, diagonal = np.split(place, [inside, 2 * inside])
     _, faces, sign = mesh.cell_faces
     entry = np.full(len(faces), -1, dtype=np.int64)
@@ -69,8 +69,9 @@ def pattern(mesh: Mesh) -> Pattern:
     behind = internal & (sign < 0)
     entry[ahead] = left_entry[faces[ahead]]
     entry[behind] = right_entry[faces[behind]]
-    arrays = {"indptr": indptr, "indices": columns[order], "diagonal": diagonal, "entry": entry,
-              "left_entry": left_entry, "right_entry": right_entry}
+    arrays = {"indptr": sorted_rows.indptr, "indices": sorted_rows.indices,
+              "diagonal": diagonal, "entry": entry, "left_entry": left_entry,
+              "right_entry": right_entry}
     reach = int((right - left).max(initial=0))  # the matrix' bandwidth
     count = min(max(n // max(reach, LEAST_PIECE), 1), MOST_PIECES)
     pieces = np.linspace(0, n, count + 1).astype(np.int64)
