@@ -8,6 +8,7 @@ order of work.  ``REFERENCES[name](*arguments)`` returns the arrays the kernel w
 from __future__ import annotations
 
 from collections.abc import Callable
+from itertools import pairwise
 
 import numpy as np
 
@@ -185,8 +186,7 @@ def net_outflow(offsets, faces, sign, face_flux, out):
 @reference
 def coefficient_sums(offsets, faces, n_internal, inner, outer, out):
     both = np.concatenate([inner[:n_internal], outer])
-    return {5: np.array([both[faces[start:stop]].sum()
-                         for start, stop in zip(offsets[:-1], offsets[1:])])}
+    return {5: np.array([both[faces[start:stop]].sum() for start, stop in pairwise(offsets)])}
 
 
 @reference
