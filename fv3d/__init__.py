@@ -16,7 +16,7 @@ from .errors import (
 )
 from .flow.boundary import Inlet, Outlet, Slip, Symmetry, Wall
 from .flow.checkpoint import Checkpoint, read_checkpoint
-from .flow.coarser import CoarserMeshes
+from .flow.coarser import Agglomerated, CoarserMeshes
 from .flow.developed import DevelopedProfile, developed_profile
 from .flow.driving import pressure_drop
 from .flow.fluid import Fluid, moist_air, water
@@ -79,12 +79,12 @@ from .signals import (
 )
 
 __all__ = [
-    "SIMPLE", "SIMPLEC", "WALE", "BarthJespersen", "Blended", "BoundaryError", "BoundaryForce",
-    "ByAnisotropy", "Case", "CaseError", "Central", "Checkpoint", "Classical", "CoarserMeshes",
-    "Comparison", "CourantStep", "DevelopedProfile", "DivergenceError", "Estimate", "Feedback",
-    "FieldStatistics", "FileError", "FlowOutlet", "FlowRateMonitor", "FlowSplit", "Fluid",
-    "ForceBudget", "ForceCoefficients", "ForceMonitor", "Fv3dError", "Fv3dWarning", "GlobalStep",
-    "GreenGauss", "Inlet", "InletTable", "LeastSquares", "LimitedUpwind", "LocalStep",
+    "SIMPLE", "SIMPLEC", "WALE", "Agglomerated", "BarthJespersen", "Blended", "BoundaryError",
+    "BoundaryForce", "ByAnisotropy", "Case", "CaseError", "Central", "Checkpoint", "Classical",
+    "CoarserMeshes", "Comparison", "CourantStep", "DevelopedProfile", "DivergenceError", "Estimate",
+    "Feedback", "FieldStatistics", "FileError", "FlowOutlet", "FlowRateMonitor", "FlowSplit",
+    "Fluid", "ForceBudget", "ForceCoefficients", "ForceMonitor", "Fv3dError", "Fv3dWarning",
+    "GlobalStep", "GreenGauss", "Inlet", "InletTable", "LeastSquares", "LimitedUpwind", "LocalStep",
     "MeanMonitor", "Mesh", "MeshError", "MichalakOllivierGooch", "MomentumBudget", "Numerics",
     "OneSided", "Outcome", "Outlet", "Periodic", "PhaseAverage", "PhaseMonitor", "PointMonitor",
     "Profile", "ReadingError", "ReadingMonitor", "Readings", "Reference", "Resistance", "Reversals",

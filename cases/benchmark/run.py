@@ -155,8 +155,9 @@ def show(kind: str, made: Measured, rate: float) -> None:
             ideal = size / (rate * 1e9)
             row += f" {size / 1e6:10.0f} {ideal * 1e3:16.1f} {seconds / ideal:12.1f}"
         print(row)
-    print(f"  iteration      {made.iteration * 1e3:8.1f}   {made.iteration / bound:.2f} x the bound; "
-          f"one thread {made.single * 1e3:.0f} ms, {made.single / made.iteration:.2f} x")
+    times = made.iteration / bound
+    print(f"  iteration      {made.iteration * 1e3:8.1f}   {times:.2f} x the bound;"
+          f" one thread {made.single * 1e3:.0f} ms, {made.single / made.iteration:.2f} x")
     total = sum(made.moved.values())
     print(f"  moved by design {total / made.cells / 1e3:.2f} kB per cell, "
           f"{total / made.cells / 1e3 / 3.85:.2f} x the bound's")

@@ -1,5 +1,7 @@
 """Coarse-to-fine start: the case is run on coarser meshes first, each run the start of the next.
 
+The meshes are given, or made by joining cells (:mod:`fv3d.mesh.agglomerate`).
+
 What is smooth in the fields costs little on a coarse mesh, and the fine one only has to add what
 the coarse one could not show.  The solution stays that of the fine mesh alone.
 
@@ -19,12 +21,15 @@ from typing import Any
 import numpy as np
 
 from ..errors import CaseError, DivergenceError, Fv3dError, Fv3dWarning, as_number, did_you_mean
+from ..mesh.agglomerate import AgglomeratedMesh, agglomerate
 from ..mesh.mesh import Mesh
 from .problem import Case, Source
+from .resistance import resisting_cells
 from .run import Run
 
 SAME_PLACE = 0.1  # of the extent that the corners of two meshes of one domain may lie apart
 SAME_VOLUME = 0.25  # share that their volumes may differ by
+FEWEST_JOINED = 2000  # cells of a mesh that is agglomerated
 
 Solve = Callable[[Case, tuple[Source, ...], Any, str], Run]
 
@@ -86,15 +91,80 @@ class CoarserMeshes:
             raise CaseError("The meshes must go from the coarsest to the finest.",
                             where="CoarserMeshes(meshes)", remedy="Put them in that order.",
                             got=", ".join(f"{count} cells" for count in cells))
-        if isinstance(self.tolerance, str) or not 0.0 < as_number(self.tolerance) < np.inf:
-            raise CaseError("The tolerance of the coarse runs must be positive.",
-                            where="CoarserMeshes(tolerance=)", got=repr(self.tolerance),
-                            remedy="Give 1e-3, say.")
-        limit = as_number(self.max_iterations)
-        if isinstance(self.max_iterations, str) or not (limit >= 1 and limit % 1 == 0):
-            raise CaseError("The limit of iterations is a whole number from 1.",
-                            where="CoarserMeshes(max_iterations=)", got=repr(self.max_iterations),
-                            remedy="Give 300, say.")
+        _check_limits("CoarserMeshes", self.tolerance, self.max_iterations)
+
+    def coarse_cases(self, case: Case) -> list[Case]:
+        """The case on each mesh, from the coarsest on."""
+        return [coarse_case(case, mesh) for mesh in self.family]
+
+    def fed(self, sources: tuple[Source, ...]) -> tuple[Source, ...]:
+        """Sources that act on the coarser meshes."""
+        return sources
+
+
+@dataclass(frozen=True)
+class Agglomerated:
+    """Start of a steady run from runs on meshes made of its own by joining cells.
+
+    Each level has about an eighth of the cells of the one before.  For meshes without a family of
+    coarser ones, of any kind of cells; not for periodic boundaries.  Readings are not fed on the
+    coarse levels.  A coarse run that fails is told and left out.
+
+    Parameters
+    ----------
+    levels : int
+        Most levels; none is made of a mesh of fewer than 2000 cells.
+    tolerance, max_iterations
+        As of :class:`CoarserMeshes`.
+
+    Raises
+    ------
+    CaseError
+        A number that is not positive; when the run begins, also for periodic boundaries.
+    """
+
+    levels: int = 2
+    tolerance: float = field(default=1e-3, kw_only=True)
+    max_iterations: int = field(default=300, kw_only=True)
+
+    def __post_init__(self) -> None:
+        if not _whole(self.levels):
+            raise CaseError("The number of levels is a whole number from 1.", got=repr(self.levels),
+                            where="Agglomerated(levels=)", remedy="Give 2, say.")
+        _check_limits("Agglomerated", self.tolerance, self.max_iterations)
+
+    def coarse_cases(self, case: Case) -> list[Case]:
+        """The case on each level, from the coarsest on."""
+        if case.mesh.joined:
+            raise CaseError("An agglomerated mesh has no periodic boundaries.",
+                            where="start=Agglomerated(...)", got=", ".join(case.mesh.joined),
+                            remedy="Give CoarserMeshes(...), or leave start= out.")
+        cases = [case]
+        while len(cases) <= self.levels and cases[0].mesh.n_cells >= FEWEST_JOINED:
+            mesh = cases[0].mesh
+            number = np.full(mesh.n_cells, -1)
+            for k, cells in enumerate(resisting_cells(mesh, cases[0].resistances).values()):
+                number[cells] = k
+            cases.insert(0, _on_mesh(cases[0], agglomerate(mesh, apart=number)))
+        return cases[:-1]
+
+    def fed(self, sources: tuple[Source, ...]) -> tuple[Source, ...]:
+        """None: there are no points to interpolate to."""
+        return ()
+
+
+def _whole(value: Any) -> bool:
+    return not isinstance(value, str) and as_number(value) >= 1 and as_number(value) % 1 == 0
+
+
+def _check_limits(call: str, tolerance: Any, max_iterations: Any) -> None:
+    if isinstance(tolerance, str) or not 0.0 < as_number(tolerance) < np.inf:
+        raise CaseError("The tolerance of the coarse runs must be positive.",
+                        where=f"{call}(tolerance=)", got=repr(tolerance), remedy="Give 1e-3, say.")
+    if not _whole(max_iterations):
+        raise CaseError("The limit of iterations is a whole number from 1.",
+                        where=f"{call}(max_iterations=)", got=repr(max_iterations),
+                        remedy="Give 300, say.")
 
 
 @dataclass(frozen=True, eq=False)
@@ -106,8 +176,8 @@ class Before:
     seconds: float = 0.0
 
 
-def run_coarser(chosen: CoarserMeshes, case: Case, sources: tuple[Source, ...], *, name: str,
-                solve: Solve) -> Before:
+def run_coarser(chosen: CoarserMeshes | Agglomerated, case: Case, sources: tuple[Source, ...],
+                *, name: str, solve: Solve) -> Before:
     """Run a case on the coarser meshes, from the coarsest on.
 
     Parameters
@@ -123,12 +193,12 @@ def run_coarser(chosen: CoarserMeshes, case: Case, sources: tuple[Source, ...], 
         The user stopped a coarse run: there is nothing to keep.
     """
     began, start, lines = time.perf_counter(), None, []
-    for coarse in [coarse_case(case, mesh) for mesh in chosen.family]:
+    for coarse in chosen.coarse_cases(case):
         label = f"{name}, {coarse.mesh.n_cells} cells"
         try:
             with warnings.catch_warnings():
                 warnings.simplefilter("ignore", Fv3dWarning)
-                run = solve(coarse, sources, start, label)
+                run = solve(coarse, chosen.fed(sources), start, label)
         except DivergenceError as error:
             line = f"{coarse.mesh.n_cells} cells: diverged after " \
                    f"{len(error.run.history['iteration'])} iterations, left out"
@@ -165,6 +235,10 @@ def coarse_case(case: Case, mesh: Mesh) -> Case:
     """
     _check_names(case, mesh)
     _check_domain(case.mesh, mesh)
+    return _on_mesh(case, mesh)
+
+
+def _on_mesh(case: Case, mesh: Mesh) -> Case:
     values = {name: _on_coarse(case.mesh, mesh, getattr(case, name))
               for name in ("viscosity", "body_force")}
     with warnings.catch_warnings():
@@ -185,7 +259,8 @@ def _on_coarse(fine: Mesh, coarse: Mesh, value: Any) -> Any:
     if not isinstance(value, np.ndarray) or value.shape[:1] != (fine.n_cells,):
         return value
     from scipy.spatial import cKDTree
-    _, home = cKDTree(coarse.cell_centre).query(fine.cell_centre)
+    home = coarse.group if isinstance(coarse, AgglomeratedMesh) \
+        else cKDTree(coarse.cell_centre).query(fine.cell_centre)[1]
     share = np.bincount(home, fine.cell_volume, coarse.n_cells)
     columns = value.reshape(fine.n_cells, -1).T
     mean = np.stack([np.bincount(home, fine.cell_volume * column, coarse.n_cells)

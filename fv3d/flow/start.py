@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 
 from ..errors import CaseError
+from ..mesh.agglomerate import AgglomeratedMesh
 from ..operators import linear
 from ..operators.assembly import symmetric_matrix
 from .coupling import Workspace
@@ -33,7 +34,7 @@ def start_state(problem: Problem, start: Any, workspace: Workspace) -> State:
         The start is of another kind, has a wrong shape or is not finite.
     """
     earlier: dict[Any, Any] = {}
-    if hasattr(start, "family"):
+    if hasattr(start, "coarse_cases"):
         raise CaseError("Only steady runs start from coarser meshes.", where="start=",
                         got=type(start).__name__,
                         remedy="Give solve_steady that start, and its run as the start here.")
@@ -75,9 +76,10 @@ def _from_run(problem: Problem, run: Any) -> State:
                         got=f"run '{run.name}'", remedy="Start from a run that did not diverge.")
     if run.mesh is problem.mesh:
         return State(state.velocity, state.pressure, state.mass_flux, state.boundary_velocity)
-    points = problem.mesh.cell_centre
-    velocity, pressure = sample_anywhere(run, points)
-    return _with_fluxes(problem, velocity, pressure)
+    mesh = problem.mesh
+    if isinstance(run.mesh, AgglomeratedMesh) and run.mesh.parent is mesh:
+        return _with_fluxes(problem, *_extended(run, mesh.cell_centre, run.mesh.group))
+    return _with_fluxes(problem, *sample_anywhere(run, mesh.cell_centre))
 
 
 def sample_anywhere(run: Any, points: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -99,8 +101,12 @@ def sample_anywhere(run: Any, points: np.ndarray) -> tuple[np.ndarray, np.ndarra
         raise CaseError("The start run is of another domain.", where="start=",
                         got=f"{np.mean(inside):.0%} of the cells lie inside its mesh",
                         remedy="Check the unit and the axes of both meshes, or start otherwise.")
+    return _extended(run, points, cKDTree(run.mesh.cell_centre).query(points)[1])
+
+
+def _extended(run: Any, points: np.ndarray, near: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Velocity and pressure at points, extended linearly from one cell each."""
     mesh, fluxes = run.mesh, run.state.mass_flux[run.mesh.n_internal:]
-    _, near = cKDTree(mesh.cell_centre).query(points)
     arm = points - mesh.cell_centre[near]
     velocity = run.velocity[near] + np.einsum("nij,nj->ni", run.velocity_gradient()[near], arm)
     slope = pressure_fields(bent(run.problem, run.state), run.pressure, fluxes).slope

@@ -12,7 +12,7 @@ from .. import errors
 from ..errors import CaseError, Outcome, as_number
 from . import coupling
 from .checkpoint import Checkpoint, begin
-from .coarser import Before, CoarserMeshes, run_coarser
+from .coarser import Agglomerated, Before, CoarserMeshes, run_coarser
 from .coupling import Record, make_workspace
 from .heap import kept_memory
 from .loop import check_kind, drive
@@ -67,8 +67,8 @@ def solve_steady(case: Case, *, tolerance: float, max_iterations: int,
     sources : sequence of sources such as :class:`Feedback`
     start : Run (of any mesh), velocity vector, function of points, checkpoint, coarser meshes, None
         None: irrotational flow through the given fluxes.  After :func:`read_checkpoint` the
-        iteration goes on where it was, to the last bit, and counts on.  :class:`CoarserMeshes`:
-        from runs on these.
+        iteration goes on where it was, to the last bit, and counts on.  :class:`CoarserMeshes` or
+        :class:`Agglomerated`: from runs on coarser meshes.
     name : str, optional
         Default: ``"plain"`` without sources, else ``"guided"``.
     monitors : sequence of Monitor
@@ -168,7 +168,7 @@ def _iterate_to_end(case: Case, tolerance: float, max_iterations: int,
 def _on_coarser(case: Case, sources: tuple[Source, ...], start: Any, name: str, progress: bool,
                 pseudo_step: LocalStep | GlobalStep | None) -> Before:
     """The start as it is, or the last of the runs on its coarser meshes."""
-    if not isinstance(start, CoarserMeshes):
+    if not isinstance(start, CoarserMeshes | Agglomerated):
         return Before(start)
 
     def solve(coarse: Case, fed: tuple[Source, ...], first: Any, label: str) -> Run:
