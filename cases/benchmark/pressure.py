@@ -4,7 +4,7 @@
 pressure-correction matrix of a lid-driven cube, right-hand side included, by fv3d and by pyamg:
 as it comes, and tuned (classical strength 0.25, Chebyshev smoothing of second degree between an
 eighth and 1.1 of the largest eigenvalue).  Both are conjugate gradients preconditioned by one
-cycle, to the same relative residual.  Then the iterations on cells a hundred times longer than thick.
+cycle, to the same relative residual.  Then the iterations on cells of aspect ratio 100.
 Nothing is asserted.
 """
 

@@ -28,7 +28,7 @@ from .monitors import Monitor
 from .packing import Packer, array_digest, digest, unpack
 from .problem import Problem, State
 
-VERSION = 1
+VERSION = 2
 REBUILT = ("response", "tracer", "prepared", "projection", "pseudo_step")  # of the workspace
 MOMENTS = (0.0, 0.013, 0.17, 1.0, 7.3, 110.0)  # times at which factors are compared [s]
 

@@ -296,8 +296,9 @@ def interpolated_flux(problem: Problem, velocity: np.ndarray, gradient: np.ndarr
     edge_d = d[owner]
     if problem.zones is not None and drag is not None:
         ease = problem.zones.ease(diagonal, drag)
-        flux[problem.zones.faces] = problem.zones.flux(velocity, gradient, fields, net, drop, ease,
-                                                       problem.orthogonal)
+        flux[problem.zones.faces] = problem.zones.flux(
+            velocity, gradient, fields, net, drop if len(drop) else np.zeros(mesh.n_faces), ease,
+            problem.orthogonal)
         edge_d[problem.zones.edges] = ease.edge
         gradient = ease.fluid[:, None, None] * gradient
     smooth = np.einsum("ij,ij->i", net[owner], mesh.delta[n:])
