@@ -381,7 +381,9 @@ def reference_flux(problem: Problem, flux: np.ndarray, velocity: np.ndarray,
     mesh, density = problem.mesh, problem.case.fluid.density
     inflow = -np.minimum(flux[mesh.n_internal:], 0.0).sum()
     volume = mesh.cell_volume.sum()
-    speed = np.sqrt(np.einsum("ij,ij,i->", velocity, velocity, mesh.cell_volume) / volume)
+    sums = np.empty(kernels_solving.CHUNKS)
+    kernels_solving.square_sums(velocity, mesh.cell_volume, sums)
+    speed = np.sqrt(sums.sum() / volume)
     speed += 1e-6 * np.sqrt(np.ptp(pressure) / density)
     circulating = density * speed * volume ** (2 / 3)
     return float(max(inflow if inflow > 1e-3 * circulating else circulating, 1e-300))

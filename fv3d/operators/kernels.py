@@ -190,7 +190,8 @@ def transport_faces(left, right, weight, skew, area, delta, orthogonal, straight
     """
     width = values.shape[1]
     skewed = skew.shape[0] > 0
-    carried = skewed and central_share != 0.0
+    central = central_share != 0.0
+    carried = skewed and central
     for face in numba.prange(right.shape[0]):
         a = left[face]
         b = right[face]
@@ -215,7 +216,9 @@ def transport_faces(left, right, weight, skew, area, delta, orthogonal, straight
         for i in range(width):
             reach = (gradient[up, i, 0] * arm0 + gradient[up, i, 1] * arm1
                      + gradient[up, i, 2] * arm2)
-            centred = w * values[a, i] + (1.0 - w) * values[b, i] - values[up, i]
+            centred = 0.0
+            if central:
+                centred = w * values[a, i] + (1.0 - w) * values[b, i] - values[up, i]
             stress = 0.0
             if carried or not straight:
                 for j in range(3):
@@ -234,25 +237,33 @@ def transport_faces(left, right, weight, skew, area, delta, orthogonal, straight
 @ThreadedKernel
 def fill_rows(offsets, faces, sign, entry, place, n_internal, coefficient, explicit, data,
               diagonal, rhs):
-    """Gather face coefficients into matrix rows, zero in their diagonal places.
+    """Gather face coefficients into matrix rows, zero in their diagonal places; 1 or 3 columns.
 
     diagonal = minus the sum of a row's coefficients; rhs = minus the net explicit outflow.
     """
     width = rhs.shape[1]
     for cell in numba.prange(offsets.shape[0] - 1):
         total = 0.0
-        for i in range(width):
-            rhs[cell, i] = 0.0
+        first = 0.0
+        second = 0.0
+        third = 0.0
         for k in range(offsets[cell], offsets[cell + 1]):
             f = faces[k]
             if f < n_internal:
-                c = coefficient[f, 0] if sign[k] > 0 else coefficient[f, 1]
+                s = float(sign[k])
+                c = coefficient[f, 0] if s > 0.0 else coefficient[f, 1]
                 data[entry[k]] = c
                 total -= c
-                for i in range(width):
-                    rhs[cell, i] -= sign[k] * explicit[f, i]
+                first -= s * explicit[f, 0]
+                if width == 3:
+                    second -= s * explicit[f, 1]
+                    third -= s * explicit[f, 2]
         data[place[cell]] = 0.0
         diagonal[cell] = total
+        rhs[cell, 0] = first
+        if width == 3:
+            rhs[cell, 1] = second
+            rhs[cell, 2] = third
 
 
 @ThreadedKernel

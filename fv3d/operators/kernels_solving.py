@@ -135,6 +135,20 @@ def absolute_sums(values, factor, sums):
 
 
 @ThreadedKernel
+def square_sums(values, factor, sums):
+    """sums[c] = sum of factor[row] * |values[row, :]|^2 over the c-th part of the rows."""
+    n = values.shape[0]
+    parts = sums.shape[0]
+    for part in prange(parts):
+        chunk = np.int64(part)
+        total = 0.0
+        for row in range(n * chunk // parts, n * (chunk + 1) // parts):
+            total += factor[row] * (values[row, 0] ** 2 + values[row, 1] ** 2
+                                    + values[row, 2] ** 2)
+        sums[part] = total
+
+
+@ThreadedKernel
 def product(indptr, indices, data, x, out):
     """out = A x for one vector."""
     for row in prange(indptr.shape[0] - 1):
