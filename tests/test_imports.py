@@ -17,7 +17,7 @@ LAYERS = ("mesh", "operators", "flow", "measured", "results")  # each may import
 FOR_ALL = {"errors", "signals"}
 LATE = {"pyvista", "vtkmodules", "vtk", "meshio", "pyamg", "pandas", "matplotlib", "gmsh"}
 HOMES = {
-    "pyamg": {"operators/linear.py"},
+    "pyamg": {"operators/linear.py", "operators/arrays_solving.py"},
     "numba": {"operators/kernels.py"},
     "meshio": {"mesh/read.py", "mesh/write.py"},
 }
@@ -67,7 +67,7 @@ def test_the_walk_sees_what_it_should(tmp_path: Path) -> None:
     """The checks below rest on :func:`imports`: it must find late, relative and guarded ones."""
     seen = {name: early for name, early, _ in imports(PACKAGE / "operators" / "linear.py")}
     assert seen["pyamg"] is False
-    assert seen["fv3d.operators.kernels"] is True
+    assert seen["fv3d.operators.kernels_solving"] is True
     assert seen["fv3d.errors.CaseError"] is True
     assert not any(name == "pandas" and early for name, early, _ in
                    imports(PACKAGE / "measured" / "readings.py"))  # guarded by TYPE_CHECKING
@@ -98,6 +98,17 @@ def test_heavy_libraries_stay_in_their_rooms(path: Path) -> None:
         if library in HOMES and name_of(path) not in HOMES[library]:
             wrong.append(f"line {line}: {library} belongs to {', '.join(HOMES[library])}")
     assert not wrong
+
+
+@pytest.mark.parametrize("path", FILES, ids=name_of)
+def test_nothing_but_measurement_uses_the_array_path(path: Path) -> None:
+    """It may import the compiled loops where it takes their place, nowhere else."""
+    mine = name_of(path)
+    for name, early, line in imports(path):
+        if not mine.startswith("operators/arrays"):
+            assert not name.startswith("fv3d.operators.arrays"), f"line {line}: {name}"
+        elif name.startswith(("fv3d.operators.kernels", "numba")):
+            assert mine == "operators/arrays.py" and not early, f"line {line}: {name}"
 
 
 def test_import_loads_nothing_heavy() -> None:
