@@ -24,7 +24,8 @@ SINGLE_TOO = {"product", "residual_product", "product_add", "chebyshev_start", "
               "sweep", "sweep_pieces", "invert_blocks", "copy_rows"}
 FLAGS = {"transport_faces": 4, "momentum_face_flux": 4, "pressure_fluxes": 2, "sweep_pieces": 2,
          "linear_face_values": 1, "flux_defects": 1, "momentum_residual": 1, "invert_blocks": 1,
-         "sweep": 1, "absolute_sums": 1, "product_dot": 1, "add_to_rows": 1, "limit_gradient": 1}
+         "fill_rows": 1, "sweep": 1, "absolute_sums": 1, "product_dot": 1, "add_to_rows": 1,
+         "limit_gradient": 1}
 
 
 def calls(names: Iterable[str] = tuple(REFERENCES)) -> list[tuple[str, int]]:
@@ -160,8 +161,9 @@ def transport_faces(m):
 
 @maker
 def fill_rows(m):
+    width = 1 if m.flags[0] else 3
     return [*m.around, m.layout.entry, m.layout.diagonal, m.inside, m.normal(m.inside, 2),
-            m.normal(m.inside, 3), unset(len(m.layout.indices)), unset(m.n), unset(m.n, 3)]
+            m.normal(m.inside, width), unset(len(m.layout.indices)), unset(m.n), unset(m.n, width)]
 
 
 @maker
@@ -267,6 +269,11 @@ def sweep_pieces(m):
 @maker
 def absolute_sums(m):
     return [m.normal(m.n, 3), m.normal(0 if m.flags[0] else m.n), unset(kernels_solving.CHUNKS)]
+
+
+@maker
+def square_sums(m):
+    return [m.normal(m.n, 3), m.normal(m.n), unset(kernels_solving.CHUNKS)]
 
 
 @maker

@@ -60,6 +60,11 @@ def absolute_sums(values, factor, sums):
 
 
 @reference
+def square_sums(values, factor, sums):
+    return {2: part_sums(factor * (values**2).sum(axis=1), len(sums))}
+
+
+@reference
 def product(indptr, indices, data, x, out):
     return {4: dense(indptr, indices, data) @ x.astype(float)}
 

@@ -173,6 +173,11 @@ def absolute_sums(values, factor, sums):
         sums[part] = np.einsum("ij,i->", size, factor[rows]) if len(factor) else size.sum()
 
 
+def square_sums(values, factor, sums):
+    for part, rows in _parts(len(values), sums):
+        sums[part] = np.einsum("ij,ij,i->", values[rows], values[rows], factor[rows])
+
+
 def product(indptr, indices, data, x, out):
     out[:] = compressed(indptr, indices, data, len(x)) @ x
 
