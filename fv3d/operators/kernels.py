@@ -6,11 +6,16 @@ and the result does not depend on their number.  Every kernel has a plain refere
 
 from __future__ import annotations
 
+import os
 import types
 import warnings
 from collections.abc import Callable
 from numbers import Integral
 from typing import Any
+
+# Threads that wait for work give their core away soon: beside another job on the same cores a loop
+# is else up to ten times slower than on one thread.  Read by the OpenMP library when it is loaded.
+os.environ.setdefault("GOMP_SPINCOUNT", "1000")
 
 import numba
 import numpy as np
