@@ -5,6 +5,7 @@ some iterations on, then goes on from that state with the compiled loops, with N
 pyamg (:mod:`fv3d.operators.arrays`, one thread) and once more with the compiled loops.  Printed
 are milliseconds, their ratio, ratios to the bound of 3.85 kB per cell at the triad bandwidth of the
 same run, the milliseconds by phases, and how far the fields of both lie apart in the end.
+Processor milliseconds much below the others (times threads) tell that the machine was busy.
 """
 
 from __future__ import annotations
@@ -30,9 +31,13 @@ from fv3d.operators.arrays import array_path
 
 @dataclass
 class Path:
-    """Median seconds of an iteration, those of its phases, solver iterations, last state."""
+    """Median seconds of an iteration, those of its phases, solver iterations, last state.
+
+    ``processor``: seconds of all threads together, the mean of the iterations.
+    """
 
     seconds: float
+    processor: float
     phases: dict[str, float]
     effort: float
     state: State
@@ -42,16 +47,18 @@ def timed(problem: Problem, state: State, workspace: coupling.Workspace, count: 
     """Iterations from a state; the workspace given stays as it is but for its work arrays."""
     workspace, spans, efforts = replace(workspace), [], []
     state, _ = coupling.step(problem, state, workspace)  # what is made once
+    busy = time.process_time()
     with watched() as watch:
         for _ in range(count):
             began = time.perf_counter()
             state, record = coupling.step(problem, state, workspace)
             spans.append(time.perf_counter() - began)
             efforts.append(record.pressure_iterations)
+    busy = (time.process_time() - busy) / count
     watch.seconds["rest"] += sum(spans) - sum(watch.seconds.values())
     middle = float(np.median(spans))
     phases = {name: seconds * middle / sum(spans) for name, seconds in watch.seconds.items()}
-    return Path(middle, phases, float(np.mean(efforts)), state)
+    return Path(middle, busy, phases, float(np.mean(efforts)), state)
 
 
 def compared(case: fv3d.Case, count: int) -> tuple[Path, Path, Path]:
@@ -100,9 +107,10 @@ def show(kind: str, cells: int, rate: float, paths: tuple[Path, Path, Path]) -> 
             print(f"  {name:15s} {one * 1e3:11.1f} {other * 1e3:11.1f} {other / one:7.1f}")
     print(f"  iteration       {compiled.seconds * 1e3:11.1f} {arrays.seconds * 1e3:11.1f} "
           f"{arrays.seconds / compiled.seconds:7.1f}")
+    print(f"  processor       {compiled.processor * 1e3:11.1f} {arrays.processor * 1e3:11.1f}")
     print(f"  over the bound  {compiled.seconds / bound:11.1f} {arrays.seconds / bound:11.1f}")
-    print(f"  compiled, one thread {single.seconds * 1e3:.1f} ms, arrays "
-          f"{arrays.seconds / single.seconds:.1f} times that")
+    print(f"  compiled, one thread {single.seconds * 1e3:.1f} ms (processor "
+          f"{single.processor * 1e3:.1f}), arrays {arrays.seconds / single.seconds:.1f} times that")
     print(f"  solver iterations {compiled.effort:.1f} and {arrays.effort:.1f}; velocities "
           f"{apart:.0e} apart in the end", flush=True)
 

@@ -145,7 +145,7 @@ def transport_faces(left, right, weight, skew, area, delta, orthogonal, straight
         arm *= upwind_share * flux
         along(np.take(slopes, up, axis=0, mode="clip"), arm, explicit[rows])
         if central_share:
-            centred = matrix @ values[:matrix.shape[1]] - values.take(up, axis=0)
+            centred = matrix @ values[:matrix.shape[1]] - np.take(values, up, axis=0, mode="clip")
             for i in range(width):
                 explicit[rows, i] += central_share * flux * centred[:, i]
         if carried or full_stress or not straight:
@@ -166,7 +166,7 @@ def _row_places(offsets: np.ndarray, faces: np.ndarray, sign: np.ndarray, entry:
     """Where each matrix entry is found among the coefficients; their sums; signs of faces."""
     inner = faces < n_internal
     column = (2 * faces[inner] + (sign[inner] < 0)).astype(np.int32)
-    source = np.zeros(len(column) + len(place), dtype=np.int32)
+    source = np.zeros(len(column) + len(place), dtype=np.intp)
     source[entry[inner]] = column
     starts = np.concatenate([[0], np.cumsum(inner)])[offsets].astype(np.int32)
     sums = compressed(starts, column, np.ones(len(column)), 2 * n_internal)
@@ -191,7 +191,7 @@ def _incidence(offsets: np.ndarray, faces: np.ndarray, n_faces: int) -> sparse.c
 def _symmetric_places(faces: np.ndarray, entry: np.ndarray, place: np.ndarray,
                       n_internal: int) -> np.ndarray:
     inner = faces < n_internal
-    source = np.zeros(int(inner.sum()) + len(place), dtype=np.int32)
+    source = np.zeros(int(inner.sum()) + len(place), dtype=np.intp)
     source[entry[inner]] = faces[inner]
     return source
 
@@ -215,62 +215,84 @@ def face_coefficients(left, right, weight, cell_values, factor, scale, out):
         out[rows] *= scale
 
 
+def _through(left: np.ndarray, right: np.ndarray, weight: np.ndarray,
+             vectors: np.ndarray) -> sparse.csr_matrix:
+    """(n_internal, 3 n_cells) matrix from cell vectors to inner products of their means."""
+    n = len(right)
+    cells = int(max(left.max(initial=0), right.max(initial=0))) + 1
+    sides = np.stack([left, right], axis=1)
+    columns = (3 * sides[:, :, None] + np.arange(3, dtype=np.int32)).reshape(-1)
+    shares = np.stack([weight, 1.0 - weight], axis=1)[:, :, None] * vectors[:n, None, :]
+    starts = np.arange(6 * n + 1, step=6, dtype=np.int32)
+    return compressed(starts, columns.astype(np.int32), shares.reshape(-1), 3 * cells)
+
+
+def _crossing(left: Any, right: Any, weight: Any, vectors: np.ndarray,
+              values: np.ndarray) -> np.ndarray:
+    """(n_internal,) inner products of face vectors with the linear means of cell vectors."""
+    matrix = kept(_through, left, right, weight, vectors)
+    return matrix @ values.reshape(-1)[:matrix.shape[1]]
+
+
 def momentum_face_flux(left, right, weight, skew, area, delta, orthogonal, straight, density,
                        velocity, gradient, net_gradient, pressure, force_drop, interpolation_d,
                        memory, out):
-    packed = np.empty((len(velocity), 7))
-    packed[:, :3], packed[:, 3:6], packed[:, 6] = velocity, net_gradient, interpolation_d
-    slopes = gradient.reshape(len(gradient), 9)
-    arms, areas, jumps = kept(_columns, delta), kept(_columns, area), _jumps(left, right, pressure)
+    flux = _crossing(left, right, weight, area, velocity)
+    push = _crossing(left, right, weight, area if straight else delta, net_gradient)
+    jumps = _jumps(left, right, pressure)
+    areas, slopes = kept(_columns, area), gradient.reshape(len(gradient), 9)
     for rows, matrix in kept(_interpolation, left, right, weight):
-        mean, factor = matrix @ packed[:matrix.shape[1]], orthogonal[rows]
-        flux = _across(mean, areas[:, rows])
+        factor, part, jump = orthogonal[rows], push[rows], jumps[rows]
         if len(skew):
-            shift = np.empty((len(mean), 3))
+            shift = np.empty((len(part), 3))
             along(matrix @ slopes[:matrix.shape[1]], skew[rows].T, shift)
-            flux += _across(shift, areas[:, rows])
-        jump = jumps[rows] - force_drop[rows] if len(force_drop) else jumps[rows]
+            flux[rows] += _across(shift, areas[:, rows])
+        if len(force_drop):
+            jump -= force_drop[rows]
         if straight:
-            push = _across(mean[:, 3:6], areas[:, rows])
-            push -= factor * jump
+            jump *= factor
+            part -= jump
         else:
-            push = _across(mean[:, 3:6], arms[:, rows])
-            push -= jump
-            push *= factor
+            part -= jump
+            part *= factor
         if len(memory):
-            push += memory[rows]
-        push *= mean[:, 6]
-        flux += push
-        np.multiply(flux, density, out=out[rows])
+            part += memory[rows]
+        part *= matrix @ interpolation_d[:matrix.shape[1]]
+        part += flux[rows]
+        np.multiply(part, density, out=out[rows])
 
 
 def pressure_fluxes(left, right, weight, area, delta, orthogonal, straight, density, inner, relaxed,
                     slope, pressure, out):
-    packed = np.empty((len(slope), 6 if len(relaxed) else 3))
-    packed[:, :3] = slope
-    for j in range(3 if len(relaxed) else 0):
-        np.multiply(slope[:, j], relaxed, out=packed[:, 3 + j])
-    arms, areas, jumps = kept(_columns, delta), kept(_columns, area), _jumps(left, right, pressure)
-    for rows, mean in _means(left, right, weight, packed):
-        push = _across(mean, (areas if straight else arms)[:, rows])
+    push = _crossing(left, right, weight, area if straight else delta, slope)
+    jumps = _jumps(left, right, pressure)
+    through = push[:0]
+    if len(relaxed):
+        moved = np.empty_like(slope)
+        for j in range(3):
+            np.multiply(slope[:, j], relaxed, out=moved[:, j])
+        through = _crossing(left, right, weight, area, moved)
+    for rows in blocks(len(right)):
+        part = push[rows]
         if straight:
-            push /= orthogonal[rows]
-        push -= jumps[rows]
-        push *= inner[rows]
+            part /= orthogonal[rows]
+        part -= jumps[rows]
+        part *= inner[rows]
         if len(relaxed):
-            through = _across(mean[:, 3:], areas[:, rows])
-            through *= density
-            push -= through
-        out[rows] = push
+            through[rows] *= density
+            part -= through[rows]
+        out[rows] = part
 
 
 def flux_defects(left, right, weight, skew, area, velocity, gradient, density, mass_flux, out):
     areas, slopes = kept(_columns, area), gradient.reshape(len(gradient), 9)
-    for rows, matrix in kept(_interpolation, left, right, weight):
-        mean = matrix @ velocity[:matrix.shape[1]]
-        if len(skew):
-            along(matrix @ slopes[:matrix.shape[1]], skew[rows].T, mean, add=True)
-        out[rows] = mass_flux[rows] / density - _across(mean, areas[:, rows])
+    np.subtract(mass_flux[:len(right)] / density,
+                _crossing(left, right, weight, area, velocity), out=out)
+    if len(skew):
+        for rows, matrix in kept(_interpolation, left, right, weight):
+            shift = np.empty((rows.stop - rows.start, 3))
+            along(matrix @ slopes[:matrix.shape[1]], skew[rows].T, shift)
+            out[rows] -= _across(shift, areas[:, rows])
 
 
 def memory_factors(left, right, weight, with_time, without, out):
@@ -295,29 +317,30 @@ def correct_flux(left, right, inner, correction, flux):
 
 
 def subtract_scaled(field, factor, change, out):
-    for j in range(3):
-        part = factor * change[:, j]
-        np.subtract(field[:, j], part, out=out[:, j])
+    for rows in blocks(len(field)):
+        part = np.repeat(factor[rows], 3).reshape(-1, 3)
+        part *= change[rows]
+        np.subtract(field[rows], part, out=out[rows])
 
 
 def extend_vectors(cells, values, gradient, arm, out):
-    out[:] = values.take(cells, axis=0)
-    along(gradient.reshape(len(gradient), 9).take(cells, axis=0), arm.T, out, add=True)
+    np.take(values, cells, axis=0, out=out, mode="clip")
+    slopes = np.take(gradient.reshape(len(gradient), 9), cells, axis=0, mode="clip")
+    along(slopes, arm.T, out, add=True)
 
 
 def extend_scalars(cells, values, gradient, arm, out):
-    np.add(values.take(cells), _across(gradient.take(cells, axis=0), arm.T), out=out)
+    slopes = np.take(gradient, cells, axis=0, mode="clip")
+    np.add(np.take(values, cells, mode="clip"), _across(slopes, arm.T), out=out)
 
 
-def _grouped(rows: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Order by rows, where each begins in it, and which they are."""
-    order = np.argsort(rows, kind="stable")
-    some, starts = np.unique(rows[order], return_index=True)
-    return order, starts, some
+def _grouped(rows: np.ndarray) -> tuple[sparse.csr_matrix, np.ndarray]:
+    """Matrix that sums over equal rows, and which rows there are."""
+    some, place = np.unique(rows, return_inverse=True)
+    ones = (np.ones(len(rows)), (place, np.arange(len(rows))))
+    return sparse.csr_matrix(ones, shape=(len(some), len(rows))), some
 
 
 def add_to_rows(rows, values, out):
-    if not len(rows):
-        return
-    order, starts, some = kept(_grouped, rows)
-    out[some] += np.add.reduceat(values[order], starts, axis=0)
+    sums, some = kept(_grouped, rows)
+    out[some] += sums @ values

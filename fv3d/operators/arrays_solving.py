@@ -1,9 +1,9 @@
 """Array functions in the place of the loops of the solvers and of the limiters.
 
 Arguments and results are those of the loops of the same names; see
-:mod:`fv3d.operators.arrays` for what they are for.  The Gauss-Seidel sweeps are pyamg's, column by
-column; where walls couple the components of a cell (their diagonal blocks are not diagonal) all
-three run in one matrix of three rows per cell, multiplied by the inverted blocks.
+:mod:`fv3d.operators.arrays` for what they are for.  The Gauss-Seidel sweeps are pyamg's, over a
+matrix of three rows per cell; where walls couple the components of a cell its rows are multiplied
+by the inverted block, so that the sweeps solve it exactly.
 """
 
 from __future__ import annotations
@@ -21,7 +21,11 @@ PLACE = np.array([[0, 3, 4], [3, 1, 5], [4, 5, 2]])  # of a symmetric block's en
 
 def _bent(block: np.ndarray) -> np.ndarray:
     """Rows whose blocks are not diagonal."""
-    return np.flatnonzero((block[:, 3] != 0) | (block[:, 4] != 0) | (block[:, 5] != 0))
+    found = []
+    for rows in blocks(len(block)):
+        mixed = (block[rows, 3] != 0) | (block[rows, 4] != 0) | (block[rows, 5] != 0)
+        found.append(np.flatnonzero(mixed) + rows.start)
+    return np.concatenate(found) if found else np.empty(0, dtype=np.int64)
 
 
 def _applied(block: np.ndarray, x: np.ndarray) -> np.ndarray:
@@ -48,7 +52,7 @@ def invert_blocks(block, extra, out):
     for rows in blocks(len(out)):
         for j in range(3):
             out[rows, j] = 1.0 / (block[rows, j] + extra[rows])
-    out[:, 3:] = 0.0
+            out[rows, 3 + j] = 0.0
     bent = _bent(block)
     whole = block[bent][:, PLACE] + extra[bent, None, None] * np.eye(3)
     inverse = np.linalg.inv(whole).reshape(-1, 9)
@@ -56,96 +60,95 @@ def invert_blocks(block, extra, out):
 
 
 @dataclass(eq=False)
-class Separate:
-    """Rows whose components are swept one after the other.
+class Swept:
+    """A matrix of three rows for each cell, for pyamg's sweeps.
 
-    ``data`` carries the diagonal of the first component; ``walls`` are the places where the others
-    have another, ``diagonal`` (k, 3) all of them there.
+    The rows of bent cells are multiplied by their inverted blocks, which couple their components;
+    the others only meet themselves.
     """
 
     indptr: np.ndarray
     indices: np.ndarray
     data: np.ndarray
-    places: np.ndarray
-    diagonal: np.ndarray
-
-    def run(self, rhs: np.ndarray, x: np.ndarray, order: Any) -> None:
-        """Sweep over ranges of rows (start, stop, step), or rows in an order of their own."""
-        from pyamg import amg_core
-        for j in range(3):
-            self.data[self.places] = self.diagonal[:, j]
-            column, known = x[:, j].copy(), rhs[:, j].copy()
-            system = (self.indptr, self.indices, self.data, column, known)
-            if isinstance(order, np.ndarray):
-                amg_core.gauss_seidel_indexed(*system, order, 0, len(order), 1)
-            else:
-                for start, stop, step in order:
-                    amg_core.gauss_seidel(*system, start, stop, step)
-            x[:, j] = column
-
-
-@dataclass(eq=False)
-class Together:
-    """Three rows for each cell, multiplied by its inverted diagonal block."""
-
-    indptr: np.ndarray
-    indices: np.ndarray
-    data: np.ndarray
+    bent: np.ndarray
     inverse: np.ndarray
 
     def run(self, rhs: np.ndarray, x: np.ndarray, order: Any) -> None:
-        """As :meth:`Separate.run`."""
+        """Sweep over ranges of cells (start, stop, step), or cells in an order of their own."""
         from pyamg import amg_core
-        known = _applied(self.inverse, rhs).astype(x.dtype).reshape(-1)
-        system = (self.indptr, self.indices, self.data, x.reshape(-1), known)
+        known = rhs
+        if len(self.bent):
+            known = rhs.copy()
+            known[self.bent] = _applied(self.inverse, rhs[self.bent])
+        system = (self.indptr, self.indices, self.data, x.reshape(-1), known.reshape(-1))
         if isinstance(order, np.ndarray):
             three = (3 * order[:, None] + np.arange(3, dtype=np.int32)).reshape(-1)
             amg_core.gauss_seidel_indexed(*system, three, 0, len(three), 1)
         else:
             for start, stop, step in order:
-                low = 3 * start if step > 0 else 3 * start + 2
-                amg_core.gauss_seidel(*system, low, 3 * stop if step > 0 else 3 * stop + 2, step)
+                last = 0 if step > 0 else 2
+                amg_core.gauss_seidel(*system, 3 * start + last, 3 * stop + last, step)
 
 
 def _diagonal_places(indptr: np.ndarray, indices: np.ndarray) -> np.ndarray:
     return np.flatnonzero(indices == np.repeat(np.arange(len(indptr) - 1), np.diff(indptr)))
 
 
-def _expanded(indptr: np.ndarray, indices: np.ndarray, bent: np.ndarray) -> tuple[np.ndarray, ...]:
-    """Pattern of three rows per cell, and which data and which inverse make each entry."""
+@dataclass(eq=False)
+class Layout:
+    """Pattern of :class:`Swept`: the data each entry comes from, its diagonal places.
+
+    ``turned`` are the entries in the rows of bent cells, ``factor`` what they are multiplied by.
+    """
+
+    indptr: np.ndarray
+    indices: np.ndarray
+    entry: np.ndarray
+    diagonal: np.ndarray
+    turned: np.ndarray
+    factor: np.ndarray
+
+
+def _layout(indptr: np.ndarray, indices: np.ndarray, bent: np.ndarray) -> Layout:
     n, count = len(indptr) - 1, np.diff(indptr)
-    each = np.ones(n, dtype=np.int64)
-    each[bent] = 3  # components that the rows of a cell reach
-    cell = np.repeat(np.arange(n), 3 * each)
-    first = np.cumsum(3 * each) - 3 * each
-    turn = np.arange(len(cell)) - np.repeat(first, 3 * each)
-    i, j = turn // each[cell], turn % each[cell]
-    j = np.where(each[cell] == 1, i, j)
+    reach = np.ones(n, dtype=np.int64)
+    reach[bent] = 3  # components that each row of a cell sees
+    cell = np.repeat(np.arange(n), 3 * reach)
+    turn = np.arange(len(cell)) - np.repeat(np.cumsum(3 * reach) - 3 * reach, 3 * reach)
+    i, j = turn // reach[cell], turn % reach[cell]
+    j = np.where(reach[cell] == 1, i, j)
     lengths = count[cell]
-    starts = np.cumsum(lengths) - lengths
-    entry = np.repeat(indptr[cell] - starts, lengths) + np.arange(lengths.sum())
+    entry = np.repeat(indptr[cell] - (np.cumsum(lengths) - lengths), lengths)
+    entry += np.arange(len(entry))
     columns = 3 * indices[entry] + np.repeat(j, lengths)
-    factor = np.repeat(6 * cell + PLACE[i, j], lengths)
-    rows = np.concatenate([[0], np.cumsum(np.repeat(count * each, 3))])
+    rows = np.concatenate([[0], np.cumsum(np.repeat(count * reach, 3))])
     diagonal = np.flatnonzero(columns == np.repeat(np.arange(3 * n), np.diff(rows)))
-    return tuple(a.astype(np.int32) for a in (rows, columns, entry, factor, diagonal))
+    turned = np.flatnonzero(np.repeat(reach[cell] == 3, lengths))
+    factor = np.repeat(6 * cell + PLACE[i, j], lengths)[turned]
+    return Layout(rows.astype(np.int32), columns.astype(np.int32), entry, diagonal, turned, factor)
+
+
+def _remembered(rows: np.ndarray) -> np.ndarray:
+    """The array of the same rows that was given first."""
+    known: list[np.ndarray] = kept(list)
+    for old in known:
+        if np.array_equal(old, rows):
+            return old
+    known.append(rows)
+    return rows
 
 
 def _equations(indptr: np.ndarray, indices: np.ndarray, data: np.ndarray,
-               inverse: np.ndarray) -> Separate | Together:
+               inverse: np.ndarray) -> Swept:
     """What is swept, from the off-diagonal entries and the inverted diagonal blocks."""
     bent = _bent(inverse)
-    if len(bent):
-        rows, columns, entry, factor, diagonal = kept(_expanded, indptr, indices, bent)
-        values = data[entry] * inverse.reshape(-1)[factor]
-        values[diagonal] = 1.0
-        return Together(rows, columns, values, inverse)
-    places = kept(_diagonal_places, indptr, indices)
-    own = data.copy()
-    own[places] = 1.0 / inverse[:, 0]
-    walls = np.flatnonzero((inverse[:, 0] != inverse[:, 1]) | (inverse[:, 0] != inverse[:, 2]))
-    return Separate(indptr, indices, own, places[walls],
-                    (1.0 / inverse[walls, :3]).astype(data.dtype))
+    layout = kept(_layout, indptr, indices, _remembered(bent))
+    values = np.take(data, layout.entry, mode="clip")
+    values[layout.turned] *= inverse.reshape(-1)[layout.factor]
+    own = 1.0 / inverse[:, :3]
+    own[bent] = 1.0
+    values[layout.diagonal] = own.reshape(-1)
+    return Swept(layout.indptr, layout.indices, values, bent, inverse[bent])
 
 
 def sweep(indptr, indices, data, inverse, rhs, rows, backward, x):
@@ -170,12 +173,17 @@ def _parts(n: int, sums: np.ndarray) -> Any:
 def absolute_sums(values, factor, sums):
     for part, rows in _parts(len(values), sums):
         size = np.abs(values[rows])
-        sums[part] = np.einsum("ij,i->", size, factor[rows]) if len(factor) else size.sum()
+        total = size[:, 0] + size[:, 1]
+        total += size[:, 2]
+        sums[part] = np.einsum("i,i->", total, factor[rows]) if len(factor) else total.sum()
 
 
 def square_sums(values, factor, sums):
     for part, rows in _parts(len(values), sums):
-        sums[part] = np.einsum("ij,ij,i->", values[rows], values[rows], factor[rows])
+        size = np.square(values[rows])
+        total = size[:, 0] + size[:, 1]
+        total += size[:, 2]
+        sums[part] = np.einsum("i,i->", total, factor[rows])
 
 
 def product(indptr, indices, data, x, out):
