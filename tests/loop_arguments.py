@@ -21,7 +21,7 @@ from fv3d.operators.assembly import Pattern, orthogonal_factor
 Arguments = list[Any]
 LOOPS = {**vars(kernels), **vars(kernels_solving), **vars(kernels_limiting)}
 SINGLE_TOO = {"product", "residual_product", "product_add", "chebyshev_start", "chebyshev_step",
-              "sweep", "sweep_pieces", "invert_blocks", "copy_rows"}
+              "sweep", "sweep_pieces", "invert_blocks"}
 FLAGS = {"transport_faces": 4, "momentum_face_flux": 4, "pressure_fluxes": 2, "sweep_pieces": 2,
          "linear_face_values": 1, "flux_defects": 1, "momentum_residual": 1, "invert_blocks": 1,
          "fill_rows": 1, "sweep": 1, "absolute_sums": 1, "product_dot": 1, "add_to_rows": 1,
@@ -289,13 +289,6 @@ def residual_product(m):
 @maker
 def product_add(m):
     return [*m.rows(hollow=False), m.vector(), m.vector()]
-
-
-@maker
-def copy_rows(m):
-    data = m.normal(len(m.layout.indices))
-    return [m.layout.indptr, m.layout.indices, data, unset(len(data), dtype=m.dtype),
-            unset(m.n, dtype=m.dtype)]
 
 
 @maker

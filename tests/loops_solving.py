@@ -80,12 +80,6 @@ def product_add(indptr, indices, data, x, out):
 
 
 @reference
-def copy_rows(indptr, indices, data, copy, inverse_diagonal):
-    diagonal = np.diag(dense(indptr, indices, data))
-    return {3: data.astype(copy.dtype), 4: 1.0 / diagonal}
-
-
-@reference
 def chebyshev_start(inverse_diagonal, rhs, scale, direction, x):
     first = float(scale) * inverse_diagonal.astype(float) * rhs
     return {3: first, 4: first}

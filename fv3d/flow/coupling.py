@@ -37,8 +37,7 @@ from .problem import Force, Problem, State
 from .response import PressureResponse, pressure_response
 from .zones import bent, without_zones
 
-REFRESH_AT = 1.6  # solver iterations above this multiple of a fresh hierarchy's are excess
-REFRESH_AFTER = 10.0  # excess iterations in all, as long as about half of a refresh takes
+REFRESH_AT = 1.6  # solver iterations above this multiple of a fresh hierarchy's: refresh it
 FEWEST_SWEEPS = 4
 SWEPT_TO = 0.05  # share of the momentum residual that the sweeps may leave
 SMALL_STEP = 1.6  # inertia over diagonal above which the face fluxes carry the time term too
@@ -82,7 +81,6 @@ class Workspace:
     residual: float = 0.0
     prepared: linear.Prepared | None = None
     best_iterations: int = 0
-    excess: float = 0.0
     setups: int = 0
     projection: Any = None
     sweeps: int = FEWEST_SWEEPS
@@ -344,14 +342,13 @@ def solve_pressure(problem: Problem, workspace: Workspace, matrix: Any, rhs: np.
     if workspace.prepared is None:
         workspace.prepared = linear.prepare(matrix, method=multigrid, singular=problem.closed)
         workspace.best_iterations, workspace.setups = 0, workspace.setups + 1
-    workspace.prepared.follow(matrix)
     helped = workspace.prepared if problem.zones is None \
         else deflated(workspace.prepared, matrix, problem.zones.parts)
     result = linear.solve(helped, rhs, matrix=matrix, tolerance=tolerance)
+    per_decade = result.iterations / max(-np.log10(max(tolerance, 1e-300)), 0.1)
     if workspace.best_iterations == 0:
-        workspace.best_iterations, workspace.excess = max(result.iterations, 2), 0.0
-    workspace.excess += max(result.iterations - REFRESH_AT * workspace.best_iterations, 0.0)
-    if workspace.excess > REFRESH_AFTER:
+        workspace.best_iterations = max(int(np.ceil(per_decade)), 2)
+    elif per_decade > REFRESH_AT * workspace.best_iterations:
         workspace.prepared = linear.refresh(workspace.prepared, matrix)
         workspace.best_iterations, workspace.setups = 0, workspace.setups + 1
     return result

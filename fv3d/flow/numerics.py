@@ -175,8 +175,7 @@ class Numerics:
         as bring their residual to a twentieth, measured now and then during the run. (Fewer make
         thin cells answer a pressure correction more weakly than it assumes.)
     pressure_tolerance : float
-        Residual reduction of the pressure correction per iteration.  A tighter one takes no
-        iteration away.
+        Residual reduction of the pressure correction per iteration.
     multigrid : how the hierarchy is built
     full_stress : bool or None
         Keep the transposed velocity gradient in the viscous stress. None: only where the
@@ -187,7 +186,7 @@ class Numerics:
     convection: ConvectionScheme = field(default_factory=SecondOrderUpwind)
     gradient: GradientMethod = field(default_factory=LeastSquares)
     sweeps: int | None = None
-    pressure_tolerance: float = 0.25
+    pressure_tolerance: float = 0.1
     multigrid: Any = field(default_factory=ByAnisotropy)
     full_stress: bool | None = None
 
@@ -205,4 +204,4 @@ class Numerics:
         if not 0.0 < as_number(self.pressure_tolerance) < 1.0:
             raise CaseError("The pressure tolerance lies between 0 and 1.",
                             where="Numerics(pressure_tolerance=)", got=self.pressure_tolerance,
-                            remedy="Give 0.25, say.")
+                            remedy="Give 0.1, say.")

@@ -198,12 +198,6 @@ def product_add(indptr, indices, data, x, out):
     out += compressed(indptr, indices, data, len(x)) @ x
 
 
-def copy_rows(indptr, indices, data, copy, inverse_diagonal):
-    copy[:] = data
-    np.divide(1.0, data[kept(_diagonal_places, indptr, indices)], out=inverse_diagonal,
-              casting="same_kind")
-
-
 def chebyshev_start(inverse_diagonal, rhs, scale, direction, x):
     np.multiply(inverse_diagonal, rhs, out=direction)
     direction *= scale

@@ -179,16 +179,6 @@ def product_add(indptr, indices, data, x, out):
 
 
 @ThreadedKernel
-def copy_rows(indptr, indices, data, copy, inverse_diagonal):
-    """copy = data; inverse_diagonal = 1 / diagonal, both in the precision of their arrays."""
-    for row in prange(indptr.shape[0] - 1):
-        for k in range(indptr[row], indptr[row + 1]):
-            copy[k] = data[k]
-            if indices[k] == row:
-                inverse_diagonal[row] = 1.0 / data[k]
-
-
-@ThreadedKernel
 def chebyshev_start(inverse_diagonal, rhs, scale, direction, x):
     """First Chebyshev step from x = 0."""
     for row in prange(rhs.shape[0]):

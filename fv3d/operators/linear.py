@@ -123,15 +123,6 @@ class Prepared:
         entries = sum(level.matrix.nnz for level in self.levels) / self.levels[0].matrix.nnz
         return f"Prepared(levels {sizes}, operator complexity {entries:.2f})"
 
-    def follow(self, matrix: sparse.csr_matrix) -> None:
-        """Smooth with a changed matrix of the same pattern; the coarse matrices stay as they are.
-
-        Costs as much as a product, and halves what an old hierarchy loses.
-        """
-        top = self.levels[0]
-        kernels.copy_rows(matrix.indptr, matrix.indices, matrix.data, top.matrix.data,
-                          top.inverse_diagonal)
-
     def precondition(self, rhs: np.ndarray) -> np.ndarray:
         """One V-cycle from zero on ``rhs`` (n,) -> (n,), float64 in and out."""
         self.levels[0].work[0][:] = rhs
