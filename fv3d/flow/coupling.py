@@ -188,10 +188,8 @@ def step(problem: Problem, state: State, workspace: Workspace) -> tuple[State, R
         if part.pressure is not None:
             pressure = pressure + part.pressure
     velocity = state.velocity + change
-    if pressure is not state.pressure:
-        fields = pressure_fields(problem, pressure, edge_flux)
+    # The fluxes keep the forces and pressures of before: what sources change of both balances.
     state = replace(state, velocity=velocity, pressure=pressure, sources=tuple(sources))
-    force = total_force(problem, state)
     edge = boundary_velocity(problem, velocity, gradient, edge_flux)
     answer = _face_answer(problem, start, gradient, equation, inertia)
     flux = interpolated_flux(problem, velocity, gradient, edge, fields, force, *answer,

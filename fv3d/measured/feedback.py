@@ -31,10 +31,17 @@ from .feedback_time import FeedbackInTime
 from .kernel import Gaussian, Kernel, SingleCell
 from .layout import Layout, make_layout
 from .readings import Readings, linearised_direction, predict
-from .response import SHARE_OF_SINGLE, SHARE_OF_WIDE, make_pushes, sweep_response
+from .response import (
+    SHARE_OF_SINGLE,
+    SHARE_OF_WIDE,
+    has_changed,
+    make_pushes,
+    near_equation,
+    sweep_response,
+)
 
-REFRESH_EARLY = (0, 2, 5, 10, 20)  # responses are renewed at these iterations,
-REFRESH_EVERY = 30                 # then at every multiple of this
+REFRESH_EARLY = (0, 2, 5, 10, 20)  # responses are looked at in these iterations,
+REFRESH_EVERY = 30                 # then at every multiple of this, and renewed if outdated
 TURNED_AT = (0, 1, 2, 10, 30, 60)  # iterations at which a speed reading's direction follows
 CAUTION = 0.1                      # see Response.between; tripled while the misfit does not fall
 BITES_FROM = 3.0                   # gain * radius / speed above which passing fluid is corrected
@@ -149,11 +156,14 @@ class Feedback:
 
     def force(self, own: FeedbackState) -> Force:
         """The force exerted now [m/s^2]."""
-        return own.layout.force(own.place_strength(own.strength))
+        return own.exerted
 
     def correct(self, own: FeedbackState, problem: Problem, state: State, change: np.ndarray,
                 relax: Callable[..., Any]) -> Correction:
-        """Solve for the strengths together with the momentum change, see the module text."""
+        """Solve for the strengths together with the momentum change, see the module text.
+
+        ``change`` is corrected in place.
+        """
         active = own.gain > 0
         if not active.any():
             return Correction(own, change)
@@ -164,14 +174,15 @@ class Feedback:
         before = own.layout.sample(problem, state.velocity, state.boundary_velocity)
         misfit = np.where(active, own.misfit(before) - slack, 0.0)
         after = before + own.layout.sample_change(change)
-        step = _strength_step(own, np.where(active, own.misfit(after) - slack, 0.0))
-        change = change + own.response.apply(own.place_strength(step))
+        step = np.einsum("ij,j->i", own.solver, np.where(active, own.misfit(after) - slack, 0.0))
+        push = own.place_strength(step)
+        own.response.velocity.add(push, change)
         scale = max(float(np.abs(own.readings.component_value).max()),
                     float(np.linalg.norm(before, axis=1).max()), 1e-300)
         size = float(np.abs(misfit).max()) / scale
         own = replace(own, strength=own.strength + step, count=own.count + 1,
                       seen=(*own.seen, size)[-2 * REFRESH_EVERY:])
-        return Correction(own, change, size, own.pushes.pressure_change(own.place_strength(step)))
+        return Correction(own, change, size, own.pushes.pressure_change(push))
 
     def describe(self, own: FeedbackState) -> list[str]:
         """Lines for the sheet of a run."""
@@ -205,18 +216,23 @@ class Feedback:
 
 def _renewed(own: FeedbackState, problem: Problem, relax: Any, *,
              share: float) -> FeedbackState:
-    """With pushes, and with the response of the present sweeps where it is due."""
-    pushes, response = own.pushes, own.response
+    """With pushes, and with the response of the present sweeps where it is due and has changed."""
+    pushes, response, caution = own.pushes, own.response, own.caution
     if pushes is None:
         fed = np.zeros((len(own.readings), 3), dtype=bool)
         direction = own.readings.component_direction
         np.logical_or.at(fed, own.readings.component_place, direction != 0)  # speed: NaN, all
         pushes = make_pushes(problem, own.layout, fed.ravel(), share=share)
     due = own.count in REFRESH_EARLY or own.count % REFRESH_EVERY == 0
-    if due or response is None or response.sweeps != relax.count:
-        response = sweep_response(problem, own.layout, pushes, relax)
-    return replace(own, pushes=pushes, response=response, caution=_caution(own) if due
-                   else own.caution)
+    if due:
+        caution = _caution(own)
+    if response is None or response.sweeps != relax.count or (due and has_changed(
+            response, near_equation(pushes, relax), len(pushes.sampled))):
+        response = sweep_response(problem.mesh.n_cells, pushes, relax)
+    if response is own.response and caution == own.caution and own.solver is not None:
+        return own
+    own = replace(own, pushes=pushes, response=response, caution=caution)
+    return replace(own, solver=_solver(own))
 
 
 def _caution(own: FeedbackState) -> float:
@@ -227,15 +243,14 @@ def _caution(own: FeedbackState) -> float:
     return min(3.0 * own.caution, 1.0)
 
 
-def _strength_step(own: FeedbackState, error: np.ndarray) -> np.ndarray:
-    """(m,) change of the strengths that ends an error (m,) at the readings."""
-    acting = (own.gain > 0) & (np.abs(own.direction).max(axis=1) > 0)
+def _solver(own: FeedbackState) -> np.ndarray:
+    """(m, m) from errors at the readings to the changes of the strengths that end them."""
+    acting = np.flatnonzero((own.gain > 0) & (np.abs(own.direction).max(axis=1) > 0))
     matrix = own.response.between(own.spread(), caution=own.caution)[np.ix_(acting, acting)]
     matrix[np.diag_indices(len(matrix))] += 1.0 / own.gain[acting]
-    step = np.zeros_like(own.strength)
-    if acting.any():
-        step[acting] = np.linalg.lstsq(matrix, error[acting], rcond=1e-13)[0]
-    return step
+    solver = np.zeros((len(own.gain), len(own.gain)))
+    solver[np.ix_(acting, acting)] = np.linalg.pinv(matrix, rcond=1e-13)
+    return solver
 
 
 def _turned(own: FeedbackState, problem: Problem, state: State) -> FeedbackState:
@@ -250,7 +265,9 @@ def _turned(own: FeedbackState, problem: Problem, state: State) -> FeedbackState
     velocity = own.layout.sample(problem, state.velocity, state.boundary_velocity)
     fresh = linearised_direction(own.readings, velocity)
     kept = np.einsum("ij,ij->i", fresh, own.direction)
-    return replace(own, direction=fresh, strength=own.strength * kept)
+    if np.array_equal(fresh, own.direction):
+        return own
+    return replace(own, direction=fresh, strength=own.strength * kept, solver=None)
 
 
 def local_speed(readings: Readings, velocity: np.ndarray) -> np.ndarray:
@@ -277,9 +294,15 @@ class FeedbackState:
     advice: tuple[str, ...] = ()
     pushes: Any = None
     response: Any = None
+    solver: Any = None
     caution: float = CAUTION
     seen: tuple[float, ...] = ()
     count: int = 0
+
+    @cached_property
+    def exerted(self) -> Force:
+        """The force of the strengths [m/s^2]."""
+        return self.layout.force(self.place_strength(self.strength))
 
     def misfit(self, velocity: np.ndarray) -> np.ndarray:
         """(m,) computed minus measured for velocities (n_places, 3) at the readings."""

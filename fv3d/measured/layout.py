@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 import scipy.sparse as sparse
@@ -10,6 +11,7 @@ import scipy.sparse as sparse
 from ..errors import CaseError, ReadingError
 from ..flow.problem import Force, Problem, balanced_force_near
 from ..operators.interpolation import PointInterpolation, point_interpolation
+from .columns import Columns, blocks_of, columns
 from .kernel import Kernel, Neighbourhood
 from .readings import Readings
 
@@ -30,12 +32,24 @@ class Layout:
     cell: sparse.csr_matrix
     drop: sparse.csr_matrix
 
+    @cached_property
+    def near(self) -> tuple[Columns, Columns]:
+        """``cell`` and ``drop`` by the cells and faces they touch."""
+        parts = []
+        for matrix, size in ((self.cell.tocsc(), 3), (self.drop.tocsc(), 1)):
+            places = range(matrix.shape[1] // 3)
+            rows, blocks = zip(*(blocks_of(matrix, k, size) for k in places), strict=True)
+            parts.append(columns(rows, blocks))
+        return parts[0], parts[1]
+
     def force(self, strength: np.ndarray) -> Force:
         """Force of strengths (n_places, 3) [m/s^2]."""
-        flat = strength.ravel()
-        if not flat.any():
-            return Force(np.zeros((self.cell.shape[0] // 3, 3)), np.zeros(self.drop.shape[0]))
-        return Force((self.cell @ flat).reshape(-1, 3), self.drop @ flat)
+        cell, drop = np.zeros((self.cell.shape[0] // 3, 3)), np.zeros(self.drop.shape[0])
+        if strength.any():
+            at_cells, at_faces = self.near
+            at_cells.add(strength, cell)
+            at_faces.add(strength, drop)
+        return Force(cell, drop)
 
     def sample(self, problem: Problem, velocity: np.ndarray, edge: np.ndarray) -> np.ndarray:
         """(n_places, 3) velocity at the readings [m/s]."""
