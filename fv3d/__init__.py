@@ -53,9 +53,9 @@ from .mesh.read import read_mesh
 from .mesh.surfaces import boundary_map
 from .mesh.wall_distance import wall_distance
 from .mesh.write import write_mesh
+from .operators.compiling import get_threads, set_threads
 from .operators.fluxes import Blended, Central, LimitedUpwind, SecondOrderUpwind, Upwind
 from .operators.gradient import GreenGauss, LeastSquares
-from .operators.kernels import get_threads, set_threads
 from .operators.limiters import BarthJespersen, MichalakOllivierGooch
 from .operators.linear import ByAnisotropy, Classical, SmoothedAggregation
 from .results.coefficients import ForceCoefficients, Reference, force_coefficients

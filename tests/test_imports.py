@@ -18,7 +18,7 @@ FOR_ALL = {"errors", "signals"}
 LATE = {"pyvista", "vtkmodules", "vtk", "meshio", "pyamg", "pandas", "matplotlib", "gmsh"}
 HOMES = {
     "pyamg": {"operators/linear.py", "operators/arrays_solving.py"},
-    "numba": {"operators/kernels.py"},
+    "numba": {"operators/compiling.py"},
     "meshio": {"mesh/read.py", "mesh/write.py"},
 }
 FILES = sorted(path for path in PACKAGE.rglob("*.py"))

@@ -22,13 +22,13 @@ from loop_arguments import (
 
 import fv3d
 from fv3d.mesh.generate import box
-from fv3d.operators import kernels, kernels_solving
+from fv3d.operators import compiling, kernels, kernels_solving
 from fv3d.operators.assembly import Pattern
 
 
 def test_every_kernel_has_a_reference() -> None:
     compiled = {name for name, value in LOOPS.items()
-                if isinstance(value, kernels.ThreadedKernel) or hasattr(value, "py_func")}
+                if isinstance(value, compiling.ThreadedKernel) or hasattr(value, "py_func")}
     assert compiled == set(REFERENCES)
 
 
@@ -123,13 +123,13 @@ def test_indices_are_handed_on_unsigned_and_uncopied(monkeypatch: pytest.MonkeyP
 THREADS = """
 import numpy as np
 from loop_arguments import LOOPS, SINGLE_TOO, arguments, box, calls, copied
-from fv3d.operators import kernels
-kernels.SMALL = 0
+from fv3d.operators import compiling, kernels
+compiling.SMALL = 0
 mesh = box((0, 0, 0), (2.0, 1.0, 1.0), cells=(24, 9, 8), skew=0.3, seed=3)
 
 def run(loop, threads, given):
-    kernels.set_threads(threads)
-    assert kernels.get_threads() == threads
+    compiling.set_threads(threads)
+    assert compiling.get_threads() == threads
     used = copied(given)
     loop(*used)
     return [value for value in used if isinstance(value, np.ndarray)]

@@ -7,8 +7,8 @@ from typing import Any
 
 import numpy as np
 
-from .coupling import mass_residual
 from .inlets import beyond_shares
+from .residuals import mass_residual
 
 
 @np.errstate(all="ignore")  # the last finite state of a diverged run may overflow in a norm

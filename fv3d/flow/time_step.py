@@ -35,11 +35,8 @@ from .coupling import (
     Record,
     Sweeps,
     Workspace,
-    absolute_sum,
     lessened,
-    mass_residual,
     net_gradient,
-    reference_flux,
     total_force,
 )
 from .equations import (
@@ -54,6 +51,7 @@ from .equations import (
 from .memory import flux_defect, memory_share
 from .problem import Force, Problem, State
 from .projected import Push, make_projection
+from .residuals import absolute_sum, mass_residual, reference_flux
 from .step_size import FixedStep, StepSize, within
 from .turbulence import with_eddies
 

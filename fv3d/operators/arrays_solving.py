@@ -90,10 +90,6 @@ class Swept:
                 amg_core.gauss_seidel(*system, 3 * start + last, 3 * stop + last, step)
 
 
-def _diagonal_places(indptr: np.ndarray, indices: np.ndarray) -> np.ndarray:
-    return np.flatnonzero(indices == np.repeat(np.arange(len(indptr) - 1), np.diff(indptr)))
-
-
 @dataclass(eq=False)
 class Layout:
     """Pattern of :class:`Swept`: the data each entry comes from, its diagonal places.

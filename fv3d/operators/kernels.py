@@ -1,66 +1,12 @@
-"""The compiled loops; everything else in fv3d is array code.
+"""The compiled loops over faces and cells; everything else in fv3d is array code.
 
-Each loop runs over faces or over cells and writes only what it owns, so threads never race
-and the result does not depend on their number.  Every kernel has a plain reference in the tests.
+Each loop writes only what it owns, so threads never race and the result does not depend on their
+number.  Every kernel has a plain reference in the tests.
 """
 
 from __future__ import annotations
 
-import os
-import types
-import warnings
-from collections.abc import Callable
-from numbers import Integral
-from typing import Any
-
-# Threads that wait for work give their core away soon: beside another job on the same cores a loop
-# is else up to ten times slower than on one thread.  Read by the OpenMP library when it is loaded.
-os.environ.setdefault("GOMP_SPINCOUNT", "1000")
-
-import numba
-import numpy as np
-
-from ..errors import CaseError, Fv3dWarning
-
-prange = numba.prange
-SMALL = 20_000  # below this many rows a second thread costs more than it brings
-
-
-def _jit(function: Callable, **options: Any) -> Callable:
-    options.update(error_model="numpy", fastmath={"contract"})
-    try:
-        return numba.njit(cache=True, **options)(function)
-    except RuntimeError:
-        warnings.warn("No folder for compiled code can be written: loops are compiled again at "
-                      "every start (some seconds). Set NUMBA_CACHE_DIR to a writable folder.",
-                      Fv3dWarning, stacklevel=3)
-        return numba.njit(error_model="numpy", fastmath={"contract"}, **options)(function)
-
-
-def compiled(function: Callable) -> Callable:
-    """Compile a loop for one thread, cached on disk where a folder can be written."""
-    return _jit(function)
-
-
-class ThreadedKernel:
-    """A loop compiled twice, for one thread and for several; the size of the work decides."""
-
-    def __init__(self, function: Callable) -> None:
-        single = types.FunctionType(function.__code__, function.__globals__, function.__name__)
-        single.__qualname__ = function.__qualname__ + "_single"  # a cache entry of its own
-        single.__module__ = function.__module__
-        self.plain = function
-        self._single = _jit(single)
-        self._threaded = _jit(function, parallel=True)
-
-    def __call__(self, *arguments: Any) -> None:
-        """Run over the rows of the first argument."""
-        arguments = tuple(a.view(np.uint32) if isinstance(a, np.ndarray) and a.dtype == np.int32
-                          else a for a in arguments)
-        if len(arguments[0]) < SMALL or numba.get_num_threads() == 1:
-            self._single(*arguments)
-        else:
-            self._threaded(*arguments)
+from .compiling import ThreadedKernel, compiled, prange
 
 
 @ThreadedKernel
@@ -68,7 +14,7 @@ def weighted_gradient(offsets, other, weights, cell_values, boundary_values, out
     """out[c, i, :] = sum over faces of weights * (other value - own value)."""
     n_cells = offsets.shape[0] - 1
     width = cell_values.shape[1]
-    for cell in numba.prange(n_cells):
+    for cell in prange(n_cells):
         for i in range(width):
             own = cell_values[cell, i]
             gx = 0.0
@@ -92,7 +38,7 @@ def weighted_gradient(offsets, other, weights, cell_values, boundary_values, out
 def vector_gradient(offsets, other, weights, cell_values, boundary_values, out):
     """As :func:`weighted_gradient` for three columns, the weights read once."""
     n_cells = offsets.shape[0] - 1
-    for cell in numba.prange(n_cells):
+    for cell in prange(n_cells):
         u = cell_values[cell, 0]
         v = cell_values[cell, 1]
         w = cell_values[cell, 2]
@@ -131,7 +77,7 @@ def blend_with_neighbours(offsets, other, share, values, out):
     """out[c, :] = values of the cell, a share of them replaced by its neighbours' mean."""
     n_cells = offsets.shape[0] - 1
     width = values.shape[1]
-    for cell in numba.prange(n_cells):
+    for cell in prange(n_cells):
         count = 0
         for k in range(offsets[cell], offsets[cell + 1]):
             if other[k] < n_cells:
@@ -154,7 +100,7 @@ def linear_face_values(left, right, weight, skew, values, gradient, out):
     ``skew`` (0, 3): the centres lie between the cells, nothing is to be carried.
     """
     skewed = skew.shape[0] > 0
-    for face in numba.prange(right.shape[0]):
+    for face in prange(right.shape[0]):
         a = left[face]
         b = right[face]
         w = weight[face]
@@ -168,7 +114,7 @@ def linear_face_values(left, right, weight, skew, values, gradient, out):
 @ThreadedKernel
 def surface_sum(offsets, faces, sign, face_values, face_area, volume, out):
     """out[c, :] = sum over faces of sign * value * area vector / volume."""
-    for cell in numba.prange(offsets.shape[0] - 1):
+    for cell in prange(offsets.shape[0] - 1):
         x = 0.0
         y = 0.0
         z = 0.0
@@ -197,7 +143,7 @@ def transport_faces(left, right, weight, skew, area, delta, orthogonal, straight
     skewed = skew.shape[0] > 0
     central = central_share != 0.0
     carried = skewed and central
-    for face in numba.prange(right.shape[0]):
+    for face in prange(right.shape[0]):
         a = left[face]
         b = right[face]
         w = weight[face]
@@ -247,7 +193,7 @@ def fill_rows(offsets, faces, sign, entry, place, n_internal, coefficient, expli
     diagonal = minus the sum of a row's coefficients; rhs = minus the net explicit outflow.
     """
     width = rhs.shape[1]
-    for cell in numba.prange(offsets.shape[0] - 1):
+    for cell in prange(offsets.shape[0] - 1):
         total = 0.0
         first = 0.0
         second = 0.0
@@ -274,7 +220,7 @@ def fill_rows(offsets, faces, sign, entry, place, n_internal, coefficient, expli
 @ThreadedKernel
 def fill_symmetric(offsets, faces, entry, place, n_internal, inner, outer, data):
     """Rows of a symmetric diffusion matrix from face and boundary coefficients."""
-    for cell in numba.prange(offsets.shape[0] - 1):
+    for cell in prange(offsets.shape[0] - 1):
         total = 0.0
         for k in range(offsets[cell], offsets[cell + 1]):
             f = faces[k]
@@ -289,7 +235,7 @@ def fill_symmetric(offsets, faces, entry, place, n_internal, inner, outer, data)
 @ThreadedKernel
 def face_coefficients(left, right, weight, cell_values, factor, scale, out):
     """out = scale * factor * linear interpolation of cell values to internal faces."""
-    for face in numba.prange(right.shape[0]):
+    for face in prange(right.shape[0]):
         w = weight[face]
         out[face] = scale * factor[face] * (w * cell_values[left[face]]
                                             + (1.0 - w) * cell_values[right[face]])
@@ -307,7 +253,7 @@ def momentum_face_flux(left, right, weight, skew, area, delta, orthogonal, strai
     skewed = skew.shape[0] > 0
     forced = force_drop.shape[0] > 0
     older = memory.shape[0] > 0
-    for face in numba.prange(right.shape[0]):
+    for face in prange(right.shape[0]):
         a = left[face]
         b = right[face]
         w = weight[face]
@@ -341,7 +287,7 @@ def pressure_fluxes(left, right, weight, area, delta, orthogonal, straight, dens
     has been made already, (0,) for none.
     """
     moved = relaxed.shape[0] > 0
-    for face in numba.prange(right.shape[0]):
+    for face in prange(right.shape[0]):
         a = left[face]
         b = right[face]
         w = weight[face]
@@ -363,7 +309,7 @@ def pressure_fluxes(left, right, weight, area, delta, orthogonal, straight, dens
 def flux_defects(left, right, weight, skew, area, velocity, gradient, density, mass_flux, out):
     """out = volume flux of internal faces less that of the interpolated velocity."""
     skewed = skew.shape[0] > 0
-    for face in numba.prange(right.shape[0]):
+    for face in prange(right.shape[0]):
         a = left[face]
         b = right[face]
         w = weight[face]
@@ -380,7 +326,7 @@ def flux_defects(left, right, weight, skew, area, velocity, gradient, density, m
 @ThreadedKernel
 def memory_factors(left, right, weight, with_time, without, out):
     """out = 1 / with_time - 1 / without, both interpolated to internal faces first."""
-    for face in numba.prange(right.shape[0]):
+    for face in prange(right.shape[0]):
         a = left[face]
         b = right[face]
         w = weight[face]
@@ -391,7 +337,7 @@ def memory_factors(left, right, weight, with_time, without, out):
 @ThreadedKernel
 def net_outflow(offsets, faces, sign, face_flux, out):
     """out[c] = sum over faces of sign * flux."""
-    for cell in numba.prange(offsets.shape[0] - 1):
+    for cell in prange(offsets.shape[0] - 1):
         total = 0.0
         for k in range(offsets[cell], offsets[cell + 1]):
             total += sign[k] * face_flux[faces[k]]
@@ -401,7 +347,7 @@ def net_outflow(offsets, faces, sign, face_flux, out):
 @ThreadedKernel
 def coefficient_sums(offsets, faces, n_internal, inner, outer, out):
     """out[c] = sum of a cell's face coefficients, the diagonal of a diffusion matrix."""
-    for cell in numba.prange(offsets.shape[0] - 1):
+    for cell in prange(offsets.shape[0] - 1):
         total = 0.0
         for k in range(offsets[cell], offsets[cell + 1]):
             f = faces[k]
@@ -412,14 +358,14 @@ def coefficient_sums(offsets, faces, n_internal, inner, outer, out):
 @ThreadedKernel
 def correct_flux(left, right, inner, correction, flux):
     """flux -= inner * difference of the correction across each internal face."""
-    for face in numba.prange(right.shape[0]):
+    for face in prange(right.shape[0]):
         flux[face] -= inner[face] * (correction[right[face]] - correction[left[face]])
 
 
 @ThreadedKernel
 def subtract_scaled(field, factor, change, out):
     """out = field - factor * change for three columns, one factor for each row."""
-    for row in numba.prange(field.shape[0]):
+    for row in prange(field.shape[0]):
         f = factor[row]
         out[row, 0] = field[row, 0] - f * change[row, 0]
         out[row, 1] = field[row, 1] - f * change[row, 1]
@@ -429,7 +375,7 @@ def subtract_scaled(field, factor, change, out):
 @ThreadedKernel
 def extend_vectors(cells, values, gradient, arm, out):
     """out[f, :] = values[c, :] + gradient[c, :, :] . arm[f], c the f-th of the cells."""
-    for f in numba.prange(cells.shape[0]):
+    for f in prange(cells.shape[0]):
         c = cells[f]
         for i in range(3):
             out[f, i] = (values[c, i] + gradient[c, i, 0] * arm[f, 0]
@@ -439,7 +385,7 @@ def extend_vectors(cells, values, gradient, arm, out):
 @ThreadedKernel
 def extend_scalars(cells, values, gradient, arm, out):
     """out[f] = values[c] + gradient[c, :] . arm[f], c the f-th of the cells."""
-    for f in numba.prange(cells.shape[0]):
+    for f in prange(cells.shape[0]):
         c = cells[f]
         out[f] = (values[c] + gradient[c, 0] * arm[f, 0] + gradient[c, 1] * arm[f, 1]
                   + gradient[c, 2] * arm[f, 2])
@@ -451,38 +397,3 @@ def add_to_rows(rows, values, out):
     for k in range(rows.shape[0]):
         for i in range(values.shape[1]):
             out[rows[k], i] += values[k, i]
-
-
-def set_threads(count: int) -> None:
-    """Set the number of threads of the compiled loops, for this process.
-
-    Parameters
-    ----------
-    count : int
-        From 1 to the number of cores, or to the environment variable ``NUMBA_NUM_THREADS``
-        where it is set.
-
-    Raises
-    ------
-    CaseError
-        Not a whole number in this range.
-    """
-    most = int(numba.config.NUMBA_NUM_THREADS)  # type: ignore[attr-defined]
-    whole = isinstance(count, Integral) and not isinstance(count, bool)
-    if not whole or not 1 <= count <= most:
-        raise CaseError(f"The number of threads is a whole number from 1 to {most} here.",
-                        where="set_threads(count)", got=repr(count),
-                        remedy="Give a number in this range; for more, set the environment "
-                               "variable NUMBA_NUM_THREADS before Python starts.")
-    numba.set_num_threads(int(count))
-
-
-def get_threads() -> int:
-    """Number of threads of the compiled loops.
-
-    Returns
-    -------
-    int
-        All cores, unless :func:`set_threads` or ``NUMBA_NUM_THREADS`` says otherwise.
-    """
-    return int(numba.get_num_threads())

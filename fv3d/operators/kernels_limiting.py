@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from .kernels import ThreadedKernel, prange
+from .compiling import ThreadedKernel, prange
 
 
 @ThreadedKernel

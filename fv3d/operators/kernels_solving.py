@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from .kernels import ThreadedKernel, compiled, prange
+from .compiling import ThreadedKernel, compiled, prange
 
 CHUNKS = 64  # partial sums, whatever the number of threads: totals then do not depend on it
 
