@@ -13,6 +13,7 @@ from ..operators.deflation import deflated
 from .equations import (
     Momentum,
     PressureFields,
+    boundary_pressure,
     boundary_velocity,
     corrected_flux,
     correction_coefficients,
@@ -260,6 +261,7 @@ def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, imbalanc
     result = solve_pressure(problem, workspace, matrix, -imbalance, numerics.pressure_tolerance)
     correction, shift = result.solution, np.zeros(mesh.n_boundary)
     share = workspace.response.share(coupling)
+    given = boundary_pressure(problem, state.pressure, None, state.mass_flux[n:])
     if problem.outlets:
         correction, shift = meet_flows(
             problem, flux, correction, outer=outer, solve=lambda rhs: solve_pressure(
@@ -275,7 +277,8 @@ def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, imbalanc
     if workspace.response.fine_steps:
         relaxed = (d if ease is None else ease.cell.mean(axis=1)) / share
         pressure += _fine_supplement(problem, imbalance, equation, answer[0], workspace, (
-            share * slope, share * correction, share * shift, relaxed))
+            share * slope, share * correction,
+            boundary_pressure(problem, state.pressure, None, flux[n:]) - given, relaxed))
     if problem.closed:
         pressure -= np.einsum("i,i->", pressure, mesh.cell_volume) / mesh.cell_volume.sum()
     edge = boundary_velocity(problem, velocity, gradient, flux[n:])
