@@ -18,7 +18,7 @@ from fv3d.flow.projected import force_flux, force_potential, make_projection, pr
 from fv3d.measured.columns import columns
 from fv3d.measured.kernel import Gaussian
 from fv3d.measured.layout import Layout, make_layout
-from fv3d.measured.potential import force_flux_near, free_gradient
+from fv3d.measured.potential import force_flux_near, free_gradient, push_of
 from fv3d.measured.response import (
     KEPT_FROM,
     LEVELS,
@@ -96,6 +96,9 @@ def test_dense_columns_add_their_product(rows: int) -> None:
     out, threaded = before.copy(), before.copy()
     kernels_places.add_dense(out, matrix, factor)
     np.testing.assert_allclose(out, before + matrix.T.astype(float) @ factor, atol=1e-5)
+    exact = before.copy()
+    kernels_places.add_dense(exact, matrix, factor.astype(float))
+    np.testing.assert_allclose(exact, before + matrix.T.astype(float) @ factor, atol=1e-12)
     kernels_places.add_dense._threaded(threaded, matrix, factor)
     np.testing.assert_array_equal(threaded, out)
 
@@ -118,6 +121,10 @@ def test_flux_and_gradient_of_one_force(kind: str) -> None:
                                atol=1e-14)
     potential = force_potential(problem, make_projection(problem), force)
     push = projected(problem, force, potential)
+    rest = 0.1 * potential[::-1]
+    one, other = (f(problem, force, potential, rest) for f in (projected, push_of))
+    for name in ("velocity", "mass_flux", "pressure"):
+        np.testing.assert_allclose(getattr(other, name), getattr(one, name), atol=1e-12)
     np.testing.assert_allclose(force.cell - free_gradient(problem, potential), push.velocity,
                                atol=1e-12)
 

@@ -25,10 +25,13 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..errors import Fv3dWarning
+from ..flow.equations import net_outflow
 from ..flow.problem import Force, Problem, State
-from ..flow.projected import Projection, Push, full_potential, make_projection, projected
+from ..flow.projected import Projection, Push, full_potential, make_projection
 from ..flow.time_step import Moment
+from ..operators.kernels_places import add_dense
 from .layout import Layout, make_layout
+from .potential import push_of, unpressed_flux
 from .readings import Readings, linearised_direction, predict
 from .records import Records, records
 
@@ -147,7 +150,8 @@ class StateInTime:
     """Strengths ``a`` (m,) [m/s^2] with the projected kernels.
 
     ``used`` (k,) columns of place and axis that readings need, ``potential`` and ``rest``
-    (n_cells, k) theirs [m^2/s^2], see :func:`fv3d.flow.projected.full_potential`; ``answer``
+    (k, n_cells) theirs in single precision [m^2/s^2], see
+    :func:`fv3d.flow.projected.full_potential`; ``answer``
     (n_places, 3, n_places, 3) velocity at each place along each axis to the projected kernel of
     each place and axis; ``vector`` (n_places, 3) the force's strengths.
     """
@@ -193,9 +197,10 @@ class StateInTime:
     def push(self, problem: Problem, change: np.ndarray) -> Push:
         """What a change (n_places, 3) of the strengths does to the fluid."""
         size = change.ravel()[self.used]
-        potential, rest = (np.einsum("ck,k->c", columns, size)
-                           for columns in (self.potential, self.rest))
-        return projected(problem, self.layout.force(change), potential, rest)
+        potential, rest = np.zeros((2, problem.mesh.n_cells))
+        add_dense(potential, self.potential, size)
+        add_dense(rest, self.rest, size)
+        return push_of(problem, self.layout.force(change), potential, rest)
 
 
 def _directions_used(readings: Readings) -> np.ndarray:
@@ -208,15 +213,21 @@ def _directions_used(readings: Readings) -> np.ndarray:
 
 def _columns(problem: Problem, projection: Projection, layout: Layout,
              used: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Potentials of the kernels and the answers at the places."""
+    """Potentials of the kernels and the answers at the places.
+
+    What rounding the potentials leaves is put into the rest, so that mass is conserved.
+    """
     n_places = layout.cell.shape[1] // 3
-    potential, rest = np.empty((2, problem.mesh.n_cells, len(used)))
+    potential, rest = np.empty((2, len(used), problem.mesh.n_cells), dtype=np.float32)
     answer = np.zeros((3 * n_places, 3 * n_places))
     for k, column in enumerate(used):
         unit = np.zeros(3 * n_places)
         unit[column] = 1.0
         force = layout.force(unit.reshape(-1, 3))
-        potential[:, k], rest[:, k] = full_potential(problem, projection, force)
-        push = projected(problem, force, potential[:, k], rest[:, k])
+        potential[k], _ = full_potential(problem, projection, force)
+        rounded = potential[k].astype(float)
+        inflow = -net_outflow(problem, unpressed_flux(problem, force, rounded))
+        rest[k] = projection.potential(inflow, 1e-11).solution
+        push = push_of(problem, force, rounded, rest[k].astype(float))
         answer[:, column] = layout.sample_change(push.velocity).ravel()
     return potential, rest, answer.reshape(n_places, 3, n_places, 3)

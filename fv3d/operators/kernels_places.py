@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from .kernels import ThreadedKernel, compiled, prange
+from .compiling import ThreadedKernel, compiled, prange
 
 CHUNK = 2048  # rows whose sums stay in the nearest memory
 
@@ -44,18 +44,21 @@ def add_scalars(rows, offsets, place, block, strength, out):
 
 @ThreadedKernel
 def add_dense(out, columns, factor):
-    """out[row] += sum over the columns j of factor[j] * columns[j, row], by chunks of rows."""
+    """out[row] += sum over the columns j of factor[j] * columns[j, row], by chunks of rows.
+
+    Summed in the precision of ``factor``.
+    """
     n = out.shape[0]
     for chunk in prange((n + CHUNK - 1) // CHUNK):
         first = np.int64(chunk) * CHUNK
         beyond = min(first + CHUNK, n)
-        total = np.zeros(CHUNK, dtype=np.float32)
+        total = np.zeros(CHUNK, dtype=factor.dtype)
         for j in range(columns.shape[0]):
             scale = factor[j]
             if scale != 0.0:
                 column = columns[j, first:beyond]
                 for k in range(beyond - first):
-                    total[k] += scale * np.float32(column[k])
+                    total[k] += scale * factor.dtype.type(column[k])
         for k in range(beyond - first):
             out[first + k] += total[k]
 
