@@ -14,7 +14,7 @@ import argparse
 import time
 import warnings
 from collections.abc import Iterator
-from contextlib import contextmanager, nullcontext
+from contextlib import AbstractContextManager, contextmanager, nullcontext
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -62,7 +62,7 @@ def timed(problem: Problem, state: State, workspace: coupling.Workspace, count: 
 
 
 def compared(case: fv3d.Case, count: int) -> tuple[Path, Path, Path]:
-    """By compiled loops, by arrays, by compiled loops with one thread."""
+    """By compiled loops (the better of two runs), by arrays, by compiled loops on one thread."""
     problem = make_problem(case)
     workspace = coupling.make_workspace(problem)
     state, threads = start_state(problem, None, workspace), fv3d.get_threads()
@@ -77,7 +77,8 @@ def compared(case: fv3d.Case, count: int) -> tuple[Path, Path, Path]:
     return min(first, last, key=lambda path: path.seconds), arrays, single
 
 
-def _within(way, problem, state, workspace, count) -> Path:
+def _within(way: AbstractContextManager, problem: Problem, state: State,
+            workspace: coupling.Workspace, count: int) -> Path:
     with way:
         return timed(problem, state, workspace, count)
 
