@@ -244,7 +244,9 @@ def net_gradient(problem: Problem, fields: PressureFields, force: Force | None) 
     """(n_cells, 3) pressure gradient less the body force [N/m^3]."""
     if force is None:
         return fields.gradient
-    return fields.gradient - problem.case.fluid.density * force.cell
+    net = np.multiply(force.cell, -problem.case.fluid.density)
+    net += fields.gradient
+    return net
 
 
 def _correct_pressure(problem: Problem, state: State, flux: np.ndarray, imbalance: np.ndarray,
