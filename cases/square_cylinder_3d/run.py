@@ -2,9 +2,10 @@
 
 The mesh is coarse: what is judged is the shedding frequency.  The start is the plane flow of the
 same cylinder at Reynolds number 100 with a disturbance that varies along the span.  Convection is
-half central: with nine tenths, speeds rose to many times the stream's and the forces with them, at
-Courant numbers of one and three alike.  Takes about ten minutes on one core; ``record.csv`` and
-``record.png`` keep the forces, ``speed.png`` shows the wake.
+half central: with nine tenths, speeds once rose to many times the stream's, most likely because
+steps then let short central waves grow, as they still may at Courant numbers above one and a half.
+Takes about seven minutes on one core; ``record.csv`` and ``record.png`` keep the forces,
+``speed.png`` shows the wake.
 """
 
 from __future__ import annotations
