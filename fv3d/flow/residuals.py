@@ -56,7 +56,7 @@ def reference_flux(problem: Problem, flux: np.ndarray, velocity: np.ndarray,
 
 
 def momentum_scale(problem: Problem, equation: Momentum, velocity: np.ndarray, net: np.ndarray,
-                    fields: PressureFields) -> float:
+                   fields: PressureFields) -> float:
     """Sum of |a u|; a fluid at rest is measured against a millionth of its pressure forces."""
     sizes = [absolute_sum(counted(problem, equation, part), problem.mesh.cell_volume)
              for part in ([net] if net is fields.gradient else [net, fields.gradient])]

@@ -177,7 +177,8 @@ class Preconditioner(Protocol):
 class LinearResult:
     """Solution of a linear system and how well it was reached.
 
-    ``residual`` is the true residual norm relative to the right-hand side.
+    ``residual`` is the true residual norm relative to the right-hand side; of a loose solution
+    (tolerance from ``LOOSE`` on) the running one of the iteration, which is the same to rounding.
     """
 
     solution: np.ndarray
